@@ -1,0 +1,1 @@
+"""Design-based estimates of carbon stocks and of their change."""

@@ -1,0 +1,279 @@
+"""Carbon stocks of the inventory, its strata and its parcels at each survey."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+import pandas as pd
+
+from landcarbon.estimate.interval import check_confidence, t_half_width
+from landcarbon.estimate.notes import (
+    few_plots_in_parcels,
+    few_plots_in_strata,
+    left_out,
+    name_list,
+    parcel_sum,
+    unknown_areas,
+    zero_variance,
+)
+from landcarbon.estimate.ratio import MIN_PLOTS, RatioEstimate, Sample, counts, ratio_of_means
+from landcarbon.estimate.tables import LEVELS, Plots, Units, read_plots
+from landcarbon.findings import empty_findings, join_findings, make_findings
+
+__all__ = ["STOCK_COLUMNS", "estimate_stocks"]
+
+STOCK_COLUMNS = [
+    "by",
+    "unit",
+    "survey",
+    "pool",
+    "area_ha",
+    "plots",
+    "density_t_c_ha",
+    "density_se",
+    "density_low",
+    "density_high",
+    "stock_t_c",
+    "stock_se",
+    "stock_low",
+    "stock_high",
+    "df",
+    "method",
+]
+
+_METHOD = {
+    "inventory": "stratified ratio of means",
+    "stratum": "ratio of means",
+    "parcel": "domain ratio of means",
+}
+
+
+@dataclass(frozen=True)
+class _Level:
+    """Estimates of one level at one survey; ``area_ha`` has shape (units, pools)."""
+
+    by: str
+    labels: list[str]
+    area_ha: np.ndarray
+    estimate: RatioEstimate
+
+
+def estimate_stocks(
+    plot_pools: pd.DataFrame,
+    strata: pd.DataFrame,
+    parcels: pd.DataFrame | None,
+    surveys: Sequence[str] | pd.DataFrame,
+    *,
+    pools: Sequence[str],
+    confidence: float,
+    inventory_name: str,
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Estimate stocks at every survey.
+
+    Parameters
+    ----------
+    plot_pools : DataFrame
+        One row per visited plot and survey: survey, plot, parcel, stratum, date, size (relative sampled area), inside
+        and one column per pool and for ``all`` [t C/ha].
+    strata : DataFrame
+        stratum, area_ha [ha] (NaN if unknown).
+    parcels : DataFrame or None
+        parcel, area_ha [ha].
+    surveys : sequence of str, or DataFrame with the column survey
+        In the order of time.
+    pools : sequence of str
+        Pools counted; ``all`` is added.
+    confidence : float
+        Of the intervals, for example 0.95.
+    inventory_name : str
+        Unit of the inventory rows.
+
+    Returns
+    -------
+    stocks : DataFrame
+        Columns ``STOCK_COLUMNS``, by inventory, stratum and parcel; densities in t C/ha, stocks in t C. A unit with
+        fewer than two plots has NaN and says so in ``method``. There is no inventory row where the area of one of
+        several strata is unknown.
+    findings : DataFrame
+        What was left out, not estimable, or looks too good.
+
+    Raises
+    ------
+    UserError
+        If a column is missing, a plot occurs twice in a survey, or ``confidence`` is out of range.
+
+    Notes
+    -----
+    Formulas and sources: ``docs/estimation.md``.
+    """
+    check_confidence(confidence)
+    plots = read_plots(plot_pools, strata, parcels, pools)
+    names = _survey_names(surveys)
+    found = [_unlisted_surveys(plots, names), _unlisted_parcels(plots), unknown_areas(plots.units)]
+    blocks: dict[str, list[pd.DataFrame]] = {by: [] for by in LEVELS}
+    for survey in names:
+        sample = plots.sample(survey)
+        levels = _levels(sample, plots.units, inventory_name)
+        for level in levels:
+            blocks[level.by].append(_rows(level, survey, plots.pools, confidence))
+        found += _findings(levels, plots, sample, survey)
+    return unit_order(blocks, len(plots.pools), STOCK_COLUMNS), join_findings(found)
+
+
+def unit_order(blocks: dict[str, list[pd.DataFrame]], pools: int, columns: list[str]) -> pd.DataFrame:
+    """Put blocks of one survey each (units x pools) in the order level, unit, survey, pool."""
+    parts = []
+    for by in LEVELS:
+        if not blocks[by] or not len(blocks[by][0]):
+            continue
+        whole = pd.concat(blocks[by], ignore_index=True)
+        place = np.arange(len(whole)).reshape(len(blocks[by]), -1, pools)
+        parts.append(whole.iloc[place.transpose(1, 0, 2).ravel()])
+    if not parts:
+        return pd.DataFrame(columns=columns)
+    return pd.concat(parts, ignore_index=True)[columns]
+
+
+def _survey_names(surveys: Sequence[str] | pd.DataFrame) -> list[str]:
+    given = surveys["survey"] if isinstance(surveys, pd.DataFrame) else surveys
+    return [str(name) for name in given]
+
+
+def _levels(sample: Sample, units: Units, inventory_name: str) -> list[_Level]:
+    """Estimate the inventory (if areas allow), the strata and the parcels."""
+    strata = len(units.strata)
+    allowed = counts(sample, strata) >= MIN_PLOTS
+    pools = allowed.shape[1]
+
+    def estimate(domain: np.ndarray, domains: int) -> RatioEstimate:
+        return ratio_of_means(sample, domain, domains, units.stratum_area_ha, allowed)
+
+    levels = []
+    if units.has_total:
+        area = np.where(allowed, units.stratum_area_ha[:, None], 0.0).sum(axis=0, keepdims=True)
+        levels.append(_Level("inventory", [inventory_name], area, estimate(np.zeros_like(sample.stratum), 1)))
+    area = np.repeat(units.stratum_area_ha[:, None], pools, axis=1)
+    by_stratum = estimate(sample.stratum, strata)
+    by_stratum = replace(by_stratum, plots=counts(sample, strata).astype(np.int64))
+    levels.append(_Level("stratum", units.strata, area, by_stratum))
+    area = np.repeat(units.parcel_area_ha[:, None], pools, axis=1)
+    levels.append(_Level("parcel", units.parcels, area, estimate(sample.parcel, len(units.parcels))))
+    return levels
+
+
+def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd.DataFrame:
+    """Lay the estimates of one level out as rows, units before pools."""
+    estimate, units = level.estimate, len(level.labels)
+    density, se = estimate.density, np.sqrt(estimate.variance)
+    half = t_half_width(se, estimate.df, confidence)
+    area = level.area_ha
+    columns = {
+        "area_ha": area,
+        "plots": estimate.plots,
+        "density_t_c_ha": density,
+        "density_se": se,
+        "density_low": density - half,
+        "density_high": density + half,
+        "stock_t_c": density * area,
+        "stock_se": se * area,
+        "stock_low": (density - half) * area,
+        "stock_high": (density + half) * area,
+        "df": estimate.df,
+    }
+    count = estimate.plots.ravel()
+    refused = np.array([f"not estimable: {number} plot(s)" for number in range(MIN_PLOTS)], dtype=object)
+    reason = np.where(
+        count < MIN_PLOTS, refused[np.minimum(count, MIN_PLOTS - 1)], "not estimable: area of its strata unknown"
+    )
+    method = np.where(np.isfinite(density).ravel(), _METHOD[level.by], reason)
+    return pd.DataFrame(
+        {
+            "by": level.by,
+            "unit": np.repeat(np.array(level.labels, dtype=object), len(pools)),
+            "survey": survey,
+            "pool": np.tile(np.array(pools, dtype=object), units),
+            **{name: values.ravel() for name, values in columns.items()},
+            "method": method,
+        }
+    ).astype({name: "str" for name in ("by", "unit", "survey", "pool", "method")})
+
+
+def _findings(levels: list[_Level], plots: Plots, sample: Sample, survey: str) -> list[pd.DataFrame]:
+    units, pools = plots.units, plots.pools
+    found = [
+        left_out(plots, survey),
+        few_plots_in_strata(units, pools, [counts(sample, len(units.strata))], [survey]),
+    ]
+    for level in levels:
+        found.append(zero_variance(level.by, level.labels, pools, level.estimate.variance, survey))
+    parcels = levels[-1].estimate
+    found.append(few_plots_in_parcels(units, pools, np.isfinite(parcels.density), survey))
+    found.append(_parcels_without_stratum(plots, sample, survey))
+    if levels[0].by == "inventory":
+        total = float(levels[0].estimate.density[0, -1] * levels[0].area_ha[0, -1])
+        found.append(parcel_sum(units, parcels.density[:, -1] * units.parcel_area_ha, total, survey))
+    return found
+
+
+def _parcels_without_stratum(plots: Plots, sample: Sample, survey: str) -> pd.DataFrame:
+    """Report parcels whose figure rests on part of their plots, as some lie in a stratum that is not estimable."""
+    units = plots.units
+    enough = counts(sample, len(units.strata))[:, -1] >= MIN_PLOTS
+    in_parcel = (sample.parcel >= 0) & sample.used[:, -1]
+    lost = np.bincount(sample.parcel[in_parcel & ~enough[sample.stratum]], minlength=len(units.parcels))
+    kept = np.bincount(sample.parcel[in_parcel & enough[sample.stratum]], minlength=len(units.parcels))
+    hit = (lost > 0) & (kept >= MIN_PLOTS)
+    names = [units.parcels[unit] for unit in np.flatnonzero(hit)]
+    if not names:
+        return empty_findings()
+    return make_findings(
+        "parcel without part of its plots",
+        severity="warning",
+        table="estimate",
+        column="parcel",
+        value=name_list(names),
+        survey=survey,
+        message=(
+            f"{int(lost[hit].sum())} plots of {len(names)} parcels lie in strata that are not estimable and are left "
+            f"out; the figures of {name_list(names)} rest on their other plots."
+        ),
+        remedy="Merge the stratum, or read these parcels with care.",
+    )
+
+
+def _unlisted_surveys(plots: Plots, names: list[str]) -> pd.DataFrame:
+    other = ~np.isin(plots.survey, np.array(names, dtype=object))
+    if not other.any():
+        return empty_findings()
+    labels = sorted({str(name) for name in plots.survey[other]})
+    return make_findings(
+        "survey not listed",
+        severity="error",
+        table="estimate",
+        column="survey",
+        value=name_list(labels),
+        used=False,
+        message=f"{int(other.sum())} plot rows belong to surveys that are not listed ({name_list(labels)}); not used.",
+        remedy="List the survey, or correct its name.",
+    )
+
+
+def _unlisted_parcels(plots: Plots) -> pd.DataFrame:
+    if not plots.units.parcels:
+        return empty_findings()
+    labels = plots.frame["parcel"].astype("str")
+    other = plots.taken() & (plots.parcel < 0) & labels.notna().to_numpy() & (labels != "").to_numpy()
+    if not other.any():
+        return empty_findings()
+    names = sorted(set(labels[other]))
+    return make_findings(
+        "parcel not listed",
+        severity="warning",
+        table="estimate",
+        column="parcel",
+        value=name_list(names),
+        message=f"Plots name parcels that are not listed: {name_list(names)}. They count in their stratum only.",
+        remedy="Add the parcel to the parcels file, or correct its name.",
+    )

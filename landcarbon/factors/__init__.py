@@ -1,0 +1,1 @@
+"""Default factor tables as data, and the look-ups into them."""

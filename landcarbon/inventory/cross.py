@@ -1,0 +1,136 @@
+"""Checks of the project file that look at more than one key."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from landcarbon.inventory.faults import Fault
+from landcarbon.inventory.ids import id_faults
+from landcarbon.inventory.models import POOL_NAMES, Settings
+from landcarbon.inventory.nearest import suggestion
+from landcarbon.read.columns import table_columns, table_names
+from landcarbon.read.units import accepted_units, dimension_of
+
+__all__ = ["column_faults", "settings_faults"]
+
+# What this version can do for each pool; anything else would be promised and not kept.
+_HOW = {
+    "above_ground": ("measured",),
+    "below_ground": ("ratio", "not counted"),
+    "dead_wood": ("measured", "not counted"),
+    "litter": ("not counted",),
+    "soil": ("not counted",),
+    "harvested_wood": ("not counted",),
+}
+
+
+def column_faults(raw: dict[str, Any]) -> list[Fault]:
+    """Check the table, column and unit names under ``[columns]`` and ``[units]``.
+
+    Parameters
+    ----------
+    raw : dict
+        Settings as read from the file, whether or not the rest of them is sound.
+    """
+    faults: list[Fault] = []
+    for section in ("columns", "units"):
+        tables = raw.get(section)
+        for table, entries in tables.items() if isinstance(tables, dict) else ():
+            faults += _table_faults(section, table, entries)
+    return faults
+
+
+def _table_faults(section: str, table: str, entries: Any) -> list[Fault]:
+    if table not in table_names():
+        remedy = suggestion(table, table_names()) or f"Known tables: {', '.join(table_names())}."
+        return [Fault((section, table), "unknown table", remedy)]
+    if not isinstance(entries, dict):
+        return []
+    known = table_columns(table)
+    faults = []
+    for column, value in entries.items():
+        path = (section, table, column)
+        if column not in known:
+            hint = suggestion(column, known)
+            faults.append(Fault(path, "unknown column", f"{hint} Columns of {table}: {', '.join(known)}.".strip()))
+        elif section == "units" and isinstance(value, str):
+            faults += _unit_faults(path, value, known[column].unit)
+    return faults
+
+
+def _unit_faults(path: tuple[str, ...], unit: str, canonical: str) -> list[Fault]:
+    if not canonical:
+        return [Fault(path, "this column has no unit", "Leave the key out.")]
+    accepted = accepted_units(canonical)
+    if unit in accepted:
+        return []
+    kind = dimension_of(canonical)
+    return [Fault(path, f"{unit!r} is not a unit of {kind}", f"Accepted: {', '.join(accepted)}.")]
+
+
+def settings_faults(settings: Settings) -> list[Fault]:
+    """Check what has to agree between the sections of sound settings."""
+    return [
+        *_survey_faults(settings),
+        *_strata_faults(settings),
+        *_pool_faults(settings),
+        *_design_faults(settings),
+        *id_faults(settings),
+    ]
+
+
+def _survey_faults(settings: Settings) -> list[Fault]:
+    faults = []
+    shared = settings.trees.file is not None
+    for name, survey in settings.surveys.items():
+        if survey.trees is None and not shared:
+            what = "no tree table: neither this survey names one nor does [trees] give one for all surveys"
+            faults.append(Fault(("surveys", name), what, "Give trees = 'FILE' here, or file = 'FILE' under [trees]."))
+        if survey.trees is not None and shared:
+            what = "tree tables are given both here and under [trees]"
+            faults.append(Fault(("surveys", name, "trees"), what, "Keep one of the two."))
+        if not name.strip():
+            faults.append(Fault(("surveys", name), "a survey needs a name"))
+    return faults
+
+
+def _strata_faults(settings: Settings) -> list[Fault]:
+    strata = settings.strata
+    faults = []
+    accepted = accepted_units("ha")
+    if strata.unit not in accepted:
+        faults.append(
+            Fault(("strata", "unit"), f"{strata.unit!r} is not a unit of area", f"Accepted: {', '.join(accepted)}.")
+        )
+    if strata.file and strata.areas:
+        faults.append(Fault(("strata", "file"), "the areas are given both here and in a file", "Keep one of the two."))
+    for small, large in strata.merge.items():
+        if large in strata.merge:
+            what = f"{large!r} is itself folded into another stratum" if large != small else "folded into itself"
+            faults.append(Fault(("strata", "merge", small), what, "Name the stratum that remains."))
+        elif strata.areas and large not in strata.areas:
+            remedy = suggestion(large, strata.areas) or f"Strata with an area: {', '.join(strata.areas)}."
+            faults.append(Fault(("strata", "merge", small), f"no stratum {large!r} under areas", remedy))
+    return faults
+
+
+def _pool_faults(settings: Settings) -> list[Fault]:
+    faults = []
+    for name in POOL_NAMES:
+        how = getattr(settings.pools, name).how
+        if how not in _HOW[name]:
+            accepted = ", ".join(f"'{word}'" for word in _HOW[name])
+            faults.append(Fault(("pools", name), f"{how!r} is not available for this pool", f"Accepted: {accepted}."))
+    return faults
+
+
+def _design_faults(settings: Settings) -> list[Fault]:
+    kind = settings.plots.design.kind
+    faults = []
+    if kind == "weighted" and not settings.columns.get("trees", {}).get("expansion"):
+        what = "the weighted design needs the column of trees per hectare"
+        faults.append(Fault(("plots", "design"), what, "Give expansion = 'THEIR COLUMN' under [columns.trees]."))
+    if settings.plots.slope_correction != "none" and kind in ("angle_count", "weighted", "census"):
+        what = f"a plot of kind {kind!r} has no lengths laid out along the slope"
+        faults.append(Fault(("plots", "slope_correction"), what, "Leave the key out."))
+    return faults

@@ -1,0 +1,315 @@
+"""The one way data flows: inputs -> checks -> trees -> plots -> estimates -> change -> results.
+
+Every step is a function from tables to tables; this module only calls them in order.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import pandas as pd
+
+from allometry.assign import assign
+from allometry.catalogue import load_catalogue
+from allometry.heights import impute, published_height
+from allometry.roots import default_model, level
+from landcarbon.change import estimate_change
+from landcarbon.check.run import run_checks
+from landcarbon.check.equations import memory_findings, range_findings, species_findings
+from landcarbon.errors import UserError
+from landcarbon.estimate.stocks import estimate_stocks
+from landcarbon.findings import empty_findings, join_findings, make_findings
+from landcarbon.plots import TREE_POOLS, PlotDesign, expansion_factors, plot_pools, plot_sums, visit_index
+from landcarbon.publish.results import CHANGE_COLUMNS
+from landcarbon.pools.trees import TreePlan, combine_stems, make_tree_plan, tree_biomass, tree_findings
+from landcarbon.read.load import load_inputs
+
+if TYPE_CHECKING:
+    from landcarbon.inputs import Inputs
+    from landcarbon.inventory import Settings
+
+__all__ = [
+    "PlotStage",
+    "carbon_domain",
+    "change_between",
+    "counted_pools",
+    "design_of",
+    "estimate",
+    "measure_trees",
+    "read_and_check",
+    "root_model",
+    "survey_pairs",
+]
+
+
+@dataclass(frozen=True)
+class PlotStage:
+    """What the tree and plot steps hand on.
+
+    Attributes
+    ----------
+    inputs : Inputs
+        With trees evaluated and every finding so far.
+    plan : TreePlan
+        Equation and factors per species code.
+    plot_pools : DataFrame
+        One row per visited plot and survey.
+    """
+
+    inputs: Inputs
+    plan: TreePlan
+    plot_pools: pd.DataFrame
+
+
+def read_and_check(settings: Settings) -> Inputs:
+    """Read the files of an inventory and check them."""
+    return run_checks(load_inputs(settings), settings)
+
+
+def design_of(settings: Settings) -> PlotDesign:
+    """Turn the design keys of the project file into areas and limits."""
+    given = settings.plots.design
+    options: dict[str, Any] = {
+        "on_slope": settings.plots.slope_correction == "design on slope",
+        "subplots": settings.plots.subplots,
+    }
+    if given.kind == "circle":
+        return PlotDesign.circles([given.radius_m], [0.0], **options)
+    if given.kind == "nested":
+        radii = [circle.radius_m for circle in given.circles]
+        return PlotDesign.circles(radii, [circle.dbh_min_cm for circle in given.circles], **options)
+    if given.kind == "rectangle":
+        return PlotDesign.rectangle(given.width_m, given.length_m, **options)
+    if given.kind == "angle_count":
+        return PlotDesign.angle_count(given.basal_area_factor, given.unit, **options)
+    if given.kind == "census":
+        area = (given.area_ha,) if given.area_ha else ()
+        return PlotDesign("census", area_ha=area, **options)
+    return PlotDesign("weighted", **options)
+
+
+def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
+    """Run the tree and plot steps.
+
+    Raises
+    ------
+    UserError
+        If trees lie beyond the diameter range of their equation and the policy is "stop".
+    """
+    catalogue = load_catalogue()
+    trees = combine_stems(inputs.trees) if settings.trees.stems == "combined" else inputs.trees
+    trees, height_findings = _fill_heights(trees, settings)
+    assignments = _assign(trees, inputs.species, settings)
+    root = root_model(settings)
+    plan = make_tree_plan(
+        assignments,
+        catalogue,
+        carbon_domain=carbon_domain(settings),
+        out_of_range=settings.equations.out_of_range,
+        stress=settings.equations.stress,
+        tree_root_model=root if root and level(root) == "tree" else "",
+    )
+    trees, biomass_findings = tree_findings(_named(tree_biomass(trees, plan), plan), plan)
+    _stop_beyond_range(trees, settings)
+    design = design_of(settings)
+    index = visit_index(trees, inputs.visits)
+    trees = trees.assign(expansion=expansion_factors(trees, inputs.visits, index, design))
+    position = plan.positions(trees["species"])
+    memory = (assignments["known"] == "memory").to_numpy()
+    sums = plot_sums(trees, index, len(inputs.visits), conifer=plan.conifer[position], memory=memory[position])
+    pools, pool_findings = plot_pools(
+        inputs.visits,
+        inputs.plots,
+        sums,
+        pools=counted_pools(settings),
+        design=design,
+        root_model=root if root and level(root) == "stand" else "",
+    )
+    findings = join_findings(
+        [
+            _carbon_at_stake(inputs.findings, trees),
+            height_findings,
+            species_findings(assignments, trees),
+            memory_findings(assignments, trees),
+            range_findings(trees),
+            biomass_findings,
+            pool_findings,
+        ]
+    )
+    return PlotStage(replace(inputs, trees=trees, findings=findings), plan, pools)
+
+
+def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
+    """Estimate stocks at every survey and change between them.
+
+    Returns
+    -------
+    stocks, change, findings : DataFrame
+    """
+    surveys = [str(name) for name in stage.inputs.surveys["survey"]]
+    options = _options(stage, settings)
+    stocks, findings = estimate_stocks(stage.plot_pools, surveys=surveys, **options)
+    parts, found = [], [findings]
+    for since, until in survey_pairs(surveys):
+        part, finding = change_between(stage, settings, since, until)
+        parts.append(part)
+        found.append(finding)
+    parts = [part for part in parts if len(part)]
+    change = pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=CHANGE_COLUMNS)
+    return stocks, change, join_findings(found)
+
+
+def change_between(
+    stage: PlotStage, settings: Settings, since: str, until: str
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Estimate change between any two surveys.
+
+    Returns
+    -------
+    change, findings : DataFrame
+        Without rows, and with a finding that says so, where one of the surveys has no plot to count.
+    """
+    counted = set(stage.plot_pools["survey"])
+    lacking = [survey for survey in (since, until) if survey not in counted]
+    if lacking:
+        return pd.DataFrame(columns=CHANGE_COLUMNS), make_findings(
+            "survey without plots",
+            severity="error",
+            table="change",
+            survey=lacking[0],
+            message=f"No plot counts at survey {', '.join(lacking)}: change {since} to {until} cannot be stated.",
+            remedy="See the other findings for why its plots do not count.",
+        )
+    return estimate_change(stage.plot_pools, since=since, until=until, **_options(stage, settings))
+
+
+def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
+    inputs = stage.inputs
+    parcels = None if inputs.parcels is None else pd.DataFrame(inputs.parcels.drop(columns="geometry"))
+    return {
+        "strata": inputs.strata,
+        "parcels": parcels,
+        "pools": counted_pools(settings),
+        "confidence": settings.inventory.confidence,
+        "inventory_name": settings.inventory.name,
+    }
+
+
+def survey_pairs(surveys: list[str]) -> list[tuple[str, str]]:
+    """Pairs of surveys that change is stated for: each with the next, and the first with the last."""
+    pairs = list(pairwise(surveys))
+    if len(surveys) > 2:
+        pairs.append((surveys[0], surveys[-1]))
+    return pairs
+
+
+def counted_pools(settings: Settings) -> list[str]:
+    """Pools that enter the sum, in canonical order."""
+    return [pool for pool in TREE_POOLS if getattr(settings.pools, pool).how != "not counted"]
+
+
+def root_model(settings: Settings) -> str:
+    """Root model in effect; empty if below-ground biomass is not counted."""
+    pool = settings.pools.below_ground
+    if pool.how == "not counted":
+        return ""
+    return pool.model or str(default_model(settings.equations.region)["model_id"])
+
+
+def carbon_domain(settings: Settings) -> str:
+    """Climate domain of the carbon fractions: as stated, else by region."""
+    if settings.carbon.domain:
+        return settings.carbon.domain
+    tropical = {"tropics", "mangrove"}
+    return "tropical and subtropical" if settings.equations.region in tropical else "temperate and boreal"
+
+
+def _named(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
+    """Add accepted name and ``known`` mark, so that every tree row tells what it rests on."""
+    position = plan.positions(trees["species"])
+    names = plan.assignments[["accepted_name", "known"]].astype("str")
+    return trees.assign(
+        scientific_name=pd.Categorical(names["accepted_name"].to_numpy()[position]),
+        known=pd.Categorical(names["known"].to_numpy()[position]),
+    )
+
+
+def _fill_heights(trees: pd.DataFrame, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame]:
+    measured = trees["height_m"].to_numpy(dtype=float)
+    source = np.where(np.isfinite(measured), "measured", "none")
+    how = settings.heights.missing
+    usable = (trees["used"] & (trees["status"] != "absent")).to_numpy()
+    if how == "none" or settings.equations.use_height is False:
+        return trees.assign(height_source=pd.Categorical(source)), empty_findings()
+    dbh = trees["dbh_cm"].to_numpy(dtype=float)
+    if how != "curve":
+        filled = published_height(how, dbh, stress=settings.equations.stress)
+        heights = np.where(np.isfinite(measured), measured, filled)
+        source = np.where(np.isfinite(measured), "measured", np.where(np.isfinite(filled), "published", "none"))
+        return trees.assign(height_m=heights, height_source=pd.Categorical(source)), empty_findings()
+    heights, source, curves = impute(
+        dbh,  # rows set aside get a height too, so that the carbon at stake is known; they do not shape the curve
+        np.where(usable, measured, np.nan),
+        trees["species"],
+        form=settings.heights.form,
+        trees_needed=settings.heights.trees_needed,
+    )
+    heights = np.where(np.isfinite(measured), measured, heights)
+    imputed = int((source == "curve").sum())
+    findings = empty_findings()
+    if imputed:
+        fitted = ", ".join(f"{row.species or 'all species'} (n {row.n}, RMSE {row.rmse_m:.1f} m)" for row in curves.itertuples())
+        findings = make_findings(
+            "height from curve",
+            severity="note",
+            table="trees",
+            column="height_m",
+            value=str(imputed),
+            message=f"{imputed} heights were filled from curves fitted to the measured trees: {fitted}.",
+            remedy="Measure more heights where the curve is weak, or set [heights] missing.",
+        )
+    return trees.assign(height_m=heights, height_source=pd.Categorical(source)), findings
+
+
+def _assign(trees: pd.DataFrame, species: pd.DataFrame, settings: Settings) -> pd.DataFrame:
+    counted = trees["used"] & (trees["status"] != "absent") & trees["dbh_cm"].notna()
+    lacking = set(trees.loc[counted & trees["height_m"].isna(), "species"].astype("str"))
+    table = species.assign(has_height=[code not in lacking for code in species["species"]])
+    options = settings.equations
+    return assign(
+        table,
+        region=options.region,
+        country=options.country or None,
+        sources=tuple(options.sources),
+        explicit=dict(options.species),
+        use_height=options.use_height,
+        overrides=dict(options.wood_density),
+        has_stress=options.stress is not None,
+    )
+
+
+def _stop_beyond_range(trees: pd.DataFrame, settings: Settings) -> None:
+    if settings.equations.out_of_range != "stop":
+        return
+    beyond = trees["used"] & trees["out_of_range"]
+    if beyond.any():
+        first = trees.loc[beyond].iloc[0]
+        raise UserError(
+            f"{int(beyond.sum())} trees lie beyond the diameter range of their equation, the first "
+            f"{first['dbh_cm']:g} cm with {first['equation']}",
+            where=f"{first['file']} line {first['row']}",
+            remedy='Set [equations] out_of_range to "flag" or "cap", or choose other equations.',
+        )
+
+
+def _carbon_at_stake(findings: pd.DataFrame, trees: pd.DataFrame) -> pd.DataFrame:
+    """Fill in the carbon of the tree rows that findings are about."""
+    known = findings["row_id"].notna()
+    if not known.any():
+        return findings
+    carbon = trees["carbon_kg"].to_numpy()
+    rows = findings.loc[known, "row_id"].astype(np.int64).to_numpy()
+    return findings.assign(carbon_kg=findings["carbon_kg"].where(~known, pd.Series(carbon[rows], findings.index[known])))

@@ -1,0 +1,122 @@
+"""The results of one run, as they are published and read back."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+
+if TYPE_CHECKING:
+    import geopandas as gpd
+
+__all__ = ["CHANGE_COLUMNS", "STOCK_COLUMNS", "Results"]
+
+STOCK_COLUMNS = [
+    "by",
+    "unit",
+    "survey",
+    "pool",
+    "area_ha",
+    "plots",
+    "density_t_c_ha",
+    "density_se",
+    "density_low",
+    "density_high",
+    "stock_t_c",
+    "stock_se",
+    "stock_low",
+    "stock_high",
+    "df",
+    "method",
+]
+
+CHANGE_COLUMNS = [
+    "by",
+    "unit",
+    "since",
+    "until",
+    "pool",
+    "area_ha",
+    "plots_paired",
+    "plots_since",
+    "plots_until",
+    "years",
+    "change_t_c",
+    "change_se",
+    "change_low",
+    "change_high",
+    "change_t_c_yr",
+    "change_t_c_ha_yr",
+    "change_t_c_ha_yr_se",
+    "co2_t_yr",
+    "method",
+]
+
+
+@dataclass(frozen=True)
+class Results:
+    """Everything one run hands to the outputs. Frames are not to be changed in place.
+
+    Attributes
+    ----------
+    settings_summary : dict
+        Settings in effect, JSON-able. Read here: ``name`` (of the inventory), ``confidence`` (e.g. 0.95) and ``seed``.
+    stocks : DataFrame
+        Columns ``STOCK_COLUMNS``; one row per unit, survey and pool. A unit that cannot be estimated has NaN in
+        ``density_t_c_ha`` and the reason in ``method``.
+    change : DataFrame
+        Columns ``CHANGE_COLUMNS``; may be empty (one survey).
+    findings : DataFrame
+        Columns of :data:`landcarbon.findings.FINDING_COLUMNS`.
+    trees : DataFrame
+        Tree rows with the outcome of the tree step.
+    plots : DataFrame
+        Long: survey, plot, pool, density_t_c_ha [t C/ha] and whatever else is known of the visit.
+    parcels : GeoDataFrame or None
+        parcel, stratum, land_use, area_ha [ha], geometry; None for an inventory without polygons.
+    plot_points : DataFrame
+        plot, parcel, stratum, lon, lat [deg, WGS 84; NaN if unknown], inside (False: in no parcel).
+    surveys : DataFrame
+        survey, since, until; in the order of time.
+    reconciliation : DataFrame
+        Rows read, used and set aside at each step.
+    run : dict
+        JSON-able facts for the provenance file, e.g. ``inputs`` (list of file, sha256, bytes, rows, role).
+    crs : str or None
+        Coordinate system of the parcels.
+    area_method : str
+        One sentence on where the areas come from.
+    marks : list of str
+        Sentences that must stand on every output, such as the share of biomass beyond the diameter ranges.
+    """
+
+    settings_summary: dict[str, Any]
+    stocks: pd.DataFrame
+    change: pd.DataFrame
+    findings: pd.DataFrame
+    trees: pd.DataFrame
+    plots: pd.DataFrame
+    parcels: gpd.GeoDataFrame | None
+    plot_points: pd.DataFrame
+    surveys: pd.DataFrame
+    reconciliation: pd.DataFrame
+    run: dict[str, Any] = field(default_factory=dict)
+    crs: str | None = None
+    area_method: str = ""
+    marks: list[str] = field(default_factory=list)
+
+    @property
+    def name(self) -> str:
+        """Name of the inventory."""
+        return str(self.settings_summary.get("name", ""))
+
+    @property
+    def confidence(self) -> float:
+        """Confidence level of the intervals, between 0 and 1; NaN if the settings do not say."""
+        return float(self.settings_summary.get("confidence", float("nan")))
+
+    @property
+    def interval_name(self) -> str:
+        """What an interval is called on the outputs, e.g. ``95 % interval``."""
+        return "interval" if pd.isna(self.confidence) else f"{self.confidence * 100:g} % interval"

@@ -1,0 +1,282 @@
+"""From a table with the user's names and units to one with ours."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+
+from landcarbon.errors import InputFileError
+from landcarbon.inventory.models import Settings
+from landcarbon.inventory.nearest import suggestion
+from landcarbon.read.cells import Parsed, as_category, as_date, as_flag, as_number, as_text, cell_text
+from landcarbon.read.columns import ColumnSpec, table_columns
+from landcarbon.read.notes import note
+from landcarbon.read.sheets import read_parquet, read_workbook
+from landcarbon.read.source import FileLog, Source
+from landcarbon.read.table import RawTable
+from landcarbon.read.text import read_text
+from landcarbon.read.units import convert
+
+__all__ = ["Mapped", "column_plan", "left_blank", "map_raw", "read_mapped", "wanted_in"]
+
+_REPEATING = frozenset({"survey", "plot", "subplot", "species", "status", "decay_class"})
+
+
+@dataclass
+class Mapped:
+    """One table of the user's under our names and in our units.
+
+    Attributes
+    ----------
+    frame : DataFrame
+        Every canonical column of the table (defaults where the file has none), and ``file`` and ``row``.
+    given : dict
+        Our column name to theirs, for the columns the file has.
+    bad : dict
+        Our column name to the texts of cells that could not be read, by position in ``frame``.
+    ragged : ndarray of bool
+        Rows with another number of cells than the header.
+    findings : list of DataFrame
+        Findings about the file as a whole.
+    """
+
+    frame: pd.DataFrame
+    given: dict[str, str]
+    bad: dict[str, pd.Series]
+    ragged: np.ndarray
+    findings: list[pd.DataFrame]
+
+
+def read_mapped(source: Source, table: str, settings: Settings, log: FileLog) -> Mapped:
+    """Read a file into canonical columns.
+
+    Parameters
+    ----------
+    source : Source
+        CSV and its kin, a workbook or Parquet.
+    table : str
+        Canonical table, e.g. ``trees``.
+    settings : Settings
+        Column and unit names.
+    log : FileLog
+        Notes what was read.
+
+    Raises
+    ------
+    InputFileError
+        If the file is not what its name says, or lacks a column.
+    """
+    mapping = settings.columns.get(table, {})
+
+    def choose(names: Sequence[str]) -> list[str]:
+        return list(dict.fromkeys(column_plan(table, names, source, mapping).values()))
+
+    readers: dict[str, Callable[[Source, Callable[[Sequence[str]], Sequence[str]]], RawTable]] = {
+        ".xlsx": read_workbook,
+        ".xlsm": read_workbook,
+        ".parquet": read_parquet,
+    }
+    if source.suffix in (".xls", ".ods"):
+        raise InputFileError(
+            f"{source.suffix} files cannot be read", where=source.name, remedy="Save the table as XLSX or CSV."
+        )
+    raw = readers.get(source.suffix, read_text)(source, choose)
+    return map_raw(raw, table, source, settings, log)
+
+
+def column_plan(
+    table: str, names: Sequence[str], source: Source, mapping: dict[str, str | list[str]]
+) -> dict[str, str]:
+    """Find which column of a file serves each canonical column.
+
+    Parameters
+    ----------
+    table : str
+        Canonical table.
+    names : sequence of str
+        Columns of the file.
+    source : Source
+        The file, for messages.
+    mapping : dict
+        ours = theirs (one name or several to try), from the settings; a blank name says the file has no such column.
+
+    Returns
+    -------
+    dict
+        Our column name to theirs.
+
+    Raises
+    ------
+    InputFileError
+        Listing every column that is missing.
+    """
+    folded = {name.casefold(): name for name in reversed(names)}
+    plan: dict[str, str] = {}
+    missing: list[str] = []
+    for column, spec in table_columns(table).items():
+        given = mapping.get(column)
+        theirs = [given] if isinstance(given, str) else (given or [])
+        if given is None:
+            wanted = [column] if spec.by_name or spec.needed else []
+        else:
+            wanted = [name.strip() for name in theirs if name.strip()]
+        found = next(
+            (name if name in names else folded[name.casefold()] for name in wanted if _has(name, names, folded)), None
+        )
+        if found is not None:
+            plan[column] = found
+        elif (given is not None and wanted) or spec.needed:
+            missing.append(_missing(column, wanted or [column], names))
+    if missing:
+        told = f"Columns in the file: {', '.join(names)}. Name the right one under [columns.{table}]."
+        raise InputFileError("; ".join(missing), where=source.name, remedy=told)
+    return plan
+
+
+def _has(name: str, names: Sequence[str], folded: dict[str, str]) -> bool:
+    return name in names or name.casefold() in folded
+
+
+def _missing(column: str, wanted: Sequence[str], names: Sequence[str]) -> str:
+    hint = suggestion(wanted[0], names)
+    what = f"no column {' or '.join(map(repr, wanted))}" + (f" (for {column})" if wanted != [column] else "")
+    return f"{what} - {hint[0].lower()}{hint[1:]}" if hint else what
+
+
+def map_raw(raw: RawTable, table: str, source: Source, settings: Settings, log: FileLog) -> Mapped:
+    """Give a table our names, types and units.
+
+    Parameters
+    ----------
+    raw : RawTable
+        As read.
+    table : str
+        Canonical table.
+    source : Source
+        The file.
+    settings : Settings
+        Column and unit names.
+    log : FileLog
+        Notes what was read.
+
+    Raises
+    ------
+    InputFileError
+        If a column is missing or stands twice.
+    """
+    plan = column_plan(table, raw.names, source, settings.columns.get(table, {}))
+    twice = sorted(set(plan.values()) & raw.repeated)
+    if twice:
+        raise InputFileError(
+            f"the column {twice[0]!r} stands more than once", where=source.name, remedy="Rename or remove one of them."
+        )
+    raw, blank = _without_blank_rows(raw)
+    used = [f"{ours}={theirs}" for ours, theirs in plan.items()]
+    unused = [name for name in raw.names if name not in plan.values()]
+    log.add(source, len(raw), columns="; ".join(used), unused="; ".join(unused))
+    mapped = Mapped(_base(raw), plan, {}, raw.ragged, [*raw.findings, *blank])
+    units = settings.units.get(table, {})
+    columns: dict[str, object] = {}
+    for column, spec in table_columns(table).items():
+        cells = raw.columns.get(plan.get(column, ""))
+        parsed = _parse(cells, spec, settings.dates.format, comma_decimals=raw.comma_decimals, rows=len(raw))
+        if isinstance(parsed, Parsed):
+            _note_bad(mapped, column, cells, parsed, raw.lines)
+            values = convert(parsed.values, units.get(column, ""), spec.unit) if spec.unit else parsed.values
+            columns[spec.becomes] = values
+        else:
+            columns[spec.becomes] = parsed
+    mapped.frame = pd.concat([mapped.frame, pd.DataFrame(columns)], axis=1)
+    return mapped
+
+
+def _base(raw: RawTable) -> pd.DataFrame:
+    file = pd.Categorical.from_codes(np.zeros(len(raw), dtype="int8"), pd.Index([raw.file], dtype="str"))
+    return pd.DataFrame({"file": file, "row": raw.lines})
+
+
+def _without_blank_rows(raw: RawTable) -> tuple[RawTable, list[pd.DataFrame]]:
+    """Take out rows with nothing in any column used; they say nothing about a tree or a plot."""
+    if not raw.columns or not len(raw):
+        return raw, []
+    # Most files have no blank row: the first column without blanks ends the search.
+    blank = np.ones(len(raw), dtype=bool)
+    for cells in raw.columns.values():
+        blank &= (cell_text(cells).to_numpy(zero_copy_only=False) == "").astype(bool)
+        if not blank.any():
+            return raw, []
+    keep = np.flatnonzero(~blank)
+    columns = {name: cells.take(pa.array(keep)) for name, cells in raw.columns.items()}
+    first = int(raw.lines[blank][0])
+    words = {"count": int(blank.sum()), "line": first}
+    told = note("blank rows", file=raw.file, value=str(words["count"]), row=first, fill=words)
+    kept = RawTable(
+        raw.file, raw.names, raw.repeated, columns, raw.lines[keep], raw.ragged[keep], raw.comma_decimals, raw.findings
+    )
+    return kept, [told]
+
+
+def _parse(
+    cells: pa.Array | None, spec: ColumnSpec, pattern: str | None, *, comma_decimals: bool, rows: int
+) -> Parsed | pd.Series:
+    repeating = spec.table == "trees" and spec.column in _REPEATING
+    if cells is None:
+        if spec.kind in ("id", "text"):
+            return _blank(rows, category=repeating)
+        fill = np.datetime64("NaT", "s") if spec.kind == "date" else np.float64("nan")
+        return Parsed(np.full(rows, fill), np.zeros(rows, dtype=bool))
+    if spec.kind == "number":
+        return as_number(cells, comma_decimals=comma_decimals)
+    if spec.kind == "date":
+        return as_date(cells, pattern)
+    if spec.kind == "flag":
+        return as_flag(cells)
+    return as_category(cells) if repeating else as_text(cells)
+
+
+def _blank(rows: int, *, category: bool) -> pd.Series:
+    if category:
+        levels = pd.Index([""], dtype="str")
+        return pd.Series(pd.Categorical.from_codes(np.zeros(rows, dtype="int8"), levels))
+    return pd.Series([""] * rows, dtype="str")
+
+
+def _note_bad(mapped: Mapped, column: str, cells: pa.Array | None, parsed: Parsed, lines: np.ndarray) -> None:
+    if parsed.decimal_comma:
+        mapped.findings.append(note("decimal comma", file=str(mapped.frame["file"].cat.categories[0]), column=column))
+    places = np.flatnonzero(parsed.bad)
+    if len(places) and cells is not None:
+        mapped.bad[column] = pd.Series(cell_text(cells.take(pa.array(places))).to_pylist(), index=places, dtype="str")
+
+
+def wanted_in(column: str, table: str) -> str:
+    """Return in words what a cell of a column has to hold."""
+    kind = table_columns(table)[column].kind
+    return {"date": "date in the form expected", "flag": "yes or no"}.get(kind, "number")
+
+
+def left_blank(mapped: Mapped, table: str) -> list[pd.DataFrame]:
+    """Tell the cells of a table that could not be read and are taken as blank.
+
+    Parameters
+    ----------
+    mapped : Mapped
+        The table.
+    table : str
+        Its canonical name.
+    """
+    return [
+        note(
+            "not readable and left blank",
+            mapped.frame.iloc[texts.index],
+            table=table,
+            column=column,
+            value=texts.to_numpy(dtype=object),
+            fill={"column": mapped.given[column], "wanted": wanted_in(column, table)},
+        )
+        for column, texts in mapped.bad.items()
+    ]

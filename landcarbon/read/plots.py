@@ -1,0 +1,230 @@
+"""The plots: where they are, in which parcel and stratum, and what is known of their shape."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+from pyproj import CRS
+
+from landcarbon.errors import InputFileError, SettingsError
+from landcarbon.inventory.models import Settings
+from landcarbon.inventory.nearest import suggestion
+from landcarbon.read.crs import WGS84, is_metric, metric_crs, move_points, parse_crs, utm_for
+from landcarbon.read.limits import limit
+from landcarbon.read.mapping import Mapped, left_blank, map_raw, read_mapped
+from landcarbon.read.notes import note
+from landcarbon.read.source import FileLog, Source, find_source, has_geometry
+
+if TYPE_CHECKING:
+    from landcarbon.read.parcels import ParcelTable
+
+__all__ = ["PlotTable", "read_plots"]
+
+_ALL = "all"
+
+
+@dataclass
+class PlotTable:
+    """Plots read.
+
+    Attributes
+    ----------
+    frame : DataFrame
+        As ``Inputs.plots``.
+    extra : DataFrame
+        plot, slope_deg, share_inside, plot_area_ha as far as the plots file gives them (NaN if not).
+    crs : CRS or None
+        Coordinate system of x and y.
+    findings : list of DataFrame
+        What was noted.
+    """
+
+    frame: pd.DataFrame
+    extra: pd.DataFrame
+    crs: CRS | None
+    findings: list[pd.DataFrame]
+
+
+def read_plots(settings: Settings, parcels: ParcelTable | None, log: FileLog) -> PlotTable:
+    """Read the plots and place them in parcels and strata.
+
+    Parameters
+    ----------
+    settings : Settings
+        The project file.
+    parcels : ParcelTable or None
+        Parcels, if there are any.
+    log : FileLog
+        Notes what was read.
+
+    Raises
+    ------
+    InputFileError
+        If the file cannot be used, or a plot stands twice with different entries.
+    SettingsError
+        If the coordinate system is missing.
+    """
+    source = find_source(settings.plots.file, settings.folder, "plots", allow_outside=settings.inventory.allow_outside)
+    mapped, crs = _read(source, settings, log)
+    findings = [*mapped.findings, *left_blank(mapped, "plots")]
+    findings.append(note("ragged row of plots", mapped.frame[mapped.ragged]))
+    table, repeats = _unique(mapped.frame, source.name)
+    findings += repeats
+    if table.empty:
+        raise InputFileError("the file holds no plot", where=source.name)
+    if crs is None:
+        findings.append(note("no locations", file=source.name))
+    target = _target(settings, parcels, table, crs)
+    table["x"], table["y"], table["lon"], table["lat"] = _moved(table, crs, target)
+    findings += _far_out(table, crs, target)
+    findings += _place(table, parcels, settings)
+    columns = ["plot", "x", "y", "lon", "lat", "parcel", "stratum", "inside"]
+    extra = table[["plot", "slope_deg", "share_inside", "plot_area_ha", "file", "row"]].copy()
+    return PlotTable(table[columns], extra, target, findings)
+
+
+def _read(source: Source, settings: Settings, log: FileLog) -> tuple[Mapped, CRS | None]:
+    """Return the table with x and y in the coordinate system returned beside it (None: no locations)."""
+    if has_geometry(source):
+        return _read_vector(source, settings, log)
+    mapped = read_mapped(source, "plots", settings, log)
+    frame, given = mapped.frame, mapped.given
+    if "x" in given and "y" in given:
+        if settings.plots.crs is None:
+            raise SettingsError(
+                f"{source.name} gives x and y, but not in which coordinate system",
+                where=f"{settings.path.name}, plots.crs",
+                remedy="Give crs = 'EPSG:...' under [plots], or map lon and lat instead.",
+            )
+        return mapped, parse_crs(settings.plots.crs, "plots.crs")
+    if "lon" in given and "lat" in given:
+        frame["x"], frame["y"] = frame["lon"], frame["lat"]
+        return mapped, parse_crs(settings.plots.crs or WGS84, "plots.crs")
+    if {"x", "y", "lon", "lat"} & set(given):
+        raise InputFileError(
+            "only one of two coordinates is given", where=source.name, remedy="Map x and y, or lon and lat."
+        )
+    return mapped, None
+
+
+def _read_vector(source: Source, settings: Settings, log: FileLog) -> tuple[Mapped, CRS]:
+    from landcarbon.read.vectors import read_vector
+
+    geometry, raw = read_vector(source, layer=settings.plots.layer, crs=settings.plots.crs)
+    mapped = map_raw(raw, "plots", source, settings, log)
+    geometry = geometry[mapped.frame["row"].to_numpy() - 1].reset_index(drop=True)
+    kinds = set(geometry.geom_type.dropna()) - {"Point"}
+    if kinds:
+        shapes = ", ".join(sorted(kinds))
+        mapped.findings.append(note("plots not drawn as points", file=source.name, value=shapes))
+        if CRS.from_user_input(geometry.crs).is_geographic:
+            flat = geometry.to_crs(geometry.estimate_utm_crs())
+            geometry = flat.centroid.to_crs(geometry.crs)
+        else:
+            geometry = geometry.centroid
+    mapped.frame["x"], mapped.frame["y"] = geometry.x.to_numpy(), geometry.y.to_numpy()
+    return mapped, CRS.from_user_input(geometry.crs)
+
+
+def _unique(table: pd.DataFrame, file: str) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
+    """Keep one row per plot: equal rows are told, differing ones stop the run."""
+    blank = table["plot"] == ""
+    findings = [note("row without plot", table[blank])]
+    table = table[~blank]
+    entries = [name for name in table if name not in ("file", "row")]
+    same = table.duplicated(entries)
+    findings.append(note("plot repeated", table[same]))
+    table = table[~same]
+    twice = table[table["plot"].duplicated(keep=False)]
+    if len(twice):
+        name = twice["plot"].iloc[0]
+        lines = ", ".join(str(row) for row in twice.loc[twice["plot"] == name, "row"])
+        more = twice["plot"].nunique() - 1
+        raise InputFileError(
+            f"plot {name!r} stands more than once with different entries (lines {lines})"
+            + (f", and so do {more} more" if more else ""),
+            where=file,
+            remedy="Keep one row per plot.",
+        )
+    return table.reset_index(drop=True), findings
+
+
+def _target(settings: Settings, parcels: ParcelTable | None, table: pd.DataFrame, crs: CRS | None) -> CRS | None:
+    """Choose the coordinate system of the results."""
+    if parcels is not None:
+        return parcels.crs
+    if settings.inventory.crs:
+        return metric_crs(settings.inventory.crs)
+    if crs is None or not (table["x"].notna() & table["y"].notna()).any():
+        return None
+    if is_metric(crs):
+        return crs
+    lon, lat = move_points(table["x"].to_numpy(), table["y"].to_numpy(), crs, CRS.from_user_input(WGS84))
+    return None if np.isnan(lon).all() else utm_for(lon, lat)
+
+
+def _moved(table: pd.DataFrame, crs: CRS | None, target: CRS | None) -> tuple[np.ndarray, ...]:
+    x, y = table["x"].to_numpy(dtype="float64"), table["y"].to_numpy(dtype="float64")
+    nowhere = np.full(len(table), np.nan)
+    if crs is None:
+        return nowhere, nowhere, nowhere, nowhere
+    lon, lat = move_points(x, y, crs, CRS.from_user_input(WGS84))
+    if target is None:
+        return nowhere, nowhere, lon, lat
+    return (*move_points(x, y, crs, target), lon, lat)
+
+
+def _far_out(table: pd.DataFrame, crs: CRS | None, target: CRS | None) -> list[pd.DataFrame]:
+    """Mark plots that lie where neither coordinate system is meant for."""
+    if crs is None:
+        return []
+    margin = limit("location", "area_of_use_margin_deg")
+    far = (table["lat"].abs() > 90) | (table["lon"].abs() > 180)
+    for system in (crs, target):
+        area = system.area_of_use if system is not None else None
+        if area is not None and area.west <= area.east:
+            far |= (table["lon"] < area.west - margin) | (table["lon"] > area.east + margin)
+            far |= (table["lat"] < area.south - margin) | (table["lat"] > area.north + margin)
+    rows = table[far]
+    value = [f"longitude {lon:.4f}, latitude {lat:.4f}" for lon, lat in zip(rows["lon"], rows["lat"], strict=True)]
+    return [note("implausible location", rows, value=value, fill={"crs": crs.name})]
+
+
+def _place(table: pd.DataFrame, parcels: ParcelTable | None, settings: Settings) -> list[pd.DataFrame]:
+    """Fill in parcel, stratum and whether the plot lies inside."""
+    findings: list[pd.DataFrame] = []
+    table["inside"] = True
+    if parcels is not None:
+        findings = _into_parcels(table, parcels)
+        of_parcel = dict(zip(parcels.frame["parcel"], parcels.frame["stratum"], strict=True))
+        taken = table["parcel"].map(of_parcel).fillna("").astype("str")
+        table["stratum"] = table["stratum"].where(table["stratum"] != "", taken)
+    elif (table["stratum"] == "").all():
+        table["stratum"] = pd.Series([_ALL] * len(table), dtype="str")
+    table["stratum"] = table["stratum"].replace(dict(settings.strata.merge))
+    return findings
+
+
+def _into_parcels(table: pd.DataFrame, parcels: ParcelTable) -> list[pd.DataFrame]:
+    """Take the parcel given where it is known, else that of the location."""
+    from landcarbon.read.parcels import locate
+
+    names = parcels.frame["parcel"].to_numpy(dtype=object)
+    found = locate(parcels.frame, table["x"].to_numpy(), table["y"].to_numpy())
+    seen = pd.Series(np.append(names, "")[found], index=table.index, dtype="str")
+    given = table["parcel"] != ""
+    known = given & table["parcel"].isin(list(names))
+    strange = table[given & ~known]
+    hints = [" " + suggestion(name, names) for name in strange["parcel"]]
+    apart = table[known & (seen != table["parcel"]) & table["x"].notna() & table["y"].notna()]
+    where = [f"lies in {place}" if place else "lies in no parcel" for place in seen[apart.index]]
+    findings = [
+        note("unknown parcel", strange, fill=pd.DataFrame({"hint": pd.Series(hints, dtype="str").str.rstrip()})),
+        note("parcel against location", apart, fill=pd.DataFrame({"parcel": list(apart["parcel"]), "where": where})),
+    ]
+    table["parcel"] = table["parcel"].where(known, seen)
+    table["inside"] = table["parcel"] != ""
+    return findings

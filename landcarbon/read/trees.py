@@ -1,0 +1,243 @@
+"""The tree rows of all surveys as one table."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+from pandas.api.types import union_categoricals
+
+from landcarbon.errors import InputFileError
+from landcarbon.inventory.models import Settings
+from landcarbon.read.mapping import Mapped, read_mapped, wanted_in
+from landcarbon.read.notes import note
+from landcarbon.read.source import FileLog, find_source
+from landcarbon.read.surveys import files_of, survey_by_date, survey_by_label
+
+__all__ = ["STATUS_DEFAULTS", "TreeRows", "read_trees"]
+
+STATUS_NAMES = ("live", "dead", "absent")
+
+# Codes understood without a [status] table (words of the trade and their initials; common practice, no source).
+STATUS_DEFAULTS = {
+    "live": "live",
+    "l": "live",
+    "alive": "live",
+    "a": "live",
+    "1": "live",
+    "dead": "dead",
+    "d": "dead",
+    "2": "dead",
+    "absent": "absent",
+    "gone": "absent",
+    "cut": "absent",
+    "missing": "absent",
+    "0": "absent",
+}
+
+_COLUMNS = [
+    "row_id", "file", "row", "survey", "plot", "subplot", "tree", "stem", "species", "status", "dbh_cm", "height_m",
+    "expansion_per_ha", "weight", "decay_class", "date", "used",
+]  # fmt: skip
+
+
+@dataclass
+class TreeRows:
+    """Tree rows read.
+
+    Attributes
+    ----------
+    frame : DataFrame
+        As described for ``Inputs.trees``.
+    findings : list of DataFrame
+        What was noted.
+    """
+
+    frame: pd.DataFrame
+    findings: list[pd.DataFrame] = field(default_factory=list)
+
+
+def read_trees(settings: Settings, log: FileLog) -> TreeRows:
+    """Read every tree table named in the settings.
+
+    Parameters
+    ----------
+    settings : Settings
+        The project file.
+    log : FileLog
+        Notes what was read.
+
+    Raises
+    ------
+    InputFileError
+        If a file cannot be used.
+    """
+    parts: list[pd.DataFrame] = []
+    findings: list[pd.DataFrame] = []
+    start = 0
+    for file, served in files_of(settings, "trees").items():
+        source = find_source(
+            file, settings.folder, f"trees {', '.join(served)}", allow_outside=settings.inventory.allow_outside
+        )
+        mapped = read_mapped(source, "trees", settings, log)
+        reader = _FileRows(mapped, settings, served, start)
+        parts.append(reader.rows())
+        findings += [*mapped.findings, *reader.findings]
+        start += len(mapped.frame)
+    return TreeRows(_joined(parts), findings)
+
+
+class _FileRows:
+    """The rows of one file: each step may set rows aside and notes why."""
+
+    def __init__(self, mapped: Mapped, settings: Settings, served: list[str], start: int) -> None:
+        self.mapped = mapped
+        self.settings = settings
+        self.served = served
+        self.findings: list[pd.DataFrame] = []
+        self.frame = mapped.frame
+        self.labels = self.frame["survey"]
+        self.frame["row_id"] = np.arange(start, start + len(self.frame), dtype="int64")
+        self.frame["used"] = True
+        levels = pd.Index(list(settings.surveys), dtype="str")
+        self.frame["survey"] = pd.Categorical.from_codes(np.full(len(self.frame), -1, dtype="int8"), levels)
+
+    def rows(self) -> pd.DataFrame:
+        """Settle survey, status and unreadable cells; return the canonical columns."""
+        self._surveys()
+        self._status()
+        self._cells()
+        self._aside(self.mapped.ragged, "ragged row")
+        if "weight" in self.mapped.given:
+            # A weight left blank is for the checks to judge; without the column every row is one tree.
+            return self.frame[_COLUMNS]
+        return self.frame.assign(weight=1.0)[_COLUMNS]
+
+    def _aside(self, mask: np.ndarray, rule: str, **words: object) -> None:
+        if mask.any():
+            self.frame.loc[mask, "used"] = False
+            self.findings.append(note(rule, self.frame[mask], **words))  # type: ignore[arg-type]
+
+    def _surveys(self) -> None:
+        by_label = "survey" in self.mapped.given
+        if len(self.served) == 1:
+            self._one_survey(by_label)
+        elif by_label:
+            self._many_by_label()
+        else:
+            self._many_by_date()
+
+    def _place(self, places: np.ndarray) -> None:
+        """Set the survey from positions in ``served``; -1 leaves none."""
+        levels = self.frame["survey"].cat.categories
+        lookup = np.append(levels.get_indexer(pd.Index(self.served)), -1).astype("int8")
+        self.frame["survey"] = pd.Categorical.from_codes(lookup[places], levels)
+
+    def _label_places(self) -> np.ndarray:
+        """Return the position in ``served`` of each row's label: -1 no survey at all, -2 one of another file."""
+        levels = list(self.labels.cat.categories)
+        match = survey_by_label(levels, list(self.settings.surveys))
+        names = [match[level] for level in levels]
+        known = [self.served.index(name) if name in self.served else (-2 if name else -1) for name in names]
+        return np.append(np.array(known, dtype="int16"), -1)[self.labels.cat.codes.to_numpy()]
+
+    def _one_survey(self, by_label: bool) -> None:
+        self._place(np.zeros(len(self.frame), dtype="int16"))
+        if not by_label:
+            return
+        other = self._label_places() == -2
+        value = self.labels[other].to_numpy(dtype=object)
+        self._aside(other, "other survey", value=value, fill={"survey": self.served[0]})
+
+    def _many_by_label(self) -> None:
+        places = self._label_places()
+        self._place(np.maximum(places, -1))
+        unknown = places < 0
+        value = self.labels[unknown].to_numpy(dtype=object)
+        self._aside(unknown, "unknown survey", value=value, fill={"surveys": ", ".join(self.served)})
+
+    def _many_by_date(self) -> None:
+        file = str(self.frame["file"].cat.categories[0])
+        if "date" not in self.mapped.given:
+            raise InputFileError(
+                f"the file serves the surveys {', '.join(self.served)}, but has neither a survey nor a date column",
+                where=file,
+                remedy="Map one of them under [columns.trees].",
+            )
+        places = survey_by_date(self.frame["date"], self.settings, self.served, file)
+        self._place(places)
+        lost = places < 0
+        self._aside(lost, "date outside surveys", value=_day_text(self.frame.loc[lost, "date"]))
+
+    def _status(self) -> None:
+        codes = self.frame["status"]
+        if "status" not in self.mapped.given:
+            self.frame["status"] = _status_category(np.zeros(len(codes), dtype="int8"))
+            return
+        levels = list(codes.cat.categories)
+        names = [_status_name(level, dict(self.settings.status)) for level in levels]
+        known = np.array([STATUS_NAMES.index(name) if name else -1 for name in names] + [-1], dtype="int8")
+        places = known[codes.cat.codes.to_numpy()]
+        unknown = places < 0
+        self._aside(unknown, "unknown status")
+        # Set aside anyway; of the three states this is the one that adds nothing.
+        self.frame["status"] = _status_category(np.where(unknown, STATUS_NAMES.index("absent"), places))
+
+    def _cells(self) -> None:
+        """Judge the cells that could not be read: without a diameter or weight that counts, the row is set aside."""
+        absent = (self.frame["status"] == "absent").to_numpy()
+        by_date = len(self.served) > 1 and "survey" not in self.mapped.given
+        for column, texts in self.mapped.bad.items():
+            mask = np.zeros(len(self.frame), dtype=bool)
+            mask[texts.index] = True
+            if column == "dbh":
+                essential = mask & ~absent
+            else:
+                essential = mask & (column in ("weight", "expansion") or (column == "date" and by_date))
+            words = {"column": self.mapped.given[column], "wanted": wanted_in(column, "trees")}
+            value = texts[essential[texts.index]].to_numpy(dtype=object)
+            self._aside(essential, "not readable", column=column, value=value, fill=words)
+            rest = mask & ~essential
+            value = texts[rest[texts.index]].to_numpy(dtype=object)
+            self.findings.append(
+                note(
+                    "not readable and left blank",
+                    self.frame[rest],
+                    table="trees",
+                    column=column,
+                    value=value,
+                    fill=words,
+                )
+            )
+
+
+def _day_text(days: pd.Series) -> np.ndarray:
+    return days.dt.strftime("%Y-%m-%d").fillna("").to_numpy(dtype=object)
+
+
+def _status_name(code: str, given: dict[str, str]) -> str:
+    """Translate a code: as written in the settings, then case aside, then the defaults."""
+    if code in given:
+        return given[code]
+    folded = {key.casefold(): value for key, value in given.items()}
+    return folded.get(code.casefold()) or STATUS_DEFAULTS.get(code.casefold(), "")
+
+
+def _status_category(places: np.ndarray) -> pd.Categorical:
+    return pd.Categorical.from_codes(places.astype("int8"), pd.Index(STATUS_NAMES, dtype="str"))
+
+
+def _joined(parts: Sequence[pd.DataFrame]) -> pd.DataFrame:
+    """Stack the files; categories are united and sorted, those of file and survey keep their order."""
+    if len(parts) == 1:
+        return parts[0].reset_index(drop=True)
+    columns: dict[str, pd.Categorical | pd.Series] = {}
+    for name in _COLUMNS:
+        pieces = [part[name] for part in parts]
+        if isinstance(pieces[0].dtype, pd.CategoricalDtype):
+            columns[name] = union_categoricals(pieces, sort_categories=name not in ("file", "survey", "status"))
+        else:
+            columns[name] = pd.concat(pieces, ignore_index=True)
+    return pd.DataFrame(columns)

@@ -1,0 +1,22 @@
+"""Shared fixtures."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+import pytest
+
+ROOT = Path(__file__).resolve().parent.parent
+
+
+@pytest.fixture(scope="session")
+def reference() -> Path:
+    """Folder with the open reference data (``real/`` and ``facts/``), which are not part of the project."""
+    given = os.environ.get("LANDCARBON_REFERENCE")
+    folder = Path(given) if given else ROOT.parent / "shared"
+    if not (folder / "real").is_dir() or not (folder / "facts").is_dir():
+        pytest.skip(
+            f"reference data not found at {folder}; set LANDCARBON_REFERENCE to a folder with real/ and facts/"
+        )
+    return folder

@@ -1,0 +1,375 @@
+"""The project file: keys, defaults, and what is said about a faulty one. Texts and figures are invented."""
+
+from __future__ import annotations
+
+import datetime as dt
+import re
+import tomllib
+from pathlib import Path
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from landcarbon.errors import SettingsError, UserError
+from landcarbon.inventory import inventory_page, load_settings, parse_settings, settings_reference, template_text
+from landcarbon.inventory.locate import key_lines, line_of
+from landcarbon.inventory.nearest import nearest
+from landcarbon.inventory.reference import keys_below, places_of
+from read_samples import settings_text
+
+ROOT = Path(__file__).resolve().parent.parent
+GOOD = settings_text()
+
+
+def fault(text: str) -> str:
+    with pytest.raises(SettingsError, match=".") as caught:
+        parse_settings(text, "inventory.toml")
+    return str(caught.value)
+
+
+def line_with(text: str, part: str) -> int:
+    return next(number for number, line in enumerate(text.splitlines(), start=1) if part in line)
+
+
+class TestLoading:
+    def test_defaults_are_filled_in(self):
+        settings = parse_settings(GOOD)
+        assert settings.inventory.confidence == 0.95
+        assert settings.inventory.seed == 1
+        assert settings.plots.design.kind == "circle"
+        assert settings.plots.subplots == 1
+        assert settings.surveys["2014"].plots_without_rows == "missing"
+        assert settings.parcels is None
+        assert settings.heights.missing == "curve"
+        assert settings.equations.out_of_range == "flag"
+        assert settings.pools.above_ground.how == "measured"
+
+    def test_pools_not_mentioned_carry_a_reason(self):
+        pools = parse_settings(GOOD).pools
+        assert (pools.litter.how, pools.litter.reason) == ("not counted", "no measurements given")
+
+    def test_folder_and_path(self, tmp_path: Path):
+        path = tmp_path / "inventory.toml"
+        path.write_text(GOOD, encoding="utf-8")
+        settings = load_settings(path)
+        assert (settings.path, settings.folder) == (path, tmp_path)
+        assert load_settings(tmp_path).path == path
+
+    def test_byte_order_mark_and_windows_line_ends(self, tmp_path: Path):
+        path = tmp_path / "inventory.toml"
+        path.write_bytes(b"\xef\xbb\xbf" + GOOD.replace("\n", "\r\n").encode())
+        assert load_settings(path).inventory.name == "Tarn Side"
+
+    def test_settings_cannot_be_changed(self):
+        settings = parse_settings(GOOD)
+        with pytest.raises(ValueError, match="frozen"):
+            settings.inventory.name = "other"
+
+    def test_every_kind_of_design(self):
+        for design in (
+            'kind = "circle", radius_m = 5',
+            'kind = "rectangle", width_m = 20, length_m = 25',
+            'kind = "nested", circles = [ { radius_m = 4, dbh_min_cm = 0 }, { radius_m = 12.6, dbh_min_cm = 20 } ]',
+            'kind = "angle_count", basal_area_factor = 4',
+            'kind = "angle_count", basal_area_factor = 10, unit = "ft2/ac"',
+            'kind = "census", area_ha = 0.04',
+            'kind = "census"',
+        ):
+            settings = parse_settings(settings_text(plots=f'file = "p.csv"\ndesign = {{ {design} }}'))
+            assert settings.plots.design.kind == design.split('"')[1]
+
+    def test_dates_with_and_without_quotes(self):
+        text = settings_text(surveys='[surveys.a]\ntrees = "t.csv"\nsince = 2014-05-01\nuntil = "2014-10-31"')
+        survey = parse_settings(text).surveys["a"]
+        assert (survey.since, survey.until) == (dt.date(2014, 5, 1), dt.date(2014, 10, 31))
+
+    def test_species_inline_and_file_side_by_side(self):
+        settings = parse_settings(settings_text(more='[species]\nfile = "species.csv"\nEI = "Quercus robur"\n'))
+        assert settings.species.file == "species.csv"
+        assert settings.species.names == {"EI": "Quercus robur"}
+
+    def test_status_with_blank_code(self):
+        settings = parse_settings(settings_text(more='[status]\nL = "live"\n"" = "absent"\n'))
+        assert settings.status == {"L": "live", "": "absent"}
+
+    def test_dump_can_be_written_as_json(self):
+        dumped = parse_settings(GOOD).model_dump(mode="json")
+        assert dumped["plots"]["design"] == {"kind": "circle", "radius_m": 10.0}
+
+
+class TestFaults:
+    @pytest.mark.parametrize(
+        ("old", "new", "key", "told"),
+        [
+            ('name = "Tarn Side"', 'nam = "Tarn Side"', "inventory.nam", "Did you mean 'name'?"),
+            ('name = "Tarn Side"', "name = 5", "inventory.name", "5 is given, but text in quotes is wanted"),
+            ('region = "europe"', 'region = "europa"', "equations.region", "'north_america', 'europe', 'tropics'"),
+            ('kind = "circle"', 'kind = "round"', "plots.design.kind", "Accepted: circle, rectangle, nested"),
+            ('kind = "circle", ', "", "plots.design.kind", "this key is missing"),
+            ("radius_m = 10", "radius_m = -1", "plots.design.radius_m", "greater than 0"),
+            ("radius_m = 10", 'radius_m = "10"', "plots.design.radius_m", "a number is wanted"),
+            ("radius_m = 10", "radius_m = inf", "plots.design.radius_m", "a finite number is wanted"),
+            ("radius_m = 10", "radius = 10", "plots.design.radius", "Did you mean 'radius_m'?"),
+            ('trees = "trees.csv"', 'tree = "trees.csv"', "surveys.2014.tree", "Did you mean 'trees'?"),
+            ('trees = "trees.csv"', "", "surveys.2014", "no tree table"),
+        ],
+    )
+    def test_key_line_and_remedy(self, old: str, new: str, key: str, told: str):
+        text = GOOD.replace(old, new)
+        message = fault(text)
+        assert told in message
+        assert key in message
+        line = line_with(text, new or "[surveys.2014]") if key != "plots.design.kind" else line_with(text, "design")
+        assert f"line {line}, {key}" in message
+
+    def test_all_faults_at_once_in_the_order_of_lines(self):
+        text = GOOD.replace('name = "Tarn Side"', "confidence = 2").replace("europe", "mars")
+        text += '\n[units.trees]\ndbh = "kg"\n[columns.trees]\nheigth = "h"\n'
+        message = fault(text)
+        assert message.startswith("inventory.toml: 5 faults")
+        lines = [int(number) for number in re.findall(r"line (\d+),", message)]
+        assert lines == sorted(lines)
+        for part in ("inventory.name: this key is missing", "inventory.confidence", "equations.region", "units.trees.dbh"):
+            assert part in message
+        assert "columns.trees.heigth: unknown column. Did you mean 'height'?" in message
+
+    def test_key_in_the_wrong_table(self):
+        message = fault(settings_text(more="[estimation]\nconfidence = 0.9\n"))
+        assert "belongs under [inventory]" in message
+
+    def test_missing_region_lists_the_regions(self):
+        text = GOOD.replace('region = "europe"', "")
+        message = fault(text)
+        assert "region = one of north_america, europe, tropics, mangrove, australia" in message
+        assert f"line {line_with(text, '[equations]')}, equations.region" in message
+
+    def test_missing_tables(self):
+        message = fault('[inventory]\nname = "x"\n')
+        for part in ("Give a table [plots]", "Give at least one survey", "a table [equations] with region"):
+            assert part in message
+
+    def test_no_survey(self):
+        assert "surveys" in fault(GOOD.replace('[surveys.2014]\ntrees = "trees.csv"', "[surveys]"))
+
+    @pytest.mark.parametrize(
+        "second", ["{ radius_m = 3, dbh_min_cm = 20 }", "{ radius_m = 12, dbh_min_cm = 5 }", "{ radius_m = 4, dbh_min_cm = 9 }"]
+    )
+    def test_nested_circles_must_grow(self, second: str):
+        design = f'kind = "nested", circles = [ {{ radius_m = 4, dbh_min_cm = 5 }}, {second} ]'
+        message = fault(settings_text(plots=f'file = "p.csv"\ndesign = {{ {design} }}'))
+        assert "a larger radius_m and a larger dbh_min_cm" in message
+
+    @pytest.mark.parametrize(
+        ("more", "told"),
+        [
+            ('[pools]\nlitter = "not counted"', "needs a reason"),
+            ('[pools]\nlitter = "measured"', "'measured' is not available for this pool"),
+            ('[pools]\nsoil = { how = "guess" }', "'guess' is not accepted"),
+            ('[pools]\nbelow_ground = { how = "ratio", model = "nowhere99" }', "no root model 'nowhere99'"),
+            ('[pools]\nbelow_ground = { how = "ratio", mode = "x" }', "Did you mean 'model'?"),
+            ('[heights]\nform = "naslundd"', "Did you mean 'naslund'?"),
+            ('[heights]\nmissing = "curv"', "Did you mean 'curve'?"),
+            ('[equations.species]\noak = "nothing"', "no equation 'nothing'"),
+            ('[units.tree]\ndbh = "cm"', "Did you mean 'trees'?"),
+            ('[units.trees]\ntree = "cm"', "this column has no unit"),
+            ('[units.trees]\ndbh = "kg"', "'kg' is not a unit of length. Accepted: mm, cm"),
+            ('[units.plots]\nslope = "ha"', "'ha' is not a unit of slope"),
+            ('[strata]\nunit = "kg"', "'kg' is not a unit of area"),
+            ('[strata]\nareas = { oak = -1 }', "greater than 0"),
+            ('[strata]\nareas = { oak = 1 }\nfile = "s.csv"', "given both here and in a file"),
+            ('[strata]\nareas = { oak = 1 }\nmerge = { ash = "oac" }', "Did you mean 'oak'?"),
+            ('[strata]\nmerge = { a = "b", b = "c" }', "is itself folded into another"),
+            ('[dates]\nformat = "day"', "does not tell day, month and year"),
+            ('[dates]\nformat = "%m/%Y"', "does not tell day, month and year"),
+            ('[status]\nX = "alive"', "'alive' is not accepted"),
+            ('[columns.trees]\ndbh = 5', "text in quotes is wanted"),
+        ],
+    )
+    def test_other_faults(self, more: str, told: str):
+        text = settings_text(more=more)
+        message = fault(text)
+        assert told in message
+        first, last = (line_with(text, more.splitlines()[at]) for at in (0, -1))
+        lines = [int(number) for number in re.findall(r"line (\d+)", message)]
+        assert lines
+        assert all(first <= line <= last for line in lines)
+
+    def test_tree_tables_given_twice(self):
+        message = fault(settings_text(more='[trees]\nfile = "all.csv"'))
+        assert "surveys.2014.trees: tree tables are given both here and under [trees]" in message
+
+    def test_weighted_design_needs_its_column(self):
+        plots = 'file = "p.csv"\ndesign = { kind = "weighted" }'
+        assert "expansion = 'THEIR COLUMN' under [columns.trees]" in fault(settings_text(plots=plots))
+        parse_settings(settings_text(plots=plots, more='[columns.trees]\nexpansion = "tph"'))
+
+    def test_slope_correction_needs_lengths(self):
+        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 4 }\nslope_correction = "design on slope"'
+        assert "no lengths laid out along the slope" in fault(settings_text(plots=plots))
+
+    def test_window_backwards(self):
+        surveys = '[surveys.2014]\ntrees = "t.csv"\nsince = 2014-10-01\nuntil = 2014-05-01'
+        assert "until lies before since" in fault(settings_text(surveys=surveys))
+
+    def test_bad_day(self):
+        surveys = '[surveys.2014]\ntrees = "t.csv"\nsince = "1.5.2014"'
+        assert "year-month-day" in fault(settings_text(surveys=surveys))
+
+
+class TestUnreadable:
+    def test_missing_file_suggests_a_neighbour(self, tmp_path: Path):
+        (tmp_path / "inventory.toml").write_text(GOOD)
+        with pytest.raises(SettingsError, match=r"no such file.*Did you mean 'inventory\.toml'"):
+            load_settings(tmp_path / "inventry.toml")
+
+    def test_missing_folder(self, tmp_path: Path):
+        with pytest.raises(SettingsError, match="no such file"):
+            load_settings(tmp_path / "no" / "inventory.toml")
+
+    def test_folder(self, tmp_path: Path):
+        with pytest.raises(SettingsError, match=r"a folder without an inventory\.toml"):
+            load_settings(tmp_path)
+
+    @pytest.mark.parametrize("data", [b"", b" \n\n", b"\xef\xbb\xbf"])
+    def test_empty(self, tmp_path: Path, data: bytes):
+        path = tmp_path / "inventory.toml"
+        path.write_bytes(data)
+        with pytest.raises(SettingsError, match="the file is empty"):
+            load_settings(path)
+
+    def test_not_utf8(self, tmp_path: Path):
+        path = tmp_path / "inventory.toml"
+        path.write_bytes('[inventory]\nname = "Wäldchen"\n'.encode("latin-1"))
+        with pytest.raises(SettingsError, match=r"line 2 is not UTF-8 text.*Save the file as UTF-8"):
+            load_settings(path)
+
+    @pytest.mark.parametrize(
+        ("text", "line"),
+        [
+            ('[inventory]\nname = Tarn\n', 2),
+            ('[inventory\nname = "x"\n', 1),
+            ('[inventory]\nname = "x"\nname = "y"\n', 3),
+            ('[inventory]\nname = "x', 2),
+            ("a = 1\n\n[plots]\nfile = \"C:\\data\"\n", 4),
+        ],
+    )
+    def test_broken_syntax(self, text: str, line: int):
+        message = fault(text)
+        assert f"inventory.toml, line {line}: not readable as TOML" in message
+
+    def test_error_is_a_user_error(self):
+        with pytest.raises(UserError, match="not readable as TOML"):
+            parse_settings("=")
+
+
+class TestLines:
+    TEXT = '''# head
+[inventory]
+name = "x # not a comment"
+
+[plots]
+design = { kind = "nested", circles = [
+  { radius_m = 4, dbh_min_cm = 5 },   # small
+  { radius_m = 12.6, dbh_min_cm = 20 },
+] }
+[surveys."20 14"]
+trees = ["a.csv",
+  'b.csv']
+note = """
+[fake]
+key = 1
+"""
+[columns]
+trees.dbh = "d"
+[[many]]
+k = 1
+[[many]]
+k = 2
+[status]
+"" = "absent"
+"a\\"b" = "live"
+'''
+
+    @pytest.mark.parametrize(
+        ("path", "line"),
+        [
+            (("inventory",), 2),
+            (("inventory", "name"), 3),
+            (("plots", "design", "kind"), 6),
+            (("plots", "design", "circles", 0, "radius_m"), 7),
+            (("plots", "design", "circles", 1, "dbh_min_cm"), 8),
+            (("surveys", "20 14"), 10),
+            (("surveys", "20 14", "trees", 1), 12),
+            (("surveys", "20 14", "note"), 13),
+            (("columns", "trees", "dbh"), 18),
+            (("many", 1, "k"), 22),
+            (("status", ""), 24),
+            (("status", 'a"b'), 25),
+        ],
+    )
+    def test_line_of_key(self, path: tuple[str | int, ...], line: int):
+        assert key_lines(self.TEXT)[path] == line
+
+    def test_text_in_quotes_is_no_key(self):
+        assert ("fake",) not in key_lines(self.TEXT)
+
+    def test_missing_key_falls_back_to_its_table(self):
+        lines = key_lines(self.TEXT)
+        assert line_of(lines, ("inventory", "crs")) == 2
+        assert line_of(lines, ("elsewhere", "crs")) is None
+
+    @given(
+        st.dictionaries(
+            st.text(st.characters(codec="utf-8", exclude_categories=["Cc", "Cs"]), max_size=6),
+            st.one_of(
+                st.integers(-9, 9), st.booleans(), st.lists(st.text("ab]#,", max_size=4), max_size=3), st.text('x}"\\')
+            ),
+            min_size=1,
+            max_size=6,
+        )
+    )
+    def test_every_key_of_a_random_table_is_found(self, table: dict[str, object]):
+        """Identity: keys written one per line are found on that line; the reader of TOML is the standard library's."""
+
+        def quoted(text: str) -> str:
+            return '"' + text.replace("\\", "\\\\").replace('"', '\\"') + '"'
+
+        def value(item: object) -> str:
+            if isinstance(item, bool):
+                return str(item).lower()
+            if isinstance(item, list):
+                return "[\n" + ", ".join(quoted(part) for part in item) + "]"
+            return quoted(item) if isinstance(item, str) else str(item)
+
+        text, wanted = "[t]\n", {}
+        for key, item in table.items():
+            wanted["t", key] = text.count("\n") + 1
+            text += f"{quoted(key)} = {value(item)}\n"
+        assert set(tomllib.loads(text)["t"]) == set(table)
+        lines = key_lines(text)
+        assert {path: lines[path] for path in wanted} == wanted
+
+
+class TestReference:
+    def test_every_key_has_a_meaning(self):
+        assert [row.key for row in settings_reference() if not row.meaning] == []
+
+    def test_known_keys(self):
+        assert keys_below(("surveys", "2014")) == ["trees", "visits", "since", "until", "plots_without_rows"]
+        assert keys_below(("pools", "litter")) == ["how", "model", "reason"]
+        assert "radius_m" in keys_below(("plots", "design", "circles", 0))
+        assert places_of("seed") == ["inventory"]
+
+    def test_page_is_current(self):
+        page = (ROOT / "docs" / "inventory-file.md").read_text(encoding="utf-8")
+        assert page == inventory_page(), "run: python -m landcarbon.inventory"
+
+    def test_template_is_short_and_sound(self):
+        settings = parse_settings(template_text())
+        assert settings.inventory.name
+        assert len(template_text().splitlines()) <= 35
+
+    def test_nearest(self):
+        assert nearest("DHB", ["dbh", "height"]) == "dbh"
+        assert nearest("zzz", ["dbh", "height"]) is None

@@ -1,0 +1,142 @@
+"""What the terminal shows: short, within a hundred columns, and nothing from a file drives the console."""
+
+from __future__ import annotations
+
+import dataclasses
+import io
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+from publish_sample import HOSTILE, sample_results
+from rich.console import Console
+
+from landcarbon.errors import UserError
+from landcarbon.publish.figures import MINUS, decimals_for, figure, interval
+from landcarbon.publish.terminal import StepStatus, print_check, print_equations, print_results, print_trace
+from landcarbon.publish.words import CAUTIONS, SIGN_RULE
+from landcarbon.trace import Trace
+
+
+def shown(printer, *args, **options) -> str:
+    console = Console(file=io.StringIO(), width=100, highlight=False)
+    printer(*args[:1], console, *args[1:], **options)
+    return console.file.getvalue()
+
+
+# JCGM 100:2008, section 7.2.6: the uncertainty to at most two significant digits, the estimate to the same decimals;
+# its example: a value 10.057 62 ohm with uncertainty 27 milliohm is given as 10.058 ohm.
+@pytest.mark.parametrize(
+    ("value", "spread", "text"), [(10.05762, 0.027, "10.058"), (118.4, 9.472, "118.4"), (1698.2, 176.0, "1,698")]
+)
+def test_decimals_follow_the_standard_error(value, spread, text):
+    assert figure(value, decimals_for(spread, value)) == text
+
+
+@pytest.mark.parametrize(
+    ("value", "decimals", "text"),
+    [(-1234.6, 0, f"{MINUS}1,235"), (-0.04, 1, "0.0"), (np.nan, 1, "\u2013"), (0.0, 1, "0.0"), (3.0, 0, "+3")],
+)
+def test_figures(value, decimals, text):
+    assert figure(value, decimals, sign=True) == text
+
+
+def test_interval_without_bounds():
+    assert interval(np.nan, 3.0, 1) == "\u2013"
+    assert decimals_for(np.nan, np.nan) == 1
+    assert decimals_for(0.0, 0.0) == 1
+
+
+def test_overview():
+    text = shown(print_results, sample_results(), folder=Path("/somewhere/results"))
+    assert max(map(len, text.splitlines())) <= 100
+    flat = " ".join(text.split())
+    for part in (
+        "Harrow Fell",
+        "90 % interval",
+        "all counted pools",
+        "Change of the inventory",
+        "set aside",
+        "size slip",
+        "3.75 ha not in the total",
+        SIGN_RULE,
+        CAUTIONS,
+        "map.html",
+        *sample_results().marks,
+    ):
+        assert part in flat, part
+
+
+@pytest.mark.parametrize("by", ["stratum", "parcel"])
+def test_units(by):
+    text = shown(print_results, sample_results(), by=by)
+    assert max(map(len, text.splitlines())) <= 100
+    assert f"Stocks by {by}" in text
+
+
+def test_unknown_unit():
+    with pytest.raises(UserError, match="'county' is not a unit"):
+        shown(print_results, sample_results(), by="county")
+
+
+def test_large_figures_still_fit():
+    sample = sample_results(name="A very long name of an inventory that somebody gave " * 3)
+    columns = ["stock_t_c", "stock_se", "stock_low", "stock_high", "area_ha"]
+    stocks = sample.stocks.assign(**{name: sample.stocks[name] * 1e4 for name in columns})
+    text = shown(print_results, dataclasses.replace(sample, stocks=stocks))
+    assert max(map(len, text.splitlines())) <= 100
+
+
+def test_text_from_files_is_no_markup_and_no_control_code():
+    name = "[bold red]x[/bold red] \x1b[31m"
+    text = shown(print_results, sample_results(name=name, parcels=(*HOSTILE, "e")), by="parcel")
+    assert "[bold red]x[/bold red]" in text
+    assert "\x1b" not in text
+
+
+def test_no_total_shows_the_strata_instead():
+    sample = sample_results()
+    stocks = sample.stocks[sample.stocks["by"] != "inventory"]
+    change = sample.change.iloc[:0]
+    text = shown(print_results, dataclasses.replace(sample, stocks=stocks, change=change))
+    assert "Stocks by stratum" in text
+    assert "Change of" not in text
+
+
+def test_check():
+    text = shown(print_check, sample_results())
+    assert "trees.csv line 4, plot P1: diameter ten times that of the other survey [dbh_cm 310.0]" in text
+    empty = dataclasses.replace(sample_results(), findings=sample_results().findings.iloc[:0])
+    assert "No findings" in shown(print_check, empty)
+
+
+def test_trace():
+    sample = sample_results()
+    row = sample.stocks.query("by == 'parcel' and unit == 'North bank' and survey == '2024' and pool == 'all'").iloc[0]
+    plots = sample.plots.query("survey == '2024' and pool == 'all'").head(3).assign(date=pd.NaT, stratum="oak")
+    trees = pd.DataFrame(
+        {
+            "file": ["trees.csv"], "row": [7], "plot": ["P1"], "tree": ["12"], "species": ["QR"],
+            "scientific_name": ["Quercus robur"], "dbh_cm": [31.0], "equation": ["some equation"],
+            "carbon_kg": [310.5], "density_t_c_ha": [6.2],
+        }
+    )  # fmt: skip
+    aside = sample.findings[~sample.findings["used"]]
+    text = shown(print_trace, Trace(row, plots, trees, aside), 10)
+    for part in ("North bank", "131 t C/ha, SE 10", "trees.csv 7", "Quercus robur", "set aside: 2", "Trees: 1 counted"):
+        assert part in text, part
+
+
+def test_equations():
+    columns = ["equation_id", "taxon", "component", "region", "dbh_min_cm", "dbh_max_cm", "n_trees", "known"]
+    rows = pd.DataFrame([["one", "Quercus", "agb", "europe", 5.0, np.nan, 120, "read"]] * 70, columns=columns)
+    assert "and 10 more" in shown(print_equations, rows)
+    assert "No equation matches" in shown(print_equations, rows.iloc[:0])
+
+
+def test_status_is_silent_where_nobody_watches():
+    console = Console(file=io.StringIO(), width=100)
+    with StepStatus(console) as status:
+        status("reading [the] files")
+    assert console.file.getvalue().strip() == ""
