@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from functools import cache
-from math import inf
+from math import isnan
 from typing import NamedTuple
 
 from allometry._data import read_data
@@ -72,20 +72,15 @@ class _Rule(NamedTuple):
 
 @cache
 def _rules() -> dict[tuple[str, str], list[_Rule]]:
-    """Map rank and taxon to the groups told by it; open ends of a density class are infinite."""
     table = read_data("group_rules", numbers=("density_from", "density_below"))
-    found: dict[tuple[str, str], list[_Rule]] = {}
-    for rank, taxon, source, equation, low, high in zip(
-        table["rank"],
-        table["taxon"],
-        table["source_key"],
-        table["equation_id"],
-        table["density_from"].fillna(-inf),
-        table["density_below"].fillna(inf),
-        strict=True,
-    ):
-        found.setdefault((rank, taxon), []).append(_Rule(source, equation, low, high))
-    return found
+    rules: dict[tuple[str, str], list[_Rule]] = {}
+    bounds = table[["density_from", "density_below"]].to_numpy(dtype=float)
+    for row, (low, high) in zip(table.itertuples(index=False), bounds, strict=True):
+        source, equation, rank, taxon = (
+            str(getattr(row, name)) for name in ("source_key", "equation_id", "rank", "taxon")
+        )
+        rules.setdefault((rank, taxon), []).append(_Rule(source, equation, low, high))
+    return rules
 
 
 def _by_rule(rank: str, name: str, density: float) -> list[Listed]:
@@ -95,10 +90,11 @@ def _by_rule(rank: str, name: str, density: float) -> list[Listed]:
     """
     found = []
     for rule in _rules().get((rank, name), []):
-        if rule.density_from <= density < rule.density_below:
-            classed = rule.density_from > -inf or rule.density_below < inf
-            remark = f" of wood density {density:.2f} g/cm3" if classed else ""
-            found.append(Listed(rule.source_key, rule.equation_id, f"its group holds {name}{remark}"))
+        if density < rule.density_from or density >= rule.density_below:
+            continue
+        by_density = not (isnan(rule.density_from) and isnan(rule.density_below))
+        words = f"its group holds {name}" + (f" of wood density {density:.2f} g/cm3" if by_density else "")
+        found.append(Listed(rule.source_key, rule.equation_id, words))
     return found
 
 

@@ -266,7 +266,7 @@ def check_reasons(row: RawRow, faults: Faults) -> None:
     """Check that a row set aside says why, and a correction has its residual error."""
     if (row.values["usable"] == "false") != bool(row.values["usable_reason"]):
         faults.add(row.place, "a row has a usable_reason if, and only if, usable is false")
-    if row.values["correction"] and row.values["residual_scale"] not in ("ln", "m"):
+    if row.values["correction"] and row.values["residual_scale"] != "ln":
         faults.add(row.place, "a correction exp(s^2/2) needs the residual error in ln units")
     if not row.values["equation_id"] or not row.values["where"]:
         faults.add(row.place, "equation_id and where must not be empty")

@@ -63,7 +63,7 @@ class Inventory:
         return [str(name) for name in self.results.surveys["survey"]]
 
     def check(self) -> pd.DataFrame:
-        """Findings of reading, checking and computing, one row each."""
+        """Return the findings of reading, checking and computing, one row each."""
         return self.results.findings.copy()
 
     def stocks(self, by: str = "parcel", *, pool: str | None = None) -> pd.DataFrame:

@@ -27,8 +27,8 @@ if TYPE_CHECKING:
 __all__ = ["assemble", "long_plots", "run_stage"]
 
 STANDING_DEAD_NOTE = (
-    "Dead wood holds standing dead trees only, at the dry mass of a live tree of their diameter: without deductions for "
-    "decay or lost tops it is an upper figure."
+    "Dead wood holds standing dead trees only, at the dry mass of a live tree of their diameter: without deductions "
+    "for decay or lost tops it is an upper figure."
 )
 
 
@@ -116,4 +116,5 @@ def _equations_used(stage: PlotStage) -> list[dict[str, Any]]:
     table = stage.plan.assignments
     table = table[table["species"].isin(counts.index)]
     wanted = ["species", "accepted_name", "equation_id", "rung", "known", "reason", "wood_density_g_cm3"]
-    return table[wanted].assign(trees=table["species"].map(counts).astype(int)).to_dict(orient="records")
+    rows = table[wanted].assign(trees=table["species"].map(counts).astype(int)).to_dict(orient="records")
+    return [{str(name): value for name, value in row.items()} for row in rows]

@@ -17,11 +17,7 @@ from landcarbon.estimate.ratio import MIN_PLOTS, Sample, counts
 from landcarbon.estimate.tables import Plots, Units, read_plots
 from landcarbon.findings import empty_findings, join_findings, make_findings
 
-__all__ = ["CHANGE_COLUMNS", "SIGN_RULE", "estimate_change"]
-
-SIGN_RULE = (
-    "Positive change is carbon gained by the land; in CO2 a removal from the air is negative, an emission positive."
-)
+__all__ = ["CHANGE_COLUMNS", "estimate_change"]
 
 CHANGE_COLUMNS = [
     "by",

@@ -66,7 +66,9 @@ def demo(
     results = _run(project, project.parent / "results", tiles=False)
     first = results.stocks.query("by == 'parcel'").dropna(subset="density_t_c_ha")["unit"].iloc[0]
     out.print("\nWhat to look at:")
-    out.print(f"  - the files a crew handed over, and what is wrong with them on purpose: {project.parent}", soft_wrap=True)
+    out.print(
+        f"  - the files a crew handed over, and what is wrong with them on purpose: {project.parent}", soft_wrap=True
+    )
     out.print("  - what the checks found: results/findings.csv; every row is used or accounted for")
     out.print("  - the map: switch between surveys and change, point at a parcel")
     folder_of_results = project.parent / "results"

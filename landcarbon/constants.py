@@ -18,7 +18,7 @@ __all__ = [
 
 def _read() -> dict[str, float]:
     path = resources.files("landcarbon.factors").joinpath("constants.csv")
-    with path.open(encoding="utf-8", newline="") as handle:
+    with path.open(encoding="utf-8") as handle:
         return {row["name"]: float(row["value"]) for row in csv.DictReader(handle)}
 
 

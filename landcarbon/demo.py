@@ -12,8 +12,6 @@ from landcarbon.inventory import template_text
 
 __all__ = ["copy_demo", "demo_source", "write_template"]
 
-_LEFT_OUT = {"__pycache__", "make_demo.py"}
-
 
 def demo_source() -> Traversable:
     """Folder of the demo files: inside the installed package, or beside it in a checkout."""
@@ -36,7 +34,7 @@ def copy_demo(folder: Path) -> Path:
     if folder.exists() and not folder.is_dir():
         raise ResultsError(f"{folder} is a file", remedy="Name a folder for the demo.")
     source = demo_source()
-    names = [entry for entry in source.iterdir() if entry.name not in _LEFT_OUT and entry.is_file()]
+    names = [entry for entry in source.iterdir() if entry.is_file() and not entry.name.endswith(".py")]
     if folder.is_dir() and any(folder.iterdir()) and not (folder / "inventory.toml").exists():
         raise ResultsError(f"{folder} holds other files", remedy="Name an empty or a new folder for the demo.")
     try:
@@ -45,7 +43,9 @@ def copy_demo(folder: Path) -> Path:
             with entry.open("rb") as given, (folder / entry.name).open("wb") as target:
                 shutil.copyfileobj(given, target)
     except OSError as error:
-        raise ResultsError(f"cannot write the demo to {folder}: {error.strerror}", remedy="Name another folder.") from error
+        raise ResultsError(
+            f"cannot write the demo to {folder}: {error.strerror}", remedy="Name another folder."
+        ) from error
     return folder / "inventory.toml"
 
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from functools import cache
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -95,7 +96,7 @@ def make_findings(
     count = 1 if rows is None else len(rows)
     if count == 0:
         return empty_findings()
-    data: dict[str, object] = {name: "" for name in _TEXT}
+    data: dict[str, Any] = {name: "" for name in _TEXT}
     data.update(row=pd.NA, row_id=pd.NA, carbon_kg=np.nan)
     if rows is not None:
         for name in ("file", "row", "row_id", "survey", "plot", "tree"):
@@ -122,9 +123,9 @@ def _as_text(values: pd.Series) -> np.ndarray:
     return text.map(str).to_numpy(dtype=object)
 
 
-def _typed(data: dict[str, object], count: int) -> pd.DataFrame:
+def _typed(data: dict[str, Any], count: int) -> pd.DataFrame:
     index = pd.RangeIndex(count)
-    columns = {}
+    columns: dict[str, pd.Series] = {}
     for name in FINDING_COLUMNS:
         value = data[name]
         if name in _TEXT:
@@ -133,11 +134,11 @@ def _typed(data: dict[str, object], count: int) -> pd.DataFrame:
         elif name == "used":
             columns[name] = pd.Series(value, index=index, dtype=bool)
         else:
-            kind = "float64" if name == "carbon_kg" else "Int64"
-            columns[name] = pd.Series(value, index=index).astype(kind)
+            column = pd.Series(value, index=index)
+            columns[name] = column.astype("float64") if name == "carbon_kg" else column.astype("Int64")
     return pd.DataFrame(columns)
 
 
-def _text(value: object, index: pd.RangeIndex) -> pd.Series:
+def _text(value: Any, index: pd.RangeIndex) -> pd.Series:
     column = pd.Series(value if not isinstance(value, pd.Series) else value.to_numpy(), index=index, dtype="object")
     return column.where(column.notna(), "").map(str)

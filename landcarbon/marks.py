@@ -6,6 +6,7 @@ import pandas as pd
 
 __all__ = ["output_marks"]
 
+
 def output_marks(plot_pools: pd.DataFrame, pools: dict[str, str], notes: list[str]) -> list[str]:
     """Sentences every output has to carry.
 

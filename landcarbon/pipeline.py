@@ -17,14 +17,14 @@ from allometry.catalogue import load_catalogue
 from allometry.heights import impute, published_height
 from allometry.roots import default_model, level
 from landcarbon.change import estimate_change
-from landcarbon.check.run import run_checks
 from landcarbon.check.equations import memory_findings, range_findings, species_findings
+from landcarbon.check.run import run_checks
 from landcarbon.errors import UserError
 from landcarbon.estimate.stocks import estimate_stocks
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.plots import TREE_POOLS, PlotDesign, expansion_factors, plot_pools, plot_sums, visit_index
-from landcarbon.publish.results import CHANGE_COLUMNS
 from landcarbon.pools.trees import TreePlan, combine_stems, make_tree_plan, tree_biomass, tree_findings
+from landcarbon.publish.results import CHANGE_COLUMNS
 from landcarbon.read.load import load_inputs
 
 if TYPE_CHECKING:
@@ -162,9 +162,7 @@ def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.Dat
     return stocks, change, join_findings(found)
 
 
-def change_between(
-    stage: PlotStage, settings: Settings, since: str, until: str
-) -> tuple[pd.DataFrame, pd.DataFrame]:
+def change_between(stage: PlotStage, settings: Settings, since: str, until: str) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Estimate change between any two surveys.
 
     Returns
@@ -261,7 +259,10 @@ def _fill_heights(trees: pd.DataFrame, settings: Settings) -> tuple[pd.DataFrame
     imputed = int((source == "curve").sum())
     findings = empty_findings()
     if imputed:
-        fitted = ", ".join(f"{row.species or 'all species'} (n {row.n}, RMSE {row.rmse_m:.1f} m)" for row in curves.itertuples())
+        served = curves[curves["n"] > 0]
+        fitted = ", ".join(
+            f"{str(row.species) or 'all species'} (n {row.n}, RMSE {row.rmse_m:.1f} m)" for row in served.itertuples()
+        )
         findings = make_findings(
             "height from curve",
             severity="note",
@@ -310,6 +311,6 @@ def _carbon_at_stake(findings: pd.DataFrame, trees: pd.DataFrame) -> pd.DataFram
     known = findings["row_id"].notna()
     if not known.any():
         return findings
-    carbon = trees["carbon_kg"].to_numpy()
-    rows = findings.loc[known, "row_id"].astype(np.int64).to_numpy()
-    return findings.assign(carbon_kg=findings["carbon_kg"].where(~known, pd.Series(carbon[rows], findings.index[known])))
+    carbon = trees.set_index("row_id")["carbon_kg"]
+    at_stake = findings.loc[known, "row_id"].astype(np.int64).map(carbon)
+    return findings.assign(carbon_kg=findings["carbon_kg"].where(~known, at_stake.reindex(findings.index)))

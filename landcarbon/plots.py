@@ -11,9 +11,10 @@ import numpy as np
 import pandas as pd
 
 from allometry.roots import stand_roots
-from landcarbon.constants import KG_PER_T, M2_PER_FT2, M2_PER_HECTARE, HECTARES_PER_ACRE
+from landcarbon.constants import HECTARES_PER_ACRE, KG_PER_T, M2_PER_FT2, M2_PER_HECTARE
 from landcarbon.errors import SettingsError
 from landcarbon.findings import empty_findings, join_findings, make_findings
+from landcarbon.pools.trees import has_status
 
 __all__ = ["TREE_POOLS", "PlotDesign", "PlotSums", "expansion_factors", "plot_pools", "plot_sums", "visit_index"]
 
@@ -122,9 +123,7 @@ def _positions(values: pd.Series, index: pd.Index) -> np.ndarray:
     return np.where(found < 0, len(lookup), found)
 
 
-def expansion_factors(
-    trees: pd.DataFrame, visits: pd.DataFrame, index: np.ndarray, design: PlotDesign
-) -> np.ndarray:
+def expansion_factors(trees: pd.DataFrame, visits: pd.DataFrame, index: np.ndarray, design: PlotDesign) -> np.ndarray:
     """Stems per hectare that one tallied tree stands for.
 
     Parameters
@@ -196,29 +195,29 @@ def plot_sums(
     conifer, memory : ndarray of bool
         Per tree: conifer; equation known only from memory.
     """
-    status = trees["status"].cat
-    codes = status.codes.to_numpy()
     counts = trees["used"].to_numpy() & (index >= 0)
-    per_ha = np.where(counts, trees["expansion"].to_numpy(), 0.0) / KG_PER_T
-    live = counts & (codes == status.categories.get_indexer(["live"])[0])
-    dead = counts & (codes == status.categories.get_indexer(["dead"])[0])
+    live = counts & has_status(trees["status"], "live")
+    dead = counts & has_status(trees["status"], "dead")
+    per_ha = trees["expansion"].to_numpy() / KG_PER_T
     at = np.where(counts, index, 0)
+    mass = np.where(live, trees["biomass_kg"].to_numpy() * per_ha, 0.0)
+    carbon = trees["carbon_kg"].to_numpy() * per_ha
 
     def total(values: np.ndarray, where: np.ndarray) -> np.ndarray:
+        # Mostly a small share of the trees: gathering them first is cheaper than summing zeros.
         rows = np.flatnonzero(where)
-        return np.bincount(at[rows], weights=values[rows] * per_ha[rows], minlength=count)
+        return np.bincount(at[rows], weights=values[rows], minlength=count)
 
-    biomass = trees["biomass_kg"].to_numpy()
-    roots = trees["root_kg"].to_numpy() if "root_kg" in trees else np.zeros(len(trees))
+    roots = trees["root_kg"].to_numpy() * per_ha if "root_kg" in trees else None
     return PlotSums(
-        biomass=total(biomass, live),
-        carbon=total(trees["carbon_kg"].to_numpy(), live),
-        conifer=total(biomass, live & conifer),
-        roots=total(roots, live),
-        dead_carbon=total(trees["carbon_kg"].to_numpy(), dead),
-        beyond_range=total(biomass, live & trees["out_of_range"].to_numpy()),
-        memory=total(biomass, live & memory),
-        trees=np.bincount(at[live | dead], minlength=count).astype(float),
+        biomass=np.bincount(at, weights=mass, minlength=count),
+        carbon=np.bincount(at, weights=np.where(live, carbon, 0.0), minlength=count),
+        conifer=total(mass, live & conifer),
+        roots=np.zeros(count) if roots is None else total(roots, live),
+        dead_carbon=total(carbon, dead),
+        beyond_range=total(mass, live & trees["out_of_range"].to_numpy()),
+        memory=total(mass, live & memory),
+        trees=np.bincount(at, weights=live | dead, minlength=count),
     )
 
 

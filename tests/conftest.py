@@ -16,7 +16,5 @@ def reference() -> Path:
     given = os.environ.get("LANDCARBON_REFERENCE")
     folder = Path(given) if given else ROOT.parent / "shared"
     if not (folder / "real").is_dir() or not (folder / "facts").is_dir():
-        pytest.skip(
-            f"reference data not found at {folder}; set LANDCARBON_REFERENCE to a folder with real/ and facts/"
-        )
+        pytest.skip(f"reference data not found at {folder}; set LANDCARBON_REFERENCE to a folder with real/ and facts/")
     return folder

@@ -20,12 +20,8 @@ from hypothesis import strategies as st
 from allometry.catalogue import Catalogue, component_biomass, load_catalogue, read_catalogue
 from allometry.errors import AllometryError, CatalogueError, MissingInputError, NotAMassError, UnknownEquationError
 from allometry.forms import FORMS
-from allometry.screening import screen, screening_height
 
 ROOT = Path(__file__).resolve().parent.parent
-sys.path.insert(0, str(ROOT / "tools"))
-from equation_page import ENFOR_END, ENFOR_START, page  # noqa: E402
-
 TABLES = files("allometry") / "equations"
 MASS = {"kg", "g", "t"}
 
@@ -46,7 +42,7 @@ def masses(catalogue: Catalogue) -> pd.DataFrame:
 # ---------------------------------------------------------------- what is in it
 
 
-def test_rows_of_both_fact_sheets_are_all_here(catalogue, reference):
+def test_all_gathered_rows_are_all_here(catalogue, reference):
     sheets = ["na_equations.csv", "world_equations.csv"]
     facts = pd.concat([pd.read_csv(reference / "facts" / "allometry" / s) for s in sheets])
     assert not set(facts["equation_id"]) - set(catalogue.table["equation_id"])
@@ -295,7 +291,7 @@ def test_out_of_range_flags_only_printed_ends(catalogue):
 
 
 def test_negative_component_is_zero_and_flagged(catalogue):
-    # the fact sheet on ruizpeinado2012 says that medium branches turn negative for tall trees of 30 cm: read as zero
+    # reference notes on ruizpeinado2012: medium branches turn negative for tall trees of 30 cm, read as zero
     row = catalogue.evaluate("rp12_quercus_faginea_medium_branches", 30.0, 24.0).iloc[0]
     assert row["biomass_kg"] == 0.0
     assert row["out_of_range"]
@@ -409,42 +405,7 @@ def test_components_of_the_national_ratios_add_up():
         component_biomass(10.0, 10.0, "conifer")
 
 
-# ---------------------------------------------------------------- screening and page
-
-
-def test_stored_screening_is_what_the_rule_gives(catalogue):
-    stored = pd.read_csv(str(TABLES / "screened.csv"))
-    pd.testing.assert_frame_equal(screen(catalogue), stored, check_dtype=False, rtol=1e-9)
-    flagged = catalogue.table[catalogue.table["screened"]]
-    assert set(flagged["equation_id"]) == set(stored["equation_id"])
-    assert ((stored["worst_ratio"] > 2) | (stored["worst_ratio"] < 0.5)).all()
-
-
-def test_screening_finds_a_planted_unit_slip(copy):
-    """A pine equation in grams that is labelled kg must be found."""
-    rows = list(csv.DictReader((copy / "zianis2005.csv").open(encoding="utf-8")))
-    at = next(i for i, r in enumerate(rows) if r["equation_id"] == "zianis05_343_pinus_sylvestris")
-    slip = next(i for i, r in enumerate(rows) if r["equation_id"] == "zianis05_155_picea_abies")
-    assert rows[at]["output_unit"] == rows[slip]["output_unit"] == "g"
-    change(copy, "zianis2005", slip, output_unit="kg")
-    found = screen(read_catalogue(copy)).set_index("equation_id")
-    assert found.loc["zianis05_155_picea_abies", "worst_ratio"] > 100
-
-
-def test_screening_height_is_an_ordinary_tree():
-    height = screening_height(np.array([10.0, 20.0, 40.0, 100.0]))
-    assert (np.diff(height) > 0).all()
-    np.testing.assert_allclose(height[:3], [10.0, 15.5, 20.6], atol=0.1)  # as the reason in rules.toml says
-
-
-def without_weighed_trees(text: str) -> str:
-    """Return the page without the part that needs the open file of trees."""
-    return text[: text.index(ENFOR_START)] + text[text.index(ENFOR_END) :]
-
-
-def test_page_is_what_the_generator_makes(catalogue):
-    stored = (ROOT / "docs" / "equations.md").read_text(encoding="utf-8")
-    assert without_weighed_trees(stored) == without_weighed_trees(page(catalogue, None))
+# ---------------------------------------------------------------- import
 
 
 def test_import_is_light():

@@ -11,9 +11,12 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
-from estimate_frames import cases, change, pick, plot_table, strata_table, survey_a_tables, whole
+from estimate_frames import POOL, cases, change, pick, plot_table, strata_table, survey_a_tables, whole
 
+from landcarbon.estimate.difference import difference_of_ratios
 from landcarbon.estimate.interval import t_half_width
+from landcarbon.estimate.ratio import Sample
+from landcarbon.estimate.tables import read_plots
 
 CASES = {name: case["expected"] for name, case in cases("computed").items()}
 CLOSED_FORM = 1e-9
@@ -61,13 +64,27 @@ def test_some_plots_repeated() -> None:
     frame, _ = change(table, strata)
     row, rows = whole(frame), pick(frame, "stratum")
     assert row["change_t_c"] / AREA_HA == pytest.approx(expected["change"], rel=CLOSED_FORM)
-    assert row["change_se"] / AREA_HA == pytest.approx(expected["se"], rel=CLOSED_FORM)
     assert list(rows["plots_since"]) == expected["n1"]
     assert list(rows["plots_until"]) == expected["n2"]
     assert list(rows["plots_paired"]) == expected["m"]
     assert row["method"] == "difference of ratio means, partly paired"
+    # The case takes the variance in another form (next test, to the last digit). Both are unbiased for the same
+    # variance (simulation below); in this one sample they are 7 % apart, so they are not held against each other here.
     wrong = CASES["A-SPR-1"]["difference_as_if_independent_wrong_se"]
     assert row["change_se"] / AREA_HA < 0.8 * wrong
+
+
+def test_some_plots_repeated_textbook_form_of_the_variance() -> None:
+    """Equal to the reference to its last digits: variances of all plots of either date, covariance of the repeated."""
+    expected = CASES["A-SPR-1"]["difference_of_all_plot_means"]
+    table, strata, _ = survey_a_tables()
+    plots = read_plots(table, strata, None, [POOL])
+    samples = (plots.sample("t1"), plots.sample("t2"))
+    domains = tuple(np.zeros(len(sample.plot), dtype=np.int64) for sample in samples)
+    allowed = np.ones((4, 2), dtype=bool)
+    result = difference_of_ratios(samples, domains, 1, plots.units.stratum_area_ha, allowed)
+    assert result.density[0, -1] == pytest.approx(expected["change"], rel=CLOSED_FORM)
+    assert np.sqrt(result.variance_all_plots[0, -1]) == pytest.approx(expected["se"], rel=CLOSED_FORM)
 
 
 def test_no_plot_repeated() -> None:
@@ -82,41 +99,50 @@ def test_no_plot_repeated() -> None:
     assert row["plots_paired"] == 0
 
 
-def block(count: int, square_sum: float, rng: np.random.Generator) -> np.ndarray:
-    """Random values with mean zero and a given sum of squares."""
-    values = rng.normal(size=count)
-    values -= values.mean()
-    return values * np.sqrt(square_sum / (values**2).sum())
-
-
 GRID = pd.DataFrame(CASES["A-SPR-2"]["results"])
+REPEATS = 3000
+
+
+def repeated_surveys(case: pd.Series, rng: np.random.Generator) -> tuple[Sample, Sample]:
+    """Many independent pairs of samples from the stated normal population, each in a stratum of its own."""
+    n, m = int(case["n"]), int(case["m"])
+    number = 2 * n - m
+    first = rng.normal(size=(REPEATS, number))
+    second = case["rho"] * first + np.sqrt(1 - case["rho"] ** 2) * rng.normal(size=first.shape)
+    plot = np.arange(first.size).reshape(first.shape)
+    stratum = np.repeat(np.arange(REPEATS)[:, None], number, axis=1)
+    order = (slice(0, n), np.r_[0:m, n:number])
+    samples = [
+        Sample(
+            plot=plot[:, columns].ravel(),
+            stratum=stratum[:, columns].ravel(),
+            parcel=np.full(REPEATS * n, -1),
+            size=np.ones(REPEATS * n),
+            value=30.0 * values[:, columns].reshape(-1, 1),  # S1 = S2 = 30 in every case
+            used=np.ones((REPEATS * n, 1), dtype=bool),
+            day=np.full(REPEATS * n, np.nan),
+        )
+        for values, columns in zip((first, second), order, strict=True)
+    ]
+    return samples[0], samples[1]
 
 
 @pytest.mark.parametrize("number", range(len(GRID)))
-def test_partial_replacement_with_known_variances(number: int) -> None:
-    """Samples with exactly the stated variances and correlation give the variance that theory states."""
+def test_partial_replacement_against_theory(number: int) -> None:
+    """Over many samples the variance is on average what theory states, and the 95 % interval holds what it says."""
     case = GRID.iloc[number]
-    n, m = int(case["n"]), int(case["m"])
-    rng = np.random.default_rng(number)
-    first = block(m, (m - 1) * 900.0, rng)  # S1 = S2 = 30 in every case
-    noise = rng.normal(size=m)
-    noise -= noise.mean()
-    noise -= first * (first @ noise) / (first @ first)
-    noise *= np.sqrt((first @ first) / (noise @ noise))
-    second = case["rho"] * first + np.sqrt(1 - case["rho"] ** 2) * noise
-    one = np.concatenate([first, block(n - m, (n - m) * 900.0, rng)])
-    two = np.concatenate([second, block(n - m, (n - m) * 900.0, rng)])
-    names = np.array([f"p{i:02d}" for i in range(2 * n - m)])
-    later = np.concatenate([names[:m], names[n:]])
-    table = pd.concat(
-        [
-            plot_table(100 + one, survey="t1", plot=names[:n]),
-            plot_table(120 + two, survey="t2", plot=later, date=pd.Timestamp("2024-07-01")),
-        ]
-    )
-    row = whole(change(table, strata_table({"S": 1.0}))[0])
-    assert row["change_t_c"] == pytest.approx(20.0)
-    assert row["change_se"] ** 2 == pytest.approx(case["var_change_difference_of_means"], rel=CLOSED_FORM)
+    samples = repeated_surveys(case, np.random.default_rng(100 + number))
+    domains = (samples[0].stratum, samples[1].stratum)
+    result = difference_of_ratios(samples, domains, REPEATS, np.ones(REPEATS), np.ones((REPEATS, 1), dtype=bool))
+    expected = case["var_change_difference_of_means"]
+    assert result.density.var() == pytest.approx(expected, rel=0.1)
+    assert result.variance.mean() == pytest.approx(expected, rel=0.02)
+    assert result.variance_all_plots.mean() == pytest.approx(expected, rel=0.03)
+    assert result.variance.std() < 1.02 * result.variance_all_plots.std()
+    assert result.variance.min() > 0
+    half = t_half_width(np.sqrt(result.variance), result.df, 0.95)
+    coverage = (np.abs(result.density) <= half).mean()
+    assert 0.94 <= coverage <= 0.99
 
 
 @pytest.mark.real

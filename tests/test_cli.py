@@ -18,7 +18,14 @@ def landcarbon(*arguments, cwd, timeout=300):
     environment = {**os.environ, "PYTHONPATH": str(ROOT), "NO_COLOR": "1"}
     command = [sys.executable, "-m", "landcarbon.cli", *map(str, arguments)]
     return subprocess.run(
-        command, capture_output=True, text=True, cwd=cwd, timeout=timeout, env=environment, encoding="utf-8", check=False
+        command,
+        capture_output=True,
+        text=True,
+        cwd=cwd,
+        timeout=timeout,
+        env=environment,
+        encoding="utf-8",
+        check=False,
     )
 
 
@@ -55,13 +62,48 @@ def test_tables_have_the_stated_columns(demo):
     folder, _ = demo
     stocks = pd.read_csv(folder / "results" / "stocks.csv")
     assert list(stocks.columns) == (
-        "by,unit,survey,pool,area_ha,plots,density_t_c_ha,density_se,density_low,density_high,stock_t_c,stock_se,stock_low,"
-        "stock_high,df,method".split(",")
+        [
+            "by",
+            "unit",
+            "survey",
+            "pool",
+            "area_ha",
+            "plots",
+            "density_t_c_ha",
+            "density_se",
+            "density_low",
+            "density_high",
+            "stock_t_c",
+            "stock_se",
+            "stock_low",
+            "stock_high",
+            "df",
+            "method",
+        ]
     )
     change = pd.read_csv(folder / "results" / "change.csv")
     assert list(change.columns) == (
-        "by,unit,since,until,pool,area_ha,plots_paired,plots_since,plots_until,years,change_t_c,change_se,change_low,"
-        "change_high,change_t_c_yr,change_t_c_ha_yr,change_t_c_ha_yr_se,co2_t_yr,method".split(",")
+        [
+            "by",
+            "unit",
+            "since",
+            "until",
+            "pool",
+            "area_ha",
+            "plots_paired",
+            "plots_since",
+            "plots_until",
+            "years",
+            "change_t_c",
+            "change_se",
+            "change_low",
+            "change_high",
+            "change_t_c_yr",
+            "change_t_c_ha_yr",
+            "change_t_c_ha_yr_se",
+            "co2_t_yr",
+            "method",
+        ]
     )
     assert set(stocks["by"]) == {"inventory", "stratum", "parcel"}
 
@@ -123,7 +165,9 @@ def test_show_map_trace_equations(demo, tmp_path):
     page = tmp_path / "page.html"
     assert landcarbon("map", results, "--out", page, cwd=tmp_path).returncode == 0
     assert page.read_bytes() == (results / "map.html").read_bytes()
-    parcel = pd.read_csv(results / "stocks.csv").query("by == 'parcel' and density_t_c_ha == density_t_c_ha")["unit"].iloc[0]
+    parcel = (
+        pd.read_csv(results / "stocks.csv").query("by == 'parcel' and density_t_c_ha == density_t_c_ha")["unit"].iloc[0]
+    )
     traced = landcarbon("trace", results, "--parcel", parcel, cwd=tmp_path)
     assert traced.returncode == 0
     assert "trees_2024" in traced.stdout

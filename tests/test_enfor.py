@@ -1,4 +1,4 @@
-"""Trees that were felled and weighed: the open Canadian file (enfor2017) against the equations made from it and others."""
+"""Trees that were felled and weighed: the open Canadian file (enfor2017) against the equations made from it."""
 
 from __future__ import annotations
 
@@ -10,11 +10,11 @@ import pandas as pd
 import pytest
 
 from allometry.catalogue import load_catalogue
-from allometry.comparison import COLUMNS, compare
+from allometry.comparison import compare
 
 ROOT = Path(__file__).resolve().parent.parent
 sys.path.insert(0, str(ROOT / "tools"))
-from enfor import CASES, enfor_table, read_trees  # noqa: E402
+from enfor import enfor_table, read_trees  # noqa: E402
 from equation_page import page  # noqa: E402
 
 CATALOGUE = load_catalogue()
@@ -37,9 +37,9 @@ def test_the_file_is_the_one_described(trees):
 
 
 def test_printed_rmse_of_all_33_species_is_returned(table):
-    """Published: lambert2005, Table 5, Total, both models. The printed RMSE divides by the degrees of freedom, ours by n.
+    """Published: lambert2005, Table 5, Total, both models. The printed RMSE divides by degrees of freedom, ours by n.
 
-    The tolerance per species is that of the fact sheet: 3 %, 8 % for small samples and for black spruce (other list of
+    The tolerance per species is from the reference notes: 3 %, 8 % for small samples and black spruce (other list of
     trees), 16 % for the 14 hop-hornbeams.
     """
     own = table[table["tolerance_percent"].notna()]
@@ -51,11 +51,18 @@ def test_printed_rmse_of_all_33_species_is_returned(table):
 
 
 def test_equations_are_unbiased_on_the_trees_they_were_made_from(table):
-    """The fact sheet: total bias within 4 % except Douglas-fir (29 trees) and Engelmann spruce (27 trees)."""
-    made = table[table["equation_id"].str.startswith(("lambert2005", "ung2008"))]
-    few = made["taxon"].isin(["Pseudotsuga menziesii", "Picea engelmannii"])
-    assert (made.loc[~few & (made["n"] >= 40), "bias_percent"].abs() < 4).all()
-    assert made.loc[few, "bias_percent"].between(0, 21).all()
+    """lambert2005: the mean error lies within 2.58 standard errors that follow from the printed RMSE (99 %), black
+    spruce left out (other list of trees: 170 more in the file).
+
+    ung2008 prints none here; by the notes within 4 % except Douglas-fir and Engelmann spruce (below 30 trees).
+    """
+    first = table[table["equation_id"].str.startswith("lambert2005") & (table["taxon"] != "Picea mariana")]
+    error = first["bias_percent"].abs() / 100 * first["mean_kg"]
+    assert (error <= 2.58 * first["printed_rmse_kg"] / np.sqrt(first["n"])).all()
+    second = table[table["equation_id"].str.startswith("ung2008")]
+    few = second["taxon"].isin(["Pseudotsuga menziesii", "Picea engelmannii"])
+    assert (second.loc[~few, "bias_percent"].abs() < 4).all()
+    assert second.loc[few, "bias_percent"].between(0, 21).all()
 
 
 def test_revised_equations_match_an_independent_recomputation(table, reference):
@@ -73,7 +80,7 @@ def test_revised_equations_match_an_independent_recomputation(table, reference):
 
 
 def test_national_groups_of_the_united_states_are_near_on_canadian_trees(table):
-    """Independent trees. Yardstick: residual percentiles of jenkins2003, p. 22: a fourth below to 29 % above, per point.
+    """Independent trees. Yardstick: residual percentiles of jenkins2003, p. 22: a fourth below, 29 % above.
 
     The bias of a species is one point of such residuals: 80 % of the species should lie between the percentiles.
     """
@@ -121,17 +128,3 @@ def test_means_of_the_trees_are_those_printed(trees, reference):
 def test_page_shows_this_table(table):
     stored = (ROOT / "docs" / "equations.md").read_text(encoding="utf-8")
     assert stored == page(CATALOGUE, table)
-
-
-def test_comparison_of_known_errors():
-    """Identity: trees made by the equation itself, ten percent heavier, show a bias of 1/1.1 - 1."""
-    dbh = np.array([10.0, 20.0, 40.0])
-    mass = 1.1 * CATALOGUE.evaluate("jenkins2003_agb_mo", dbh)["biomass_kg"].to_numpy()
-    trees = pd.DataFrame({"group": "oak", "dbh_cm": dbh, "height_m": np.nan, "mass_kg": mass})
-    pairs = pd.DataFrame({"group": ["oak", "none"], "equation_id": ["jenkins2003_agb_mo"] * 2})
-    found = compare(CATALOGUE, trees, pairs)
-    assert list(found.columns) == COLUMNS
-    assert found["bias_percent"].iloc[0] == pytest.approx(100 * (1 / 1.1 - 1))
-    assert found["n"].tolist() == [3, 0]
-    assert np.isnan(found["rmse_kg"].iloc[1])
-    assert CASES.is_file()

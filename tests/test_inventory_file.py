@@ -10,20 +10,21 @@ from pathlib import Path
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from read_samples import settings_text
 
 from landcarbon.errors import SettingsError, UserError
-from landcarbon.inventory import inventory_page, load_settings, parse_settings, settings_reference, template_text
+from landcarbon.inventory import load_settings, parse_settings, settings_reference, template_text
 from landcarbon.inventory.locate import key_lines, line_of
 from landcarbon.inventory.nearest import nearest
 from landcarbon.inventory.reference import keys_below, places_of
-from read_samples import settings_text
+from landcarbon.read.page import inventory_page
 
 ROOT = Path(__file__).resolve().parent.parent
 GOOD = settings_text()
 
 
 def fault(text: str) -> str:
-    with pytest.raises(SettingsError, match=".") as caught:
+    with pytest.raises(SettingsError, match=r"^inventory\.toml") as caught:
         parse_settings(text, "inventory.toml")
     return str(caught.value)
 
@@ -76,7 +77,8 @@ class TestLoading:
             'kind = "census", area_ha = 0.04',
             'kind = "census"',
         ):
-            settings = parse_settings(settings_text(plots=f'file = "p.csv"\ndesign = {{ {design} }}'))
+            more = '[columns.plots]\narea = "size"'
+            settings = parse_settings(settings_text(plots=f'file = "p.csv"\ndesign = {{ {design} }}', more=more))
             assert settings.plots.design.kind == design.split('"')[1]
 
     def test_dates_with_and_without_quotes(self):
@@ -130,7 +132,12 @@ class TestFaults:
         assert message.startswith("inventory.toml: 5 faults")
         lines = [int(number) for number in re.findall(r"line (\d+),", message)]
         assert lines == sorted(lines)
-        for part in ("inventory.name: this key is missing", "inventory.confidence", "equations.region", "units.trees.dbh"):
+        for part in (
+            "inventory.name: this key is missing",
+            "inventory.confidence",
+            "equations.region",
+            "units.trees.dbh",
+        ):
             assert part in message
         assert "columns.trees.heigth: unknown column. Did you mean 'height'?" in message
 
@@ -153,7 +160,8 @@ class TestFaults:
         assert "surveys" in fault(GOOD.replace('[surveys.2014]\ntrees = "trees.csv"', "[surveys]"))
 
     @pytest.mark.parametrize(
-        "second", ["{ radius_m = 3, dbh_min_cm = 20 }", "{ radius_m = 12, dbh_min_cm = 5 }", "{ radius_m = 4, dbh_min_cm = 9 }"]
+        "second",
+        ["{ radius_m = 3, dbh_min_cm = 20 }", "{ radius_m = 12, dbh_min_cm = 5 }", "{ radius_m = 4, dbh_min_cm = 9 }"],
     )
     def test_nested_circles_must_grow(self, second: str):
         design = f'kind = "nested", circles = [ {{ radius_m = 4, dbh_min_cm = 5 }}, {second} ]'
@@ -176,14 +184,14 @@ class TestFaults:
             ('[units.trees]\ndbh = "kg"', "'kg' is not a unit of length. Accepted: mm, cm"),
             ('[units.plots]\nslope = "ha"', "'ha' is not a unit of slope"),
             ('[strata]\nunit = "kg"', "'kg' is not a unit of area"),
-            ('[strata]\nareas = { oak = -1 }', "greater than 0"),
+            ("[strata]\nareas = { oak = -1 }", "greater than 0"),
             ('[strata]\nareas = { oak = 1 }\nfile = "s.csv"', "given both here and in a file"),
             ('[strata]\nareas = { oak = 1 }\nmerge = { ash = "oac" }', "Did you mean 'oak'?"),
             ('[strata]\nmerge = { a = "b", b = "c" }', "is itself folded into another"),
             ('[dates]\nformat = "day"', "does not tell day, month and year"),
             ('[dates]\nformat = "%m/%Y"', "does not tell day, month and year"),
             ('[status]\nX = "alive"', "'alive' is not accepted"),
-            ('[columns.trees]\ndbh = 5', "text in quotes is wanted"),
+            ("[columns.trees]\ndbh = 5", "text in quotes is wanted"),
         ],
     )
     def test_other_faults(self, more: str, told: str):
@@ -204,8 +212,19 @@ class TestFaults:
         assert "expansion = 'THEIR COLUMN' under [columns.trees]" in fault(settings_text(plots=plots))
         parse_settings(settings_text(plots=plots, more='[columns.trees]\nexpansion = "tph"'))
 
+    def test_unknown_coordinate_systems(self):
+        text = settings_text(more='[parcels]\nfile = "p.gpkg"\ncrs = "UTM 32"').replace("EPSG:25832", "EPSG:9")
+        message = fault(text)
+        assert f"line {line_with(text, 'EPSG:9')}, plots.crs: 'EPSG:9' is no coordinate system" in message
+        assert "parcels.crs: 'UTM 32' is no coordinate system. Write it as e.g. 'EPSG:25832'." in message
+
+    def test_census_needs_an_area(self):
+        message = fault(settings_text(plots='file = "p.csv"\ndesign = { kind = "census" }'))
+        assert "plots.design: the census design needs the area of the plots" in message
+
     def test_slope_correction_needs_lengths(self):
-        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 4 }\nslope_correction = "design on slope"'
+        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 4 }'
+        plots += '\nslope_correction = "design on slope"'
         assert "no lengths laid out along the slope" in fault(settings_text(plots=plots))
 
     def test_window_backwards(self):
@@ -247,11 +266,11 @@ class TestUnreadable:
     @pytest.mark.parametrize(
         ("text", "line"),
         [
-            ('[inventory]\nname = Tarn\n', 2),
+            ("[inventory]\nname = Tarn\n", 2),
             ('[inventory\nname = "x"\n', 1),
             ('[inventory]\nname = "x"\nname = "y"\n', 3),
             ('[inventory]\nname = "x', 2),
-            ("a = 1\n\n[plots]\nfile = \"C:\\data\"\n", 4),
+            ('a = 1\n\n[plots]\nfile = "C:\\data"\n', 4),
         ],
     )
     def test_broken_syntax(self, text: str, line: int):
@@ -363,7 +382,7 @@ class TestReference:
 
     def test_page_is_current(self):
         page = (ROOT / "docs" / "inventory-file.md").read_text(encoding="utf-8")
-        assert page == inventory_page(), "run: python -m landcarbon.inventory"
+        assert page == inventory_page(), "run: python -m landcarbon.read"
 
     def test_template_is_short_and_sound(self):
         settings = parse_settings(template_text())

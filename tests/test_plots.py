@@ -109,7 +109,9 @@ def test_tree_without_a_visit_has_no_factor():
 
 def evaluated(biomass, fraction=0.5, **columns):
     biomass = np.asarray(biomass, dtype=float)
-    return make_trees(np.full(len(biomass), 20.0), biomass_kg=biomass, carbon_kg=biomass * fraction, expansion=100.0, **columns)
+    return make_trees(
+        np.full(len(biomass), 20.0), biomass_kg=biomass, carbon_kg=biomass * fraction, expansion=100.0, **columns
+    )
 
 
 def sums_of(trees, visits):
@@ -135,8 +137,12 @@ def test_stand_root_model_is_applied_to_the_plot_not_the_tree():
     """Two trees on one plot: roots of the sum, not the sum of the roots (the relation is not linear)."""
     visits, design = make_visits(), PlotDesign.circles([10.0], [0.0])
     table, _ = plot_pools(
-        visits, PLOTS, sums_of(evaluated([600.0, 400.0]), visits), pools=["above_ground", "below_ground"],
-        design=design, root_model="cairns97_general",
+        visits,
+        PLOTS,
+        sums_of(evaluated([600.0, 400.0]), visits),
+        pools=["above_ground", "below_ground"],
+        design=design,
+        root_model="cairns97_general",
     )
     shoot = 100.0  # t/ha
     # Published relation: Cairns et al. 1997 eq 1, as quoted in CDM AR-TOOL14 v04.2 p. 25; carbon fraction 0.5.

@@ -57,7 +57,8 @@ def test_nothing(nothing: str | None):
 
 
 @pytest.mark.parametrize(
-    "cell", ["abc", "12 cm", "1 234", "1.234,5", "1,234.5", "inf", "-inf", "1e999", "0x10", "--5", "1..2", "½", "12?", "+"]
+    "cell",
+    ["abc", "12 cm", "1 234", "1.234,5", "1,234.5", "inf", "-inf", "1e999", "0x10", "--5", "1..2", "½", "12?", "+"],
 )
 def test_bad_numbers(cell: str):
     parsed = numbers([cell, "7", "1.5"])

@@ -10,11 +10,11 @@ import numpy as np
 import openpyxl
 import pandas as pd
 import pytest
+from read_samples import PLOTS, TREES, read, rules, settings_text
 
 from landcarbon.errors import InputFileError
 from landcarbon.inputs import Inputs
 from landcarbon.read.text import decode, sniff_delimiter
-from read_samples import PLOTS, TREES, read, rules, settings_text
 
 NAMED = TREES.replace("birch", "Bäume")
 
@@ -57,10 +57,15 @@ DRESSINGS = {
     "bar": ("trees.txt", NAMED.replace(",", "|").encode()),
     "UTF-16": ("trees.csv", semicolons(NAMED, comma=True).encode("utf-16")),
     "UTF-16, big end first": ("trees.csv", b"\xfe\xff" + NAMED.encode("utf-16-be")),
-    "quoted": ("trees.csv", "\n".join(",".join(f'"{c}"' for c in line.split(",")) for line in NAMED.splitlines()).encode()),
+    "quoted": (
+        "trees.csv",
+        "\n".join(",".join(f'"{c}"' for c in line.split(",")) for line in NAMED.splitlines()).encode(),
+    ),
     "quoted decimal commas": (
         "trees.csv",
-        "\n".join(",".join(f'"{c.replace(".", ",")}"' for c in line.split(",")) for line in NAMED.splitlines()).encode(),
+        "\n".join(
+            ",".join(f'"{c.replace(".", ",")}"' for c in line.split(",")) for line in NAMED.splitlines()
+        ).encode(),
     ),
     "gzip": ("trees.csv.gz", gzip.compress(NAMED.encode())),
     "workbook": ("trees.xlsx#Trees", workbook(NAMED)),
@@ -92,7 +97,7 @@ def test_what_is_told_of_the_dressing(tmp_path: Path):
 
 
 def test_lines_are_those_of_the_file(tmp_path: Path):
-    text = "\n\nplot,species,dbh,remark\n0101,oak,10,\n\n0101,oak,11,\"two\nlines\"\n0101,oak,12,\n"
+    text = '\n\nplot,species,dbh,remark\n0101,oak,10,\n\n0101,oak,11,"two\nlines"\n0101,oak,12,\n'
     inputs = read(tmp_path, trees_csv=text)
     assert inputs.trees["row"].tolist() == [4, 6, 8]
     assert inputs.trees["dbh_cm"].tolist() == [10, 11, 12]
@@ -113,6 +118,20 @@ def test_row_of_a_workbook(tmp_path: Path):
     assert inputs.trees["row"].tolist() == [3, 5]
     assert inputs.trees["plot"].tolist() == ["0101", "12"]
     assert np.isnan(inputs.trees["dbh_cm"][1])  # a formula never calculated has no value
+
+
+def test_missing_column_of_a_parquet_file(tmp_path: Path):
+    (tmp_path / "trees.parquet").write_bytes(parquet(TREES))
+    text = settings_text(surveys='[surveys.2014]\ntrees = "trees.parquet"', more='[columns.trees]\ndbh = "D"')
+    with pytest.raises(InputFileError, match=r"^trees\.parquet: no column 'D' \(for dbh\)"):
+        read(tmp_path, text)
+
+
+def test_sign_of_a_sheet_in_a_file_name(tmp_path: Path):
+    assert len(read_as(tmp_path, "trees.csv", b"plot,species,dbh\n0101,oak,5\n").trees) == 1
+    (tmp_path / "plot #1.csv").write_text(TREES)
+    text = settings_text(surveys='[surveys.2014]\ntrees = "plot #1.csv"')
+    assert read(tmp_path, text).files["file"].tolist() == ["plots.csv", "plot #1.csv"]
 
 
 def test_missing_sheet(tmp_path: Path):

@@ -6,12 +6,12 @@ from pathlib import Path
 
 import pandas as pd
 import pytest
+from read_samples import PLOTS, read, rules, settings_text
 
 from landcarbon.errors import InputFileError, UserError
 from landcarbon.inputs import Inputs
 from landcarbon.inventory import parse_settings
 from landcarbon.read.surveys import files_of, label_year, survey_by_label
-from read_samples import read, rules, settings_text
 
 LONG = (
     "survey,plot,species,dbh,date\n"
@@ -54,7 +54,10 @@ class TestSurveys:
         assert inputs.surveys["survey"].tolist() == ["early", "late"]
         assert inputs.trees["used"].tolist() == [True, True, False, False]
         assert inputs.trees["survey"].tolist()[:2] == ["early", "late"]
-        assert inputs.findings.loc[inputs.findings["rule"] == "date outside surveys", "value"].tolist() == ["2019-06-01", ""]
+        assert inputs.findings.loc[inputs.findings["rule"] == "date outside surveys", "value"].tolist() == [
+            "2019-06-01",
+            "",
+        ]
 
     def test_no_way_to_tell(self, tmp_path: Path):
         trees = "plot,species,dbh,date\n0101,oak,10,2014-06-01\n"
@@ -87,7 +90,13 @@ class TestSurveys:
         surveys = '[surveys.2014]\ntrees = ["trees.csv"]\n[surveys.2024]\ntrees = ["trees.csv", "late.csv"]'
         late = "plot,species,dbh\n0102,oak,12\n"
         inputs = read(tmp_path, settings_text(surveys=surveys), trees_csv=LONG, late_csv=late)
-        assert inputs.trees["survey"].astype(object).where(inputs.trees["used"], "").tolist() == ["2014", "2024", "", "", "2024"]
+        assert inputs.trees["survey"].astype(object).where(inputs.trees["used"], "").tolist() == [
+            "2014",
+            "2024",
+            "",
+            "",
+            "2024",
+        ]
         assert inputs.files["file"].tolist() == ["plots.csv", "trees.csv", "late.csv"]
 
     def test_order_by_window_then_dates_then_label(self, tmp_path: Path):
@@ -95,14 +104,21 @@ class TestSurveys:
             '[surveys.b]\ntrees = "b.csv"\n[surveys.a]\ntrees = "a.csv"\nsince = 2009-01-01\n'
             '[surveys."spring 2004"]\ntrees = "c.csv"\n[surveys.z]\ntrees = "c.csv"\nuntil = 1999-12-31'
         )
-        files = {f"{n}_csv": f"survey,plot,species,dbh,date\n{n},0101,oak,5,{d}\n" for n, d in (("b", "2006-05-01"), ("a", "2010-05-01"))}
+        files = {
+            f"{n}_csv": f"survey,plot,species,dbh,date\n{n},0101,oak,5,{d}\n"
+            for n, d in (("b", "2006-05-01"), ("a", "2010-05-01"))
+        }
         shared = "survey,plot,species,dbh\nz,0101,oak,5\nspring 2004,0101,oak,5\n"
         inputs = read(tmp_path, settings_text(surveys=surveys), c_csv=shared, **files)
         assert inputs.surveys["survey"].tolist() == ["z", "spring 2004", "b", "a"]
         assert inputs.trees["survey"].cat.categories.tolist() == ["z", "spring 2004", "b", "a"]
 
     def test_labels(self):
-        assert survey_by_label(["2014.0", "SPRING", "x"], ["2014", "Spring"]) == {"2014.0": "2014", "SPRING": "Spring", "x": ""}
+        assert survey_by_label(["2014.0", "SPRING", "x"], ["2014", "Spring"]) == {
+            "2014.0": "2014",
+            "SPRING": "Spring",
+            "x": "",
+        }
         assert label_year("survey 2014 b") == 2014
         assert label_year("2014-2016") is None
         assert label_year("plot 12014") is None
@@ -145,7 +161,10 @@ class TestVisits:
     def test_middle_of_the_window(self, tmp_path: Path):
         surveys = '[surveys.first]\ntrees = "trees.csv"\nsince = 2014-05-01\nuntil = 2014-05-31'
         inputs = read(tmp_path, settings_text(surveys=surveys), trees_csv="plot,species,dbh\n0101,oak,9\n")
-        assert visit_of(inputs, "first", "0101")[["date", "date_source"]].tolist() == [pd.Timestamp("2014-05-16"), "window"]
+        assert visit_of(inputs, "first", "0101")[["date", "date_source"]].tolist() == [
+            pd.Timestamp("2014-05-16"),
+            "window",
+        ]
 
     def test_year_of_the_label(self, tmp_path: Path):
         inputs = read(tmp_path, trees_csv="plot,species,dbh\n0101,oak,9\n")
@@ -188,11 +207,21 @@ class TestVisits:
     def test_odd_rows(self, tmp_path: Path):
         surveys = '[surveys.2014]\ntrees = "trees.csv"\nvisits = "visits.csv"'
         visits = "plot,visited,subplots\n0101,yes,1.5\n0101,no,\n0105,yes,\n0103,perhaps,\n"
-        inputs = read(tmp_path, settings_text(surveys=surveys), visits_csv=visits)
-        assert inputs.visits["visited"].tolist() == [True, True, True]
-        wanted = {"visit repeated", "unknown plot of visit", "not readable and left blank", "visit not listed", "number of subplots"}
+        visits += "0104,,\n0106,,2\n"
+        plots = PLOTS + "0104,400040,5600050\n0106,400060,5600050\n"
+        inputs = read(tmp_path, settings_text(surveys=surveys), visits_csv=visits, plots_csv=plots)
+        assert inputs.visits["visited"].tolist() == [True, True, False, False, False]
+        doubtful = inputs.findings[inputs.findings["rule"] == "visit in doubt"]
+        assert doubtful[["plot", "row"]].to_numpy().tolist() == [["0103", 5], ["0104", 6], ["0106", 7]]
+        wanted = {
+            "visit repeated",
+            "unknown plot of visit",
+            "not readable and left blank",
+            "visit not listed",
+            "number of subplots",
+        }
         assert set(rules(inputs, "visits")) >= wanted
-        assert "Did you mean '0101'?" in inputs.findings.set_index("rule").loc["unknown plot of visit", "remedy"]
+        assert "Did you mean '010" in inputs.findings.set_index("rule").loc["unknown plot of visit", "remedy"]
         assert inputs.findings.set_index("rule").loc["visit not listed", "plot"] == "0102"
 
     def test_visits_cannot_be_told_apart(self, tmp_path: Path):
@@ -215,7 +244,9 @@ class TestVisits:
         assert "name 2 subplots, more than the 1" in found["message"].iloc[0]
 
     def test_dates_of_a_long_visits_file_place_the_surveys(self, tmp_path: Path):
-        text = settings_text(surveys=WINDOWS, more=LONG_FILE + '\n[visits]\nfile = "visits.csv"\n[columns.trees]\nsurvey = ""')
+        text = settings_text(
+            surveys=WINDOWS, more=LONG_FILE + '\n[visits]\nfile = "visits.csv"\n[columns.trees]\nsurvey = ""'
+        )
         visits = "plot,date\n0101,2014-03-03\n0101,2024-03-03\n0101,2019-03-03\n"
         inputs = read(tmp_path, text, trees_csv=LONG, visits_csv=visits)
         assert visit_of(inputs, "late", "0101")["date"] == pd.Timestamp("2024-03-03")
@@ -256,7 +287,9 @@ class TestStrata:
 
     def test_areas_from_a_file(self, tmp_path: Path):
         more = '[strata]\nfile = "strata.csv"\n[columns.strata]\narea = "acres"\n[units.strata]\narea = "ac"'
-        inputs = read(tmp_path, settings_text(more=more), plots_csv=self.PLOTS, strata_csv="stratum,acres\noak,10\nash,many\n")
+        inputs = read(
+            tmp_path, settings_text(more=more), plots_csv=self.PLOTS, strata_csv="stratum,acres\noak,10\nash,many\n"
+        )
         strata = inputs.strata.set_index("stratum")["area_ha"]
         assert strata["oak"] == pytest.approx(4.0468564224)
         assert strata[["ash", "small"]].isna().all()
@@ -264,7 +297,11 @@ class TestStrata:
 
     def test_stratum_twice(self, tmp_path: Path):
         with pytest.raises(InputFileError, match="stratum 'oak' stands more than once"):
-            read(tmp_path, settings_text(more='[strata]\nfile = "strata.csv"'), strata_csv="stratum,area\noak,10\noak,5\n")
+            read(
+                tmp_path,
+                settings_text(more='[strata]\nfile = "strata.csv"'),
+                strata_csv="stratum,area\noak,10\noak,5\n",
+            )
 
     def test_no_strata_at_all(self, tmp_path: Path):
         inputs = read(tmp_path)

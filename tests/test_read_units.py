@@ -8,8 +8,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from landcarbon.read.columns import column_specs, table_columns, table_names
-from landcarbon.read.units import accepted_units, convert, dimension_of, unit_table
+from landcarbon.inventory.columns import column_specs, table_columns, table_names
+from landcarbon.inventory.units import accepted_units, convert, dimension_of, unit_table
 
 REGISTRY = pint.UnitRegistry()
 
@@ -71,5 +71,7 @@ def test_columns_are_sound():
         if spec.unit:
             assert spec.unit in accepted_units(spec.unit)
             assert spec.kind == "number"
+    frames = {"trees", "plots", "visits", "parcels", "strata", "species"}
+    assert {spec.table for spec in column_specs()} == frames
     assert table_names() == ["trees", "plots", "visits", "parcels", "strata", "species"]
     assert [name for name, spec in table_columns("trees").items() if spec.needed] == ["plot", "species", "dbh"]

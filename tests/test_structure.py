@@ -14,12 +14,27 @@ HEAVY = ("geopandas", "rasterio", "matplotlib", "folium", "pyogrio", "scipy", "s
 
 # A room may import from rooms of a lower or the same number.
 ROOMS = {
-    "landcarbon.errors": 0, "landcarbon.findings": 1, "landcarbon.constants": 0, "landcarbon.factors": 1,
-    "landcarbon.inputs": 1, "landcarbon.inventory": 2, "landcarbon.read": 3, "landcarbon.check": 4,
-    "landcarbon.pools": 5, "landcarbon.plots": 5, "landcarbon.estimate": 6, "landcarbon.change": 7, "landcarbon.marks": 7,
-    "landcarbon.publish": 8, "landcarbon.trace": 8, "landcarbon.pipeline": 9, "landcarbon.assemble": 10,
-    "landcarbon.api": 11, "landcarbon.demo": 11, "landcarbon.cli": 12,
-}  # fmt: skip
+    "landcarbon.errors": 0,
+    "landcarbon.constants": 0,
+    "landcarbon.findings": 1,
+    "landcarbon.factors": 1,
+    "landcarbon.inputs": 1,
+    "landcarbon.inventory": 2,
+    "landcarbon.read": 3,
+    "landcarbon.check": 4,
+    "landcarbon.pools": 5,
+    "landcarbon.plots": 6,
+    "landcarbon.estimate": 7,
+    "landcarbon.change": 8,
+    "landcarbon.marks": 8,
+    "landcarbon.publish": 9,
+    "landcarbon.trace": 9,
+    "landcarbon.pipeline": 10,
+    "landcarbon.assemble": 11,
+    "landcarbon.api": 12,
+    "landcarbon.demo": 12,
+    "landcarbon.cli": 13,
+}
 
 
 def modules(package):
@@ -91,9 +106,15 @@ def test_the_root_is_not_imported_from_inside():
 
 
 @pytest.mark.parametrize(
-    "code", ["import landcarbon", "import landcarbon.cli", "import allometry", "import sys; sys.argv=['landcarbon','--help'];\n"
-             "import landcarbon.cli\ntry:\n    landcarbon.cli.main()\nexcept SystemExit: pass"]
-)  # fmt: skip
+    "code",
+    [
+        "import landcarbon",
+        "import landcarbon.cli",
+        "import allometry",
+        "import sys; sys.argv = ['landcarbon', '--help']; import landcarbon.cli\n"
+        "try:\n    landcarbon.cli.main()\nexcept SystemExit: pass",
+    ],
+)
 def test_imports_stay_light(code, tmp_path):
     script = f"{code}\nimport sys\nprint('loaded:', [m for m in {HEAVY!r} if m in sys.modules])"
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, cwd=ROOT, check=True)
@@ -119,7 +140,11 @@ def test_sizes_stay_within_the_limits():
 
 def test_no_machine_or_registry_is_named():
     words = ("pypi" + ".org", "python" + "hosted", "registry.npm" + "js", "/wo" + "rk/", "/ro" + "ot/")
-    places = [p for p in ROOT.rglob("*") if p.suffix in {".py", ".md", ".toml", ".csv", ".html", ".ipynb", ".js", ".css", ".j2"}]
+    places = [
+        p
+        for p in ROOT.rglob("*")
+        if p.suffix in {".py", ".md", ".toml", ".csv", ".html", ".ipynb", ".js", ".css", ".j2"}
+    ]
     skipped = {".git", ".venv", "build", "dist", "landcarbon-demo", "results"}
     found = [
         (str(path.relative_to(ROOT)), word)

@@ -27,6 +27,8 @@ class Difference:
         Later less earlier mean [t C/ha].
     variance, df : ndarray
         Its variance and degrees of freedom.
+    variance_all_plots : ndarray
+        Variance by the textbook form, for comparison.
     days : ndarray
         Elapsed time the difference refers to [d]; NaN if visits of a stratum it rests on have no date.
     since, until, paired : ndarray of int
@@ -35,6 +37,7 @@ class Difference:
 
     density: np.ndarray
     variance: np.ndarray
+    variance_all_plots: np.ndarray
     df: np.ndarray
     days: np.ndarray
     since: np.ndarray
@@ -71,10 +74,13 @@ def difference_of_ratios(
 
     Notes
     -----
-    V = V_1 + V_2 - 2 C, with C from the deviations of the plots measured on both dates, by stratum:
-    C = m / (n_1 n_2) times their sample covariance; 0 with fewer than two such plots. The share of the repeated plots,
-    m / n_1 V_1 + m / n_2 V_2 - 2 C, is taken from the variance of their own differences where all plots repeat (it is
-    then the same) and where it would come out negative (which few repeated plots among many can bring about).
+    In each stratum V is the sum of three independent parts: what the m plots measured on both dates bring in, from the
+    variance of their own weighted differences w_2 u_2 - w_1 u_1; and what the plots measured on one date only bring in,
+    as many times the mean squared deviation of all plots of that date. Where all plots repeat this is the variance of
+    the mean paired difference; where none does, or one only, it is V_1 + V_2. ``variance_all_plots`` is the textbook
+    form V_1 + V_2 - 2 C with C = m / (n_1 n_2) times the covariance of the repeated plots. It agrees in those cases
+    and on average, but mixes variances of different sets of plots: at the high correlations of repeated plots it
+    swings more and can be negative.
 
     References
     ----------
@@ -87,17 +93,19 @@ def difference_of_ratios(
     )
     pairs = match_plots(samples, domains, allowed)
     parts = PairSums.of(first, second, pairs, domains[0], cells)
-    variance, covariance = _cell_variance(first, second, parts, cells)
+    variance, part_df = _components(first, second, pairs, parts, cells)
     plots = [group_sum(side.mean.plots_cell, cells.domain, n_domains) for side in (first, second)]
     paired = group_sum(parts.plots_cell, cells.domain, n_domains)
-    part_df = _cell_df(first, second, parts, variance, covariance)
-    df = np.minimum(satterthwaite(variance, part_df, cells.domain, n_domains), plots[0] + plots[1] - paired - 1)
+    codes = np.tile(cells.domain, 3)
+    df = np.minimum(satterthwaite(variance, part_df, codes, n_domains), plots[0] + plots[1] - paired - 1)
     density = second.mean.density - first.mean.density
     enough = (plots[0] >= MIN_PLOTS) & (plots[1] >= MIN_PLOTS) & np.isfinite(density)
     days = _elapsed(samples, domains, pairs, cells, area_ha, allowed)
+    textbook = first.spread.variance + second.spread.variance - 2.0 * cell_covariance(first, second, parts, cells)
     return Difference(
         density=np.where(enough, density, np.nan),
-        variance=np.where(enough, group_sum(variance, cells.domain, n_domains), np.nan),
+        variance=np.where(enough, group_sum(variance, codes, n_domains), np.nan),
+        variance_all_plots=np.where(enough, group_sum(textbook, cells.domain, n_domains), np.nan),
         df=np.where(enough, df, np.nan),
         days=np.where(enough, days, np.nan),
         since=plots[0].astype(np.int64),
@@ -106,49 +114,50 @@ def difference_of_ratios(
     )
 
 
-def _cell_variance(one: Side, two: Side, parts: PairSums, cells: Cells) -> tuple[np.ndarray, np.ndarray]:
-    """Variance and covariance parts of each cell; shapes (C, K)."""
-    v_1, v_2 = one.spread.variance, two.spread.variance
-    g_1, g_2 = one.mean.weight, two.mean.weight
-    n_1, n_2, m = (
-        counted[cells.stratum] for counted in (one.mean.plots_stratum, two.mean.plots_stratum, parts.plots_stratum)
-    )
-    covariance = cell_covariance(one, two, parts, cells)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        share_1, share_2 = m / n_1, m / n_2
-        drift = (g_2 * parts.total_2 - g_1 * parts.total_1) ** 2 / m
-        own = inflation(m) * np.maximum(parts.direct - drift, 0.0)  # of the paired differences themselves
-        both = share_1 * v_1 + share_2 * v_2 - 2.0 * covariance
-        complete = (m == n_1) & (m == n_2)
-        both = np.where(complete | (both < 0), own, both)
-        mixed = both + (1.0 - share_1) * v_1 + (1.0 - share_2) * v_2
-    return np.where(m >= MIN_PLOTS, mixed, v_1 + v_2), covariance
+def _components(one: Side, two: Side, pairs: Pairs, parts: PairSums, cells: Cells) -> tuple[np.ndarray, np.ndarray]:
+    """Three variance parts of each cell with their degrees of freedom; shapes (3 C, K).
 
-
-def _cell_df(one: Side, two: Side, parts: PairSums, variance: np.ndarray, covariance: np.ndarray) -> np.ndarray:
-    """Degrees of freedom of the variance of each cell.
-
-    The variance is the sum of what the repeated plots, the plots of the first date alone and those of the second date
-    alone bring in; each is given the degrees of freedom of its own plots only, which errs on the safe side.
+    The parts are the plots of both dates, those of the first alone and those of the second alone. The first knows its
+    variance from the repeated plots of the domain, the others from all plots of the domain at their date.
     """
-    n_1, n_2 = one.mean.plots_cell, two.mean.plots_cell
-    m = np.where(parts.plots_cell >= MIN_PLOTS, parts.plots_cell, 0.0)
-    v_1, v_2 = one.spread.variance, two.spread.variance
+    m = parts.plots_stratum[cells.stratum]
     with np.errstate(divide="ignore", invalid="ignore"):
-        share_1 = np.where(n_1 > 0, m / n_1, 0.0)
-        share_2 = np.where(n_2 > 0, m / n_2, 0.0)
-        both = np.maximum(share_1 * v_1 + share_2 * v_2 - 2.0 * covariance, 0.0)
-        alone_1, alone_2 = (1.0 - share_1) * v_1, (1.0 - share_2) * v_2
-        parts_df = [
-            (both, np.maximum(m - 1.0, 1.0)),
-            (alone_1, np.maximum(n_1 - m - 1.0, 1.0)),
-            (alone_2, np.maximum(n_2 - m - 1.0, 1.0)),
-        ]
-        total = both + alone_1 + alone_2
-        effective = 1.0 / sum((part / total) ** 2 / df for part, df in parts_df)
-    plain = np.where(m > 0, m - 1.0, np.maximum(np.minimum(n_1, n_2) - 1.0, 1.0))
-    df = np.where((total > 0) & (variance > 0), effective, plain)
-    return np.where((n_1 > 0) | (n_2 > 0), df, 0.0)
+        drift = (two.mean.weight * parts.total_2 - one.mean.weight * parts.total_1) ** 2 / m
+        both = np.where(m >= MIN_PLOTS, inflation(m) * np.maximum(parts.direct - drift, 0.0), 0.0)
+    paired = np.where(m >= MIN_PLOTS, parts.plots_cell, 0.0)
+    single = pairs.counted & (parts.plots_stratum[pairs.stratum] >= MIN_PLOTS)
+    variance, df = [both], [_part_df(both, paired)]
+    for side, rows in ((one, pairs.first), (two, pairs.second)):
+        alone, plots = _alone(side, rows, single, cells)
+        variance.append(alone)
+        df.append(np.where((alone > 0) | (plots > 0), np.maximum(side.mean.plots_cell - 1.0, 1.0), 0.0))
+    return np.concatenate(variance), np.concatenate(df)
+
+
+def _part_df(variance: np.ndarray, plots: np.ndarray) -> np.ndarray:
+    """One less than the plots, at least 1; 0 for a part that is not there."""
+    return np.where((variance > 0) | (plots > 0), np.maximum(plots - 1.0, 1.0), 0.0)
+
+
+def _alone(side: Side, rows: np.ndarray, paired: np.ndarray, cells: Cells) -> tuple[np.ndarray, np.ndarray]:
+    """Variance part of the plots of one date that are not paired, and their number; shapes (C, K).
+
+    ``rows`` are the sample's plots that occur at both dates, ``paired`` says for which pools they pair. What one such
+    plot adds is taken from all plots of the date: a few plots alone tell little about their own variance.
+    """
+    sample, mean = side.sample, side.mean
+    free = sample.used & (mean.plots_stratum >= MIN_PLOTS)[sample.stratum]
+    free[rows] &= ~paired
+    square = np.where(free, sample.size[:, None], 0.0) ** 2
+    slope = side.spread.slope
+    n_cells = len(cells.domain)
+    squares = group_sum((side.spread.inside - slope[mean.cell] * mean.size) ** 2, mean.cell, n_cells)
+    plots = group_sum(free[mean.rows], mean.cell, n_cells)
+    share = np.divide(plots, mean.plots_cell, out=np.zeros_like(squares), where=mean.plots_cell > 0)
+    outside = group_sum(square, sample.stratum, cells.strata)[cells.stratum]
+    outside = outside - group_sum(square[mean.rows], mean.cell, n_cells)
+    total = share * squares + slope**2 * np.maximum(outside, 0.0)
+    return mean.weight**2 * inflation(mean.plots_stratum)[cells.stratum] * total, plots
 
 
 def _elapsed(

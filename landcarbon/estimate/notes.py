@@ -166,7 +166,9 @@ def few_plots_in_parcels(
         return empty_findings()
     names = [units.parcels[unit] for unit in np.flatnonzero(bad)]
     area = float(np.nansum(units.parcel_area_ha[bad]))
-    when = " at either date" if table == "change" else ""
+    why = "fewer than two plots" + (" at one of the dates" if table == "change" else "")
+    if not np.isfinite(units.stratum_area_ha).all():
+        why += ", or several strata of unknown area"
     return make_findings(
         "parcel not estimable",
         severity="warning",
@@ -175,9 +177,8 @@ def few_plots_in_parcels(
         value=str(len(names)),
         survey=survey,
         message=(
-            f"{len(names)} of {len(units.parcels)} parcels ({area:,.2f} ha) have fewer than two plots{when}, or lie in "
-            f"several strata of unknown area, and get no figure of their own: {name_list(names)}. They still count in "
-            "their stratum and in the inventory."
+            f"{len(names)} of {len(units.parcels)} parcels ({area:,.2f} ha) get no figure of their own ({why}): "
+            f"{name_list(names)}. Their plots still count in their stratum and in the inventory."
         ),
         remedy="Read these parcels from their stratum, or measure more plots in them.",
     )
@@ -188,6 +189,7 @@ def zero_variance(
 ) -> pd.DataFrame:
     """Report standard errors of zero; ``variance`` has shape (units, pools)."""
     zero = variance == 0
+    same = "changed by the same amount of" if table == "change" else "hold the same amount of"
     found = []
     for pool in np.flatnonzero(zero.any(axis=0)):
         names = [labels[unit] for unit in np.flatnonzero(zero[:, pool])]
@@ -200,8 +202,8 @@ def zero_variance(
                 value=name_list(names),
                 survey=survey,
                 message=(
-                    f"All plots of {by} {name_list(names)} carry the same {pools[pool]} value, so the standard error "
-                    "is 0. That is arithmetic, not certainty."
+                    f"All plots of {by} {name_list(names)} {same} {pools[pool]}, often none at all, so the standard "
+                    "error is 0. That is arithmetic, not certainty."
                 ),
                 remedy="Check that the equal values are real; do not quote the interval.",
             )

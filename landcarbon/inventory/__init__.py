@@ -4,13 +4,12 @@ from __future__ import annotations
 
 from landcarbon.inventory.load import load_settings, parse_settings
 from landcarbon.inventory.models import Settings
-from landcarbon.inventory.page import inventory_page, template_text
 from landcarbon.inventory.reference import KeyInfo, settings_reference
+from landcarbon.inventory.template import template_text
 
 __all__ = [
     "KeyInfo",
     "Settings",
-    "inventory_page",
     "load_settings",
     "parse_settings",
     "settings_reference",

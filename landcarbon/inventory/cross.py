@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from typing import Any
 
+from landcarbon.inventory.columns import table_columns, table_names
 from landcarbon.inventory.faults import Fault
 from landcarbon.inventory.ids import id_faults
 from landcarbon.inventory.models import POOL_NAMES, Settings
 from landcarbon.inventory.nearest import suggestion
-from landcarbon.read.columns import table_columns, table_names
-from landcarbon.read.units import accepted_units, dimension_of
+from landcarbon.inventory.units import accepted_units, dimension_of
 
 __all__ = ["column_faults", "settings_faults"]
 
@@ -130,6 +130,12 @@ def _design_faults(settings: Settings) -> list[Fault]:
     if kind == "weighted" and not settings.columns.get("trees", {}).get("expansion"):
         what = "the weighted design needs the column of trees per hectare"
         faults.append(Fault(("plots", "design"), what, "Give expansion = 'THEIR COLUMN' under [columns.trees]."))
+    if settings.plots.design.kind == "census" and settings.plots.design.area_ha is None:
+        named = settings.columns.get("plots", {}).get("area") or settings.units.get("plots", {}).get("area")
+        if not named:
+            what = "the census design needs the area of the plots"
+            told = "Give area_ha here, or area = 'THEIR COLUMN' under [columns.plots] and its unit under [units.plots]."
+            faults.append(Fault(("plots", "design"), what, told))
     if settings.plots.slope_correction != "none" and kind in ("angle_count", "weighted", "census"):
         what = f"a plot of kind {kind!r} has no lengths laid out along the slope"
         faults.append(Fault(("plots", "slope_correction"), what, "Leave the key out."))

@@ -1,4 +1,4 @@
-"""Checks of the ids of published models named in the project file, against the data of ``allometry``.
+"""Checks of ids named in the project file: published models, against the data of ``allometry``, coordinate systems.
 
 The catalogue is loaded only where the project file names something from it.
 """
@@ -18,14 +18,38 @@ _MANY = 12  # up to this number every id is listed
 
 
 def id_faults(settings: Settings) -> list[Fault]:
-    """Check the ids of root models, height curves, equations and publications.
+    """Check the ids of coordinate systems, root models, height curves, equations and publications.
 
     Parameters
     ----------
     settings : Settings
         Sound settings.
     """
-    return [*_root_faults(settings), *_height_faults(settings.heights), *_equation_faults(settings)]
+    return [
+        *_crs_faults(settings),
+        *_root_faults(settings),
+        *_height_faults(settings.heights),
+        *_equation_faults(settings),
+    ]
+
+
+def _crs_faults(settings: Settings) -> list[Fault]:
+    parcels = settings.parcels.crs if settings.parcels else None
+    given = {"inventory": settings.inventory.crs, "parcels": parcels, "plots": settings.plots.crs}
+    named = {section: text for section, text in given.items() if text is not None}
+    if not named:
+        return []
+    from pyproj import CRS
+    from pyproj.exceptions import CRSError
+
+    faults = []
+    for section, text in named.items():
+        try:
+            CRS.from_user_input(text)
+        except CRSError:
+            what = f"{text!r} is no coordinate system"
+            faults.append(Fault((section, "crs"), what, "Write it as e.g. 'EPSG:25832'."))
+    return faults
 
 
 def _root_faults(settings: Settings) -> list[Fault]:

@@ -1,1 +1,1 @@
-
+"""From field measurements to mass and carbon: one module per pool."""

@@ -101,7 +101,8 @@ def _even(low: float, high: float, classes: int) -> list[float]:
         spread = max(abs(low) / 10, 1.0)  # one value: a single sensible class around it
         low, high = low - spread, high + spread
         classes = 1
-    edges = np.asarray(MaxNLocator(nbins=classes, steps=list(_ROUND_STEPS)).tick_values(low, high), dtype=float)
+    ticks = MaxNLocator(nbins=classes, steps=list(_ROUND_STEPS)).tick_values(low, high)
+    edges = np.array([float(f"{tick:.12g}") for tick in ticks])  # 1e-05, not 9.999999999999999e-06 below it
     inner = edges[(edges > low) & (edges < high)]
     below, above = edges[edges <= low], edges[edges >= high]
     return [float(edge) + 0.0 for edge in np.concatenate([below[-1:], inner, above[:1]])]

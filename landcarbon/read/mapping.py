@@ -8,18 +8,19 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 import pyarrow as pa
+import pyarrow.compute as pc
 
 from landcarbon.errors import InputFileError
+from landcarbon.inventory.columns import ColumnSpec, table_columns
 from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
+from landcarbon.inventory.units import convert
 from landcarbon.read.cells import Parsed, as_category, as_date, as_flag, as_number, as_text, cell_text
-from landcarbon.read.columns import ColumnSpec, table_columns
 from landcarbon.read.notes import note
 from landcarbon.read.sheets import read_parquet, read_workbook
 from landcarbon.read.source import FileLog, Source
 from landcarbon.read.table import RawTable
 from landcarbon.read.text import read_text
-from landcarbon.read.units import convert
 
 __all__ = ["Mapped", "column_plan", "left_blank", "map_raw", "read_mapped", "wanted_in"]
 
@@ -70,10 +71,9 @@ def read_mapped(source: Source, table: str, settings: Settings, log: FileLog) ->
     InputFileError
         If the file is not what its name says, or lacks a column.
     """
-    mapping = settings.columns.get(table, {})
 
     def choose(names: Sequence[str]) -> list[str]:
-        return list(dict.fromkeys(column_plan(table, names, source, mapping).values()))
+        return list(dict.fromkeys(column_plan(table, names, source, settings).values()))
 
     readers: dict[str, Callable[[Source, Callable[[Sequence[str]], Sequence[str]]], RawTable]] = {
         ".xlsx": read_workbook,
@@ -88,9 +88,7 @@ def read_mapped(source: Source, table: str, settings: Settings, log: FileLog) ->
     return map_raw(raw, table, source, settings, log)
 
 
-def column_plan(
-    table: str, names: Sequence[str], source: Source, mapping: dict[str, str | list[str]]
-) -> dict[str, str]:
+def column_plan(table: str, names: Sequence[str], source: Source, settings: Settings) -> dict[str, str]:
     """Find which column of a file serves each canonical column.
 
     Parameters
@@ -101,8 +99,8 @@ def column_plan(
         Columns of the file.
     source : Source
         The file, for messages.
-    mapping : dict
-        ours = theirs (one name or several to try), from the settings; a blank name says the file has no such column.
+    settings : Settings
+        ours = theirs (one name or several to try); a blank name says the file has no such column.
 
     Returns
     -------
@@ -118,18 +116,12 @@ def column_plan(
     plan: dict[str, str] = {}
     missing: list[str] = []
     for column, spec in table_columns(table).items():
-        given = mapping.get(column)
-        theirs = [given] if isinstance(given, str) else (given or [])
-        if given is None:
-            wanted = [column] if spec.by_name or spec.needed else []
-        else:
-            wanted = [name.strip() for name in theirs if name.strip()]
-        found = next(
-            (name if name in names else folded[name.casefold()] for name in wanted if _has(name, names, folded)), None
-        )
+        wanted, mapped = _wanted(spec, settings)
+        there = [name if name in names else folded.get(name.casefold()) for name in wanted]
+        found = next((name for name in there if name is not None), None)
         if found is not None:
             plan[column] = found
-        elif (given is not None and wanted) or spec.needed:
+        elif spec.needed or (mapped and wanted):
             missing.append(_missing(column, wanted or [column], names))
     if missing:
         told = f"Columns in the file: {', '.join(names)}. Name the right one under [columns.{table}]."
@@ -137,8 +129,15 @@ def column_plan(
     return plan
 
 
-def _has(name: str, names: Sequence[str], folded: dict[str, str]) -> bool:
-    return name in names or name.casefold() in folded
+def _wanted(spec: ColumnSpec, settings: Settings) -> tuple[list[str], bool]:
+    """Return the names a column may have in the file, and whether the user gave them."""
+    given = settings.columns.get(spec.table, {}).get(spec.column)
+    if given is not None:
+        names = [given] if isinstance(given, str) else given
+        return [name.strip() for name in names if name.strip()], True
+    # Who states the unit of a column means it to be used.
+    by_name = spec.by_name or spec.needed or spec.column in settings.units.get(spec.table, {})
+    return [spec.column] if by_name else [], False
 
 
 def _missing(column: str, wanted: Sequence[str], names: Sequence[str]) -> str:
@@ -168,7 +167,7 @@ def map_raw(raw: RawTable, table: str, source: Source, settings: Settings, log: 
     InputFileError
         If a column is missing or stands twice.
     """
-    plan = column_plan(table, raw.names, source, settings.columns.get(table, {}))
+    plan = column_plan(table, raw.names, source, settings)
     twice = sorted(set(plan.values()) & raw.repeated)
     if twice:
         raise InputFileError(
@@ -206,7 +205,7 @@ def _without_blank_rows(raw: RawTable) -> tuple[RawTable, list[pd.DataFrame]]:
     # Most files have no blank row: the first column without blanks ends the search.
     blank = np.ones(len(raw), dtype=bool)
     for cells in raw.columns.values():
-        blank &= (cell_text(cells).to_numpy(zero_copy_only=False) == "").astype(bool)
+        blank &= pc.equal(cell_text(cells), "").to_numpy(zero_copy_only=False)
         if not blank.any():
             return raw, []
     keep = np.flatnonzero(~blank)

@@ -4,18 +4,22 @@ from __future__ import annotations
 
 import datetime as dt
 import io
+import warnings
 import zipfile
+import zlib
+from typing import TYPE_CHECKING
 
 import numpy as np
-import openpyxl
 import pyarrow as pa
 import pyarrow.parquet as pq
-from openpyxl.utils.exceptions import InvalidFileException
 
 from landcarbon.errors import InputFileError
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.read.source import Source
 from landcarbon.read.table import Choose, RawTable, unique_names
+
+if TYPE_CHECKING:
+    from openpyxl import Workbook
 
 __all__ = ["read_parquet", "read_workbook"]
 
@@ -58,23 +62,35 @@ def read_workbook(source: Source, choose: Choose) -> RawTable:
 
 
 def _sheet_rows(source: Source) -> list[tuple[object, ...]]:
+    import openpyxl  # only inventories with workbooks pay for it
+
+    data = io.BytesIO(source.data())
     try:
-        book = openpyxl.load_workbook(io.BytesIO(source.data()), read_only=True, data_only=True, keep_links=False)
-    except (InvalidFileException, zipfile.BadZipFile, KeyError, ValueError, OSError, SyntaxError) as error:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", UserWarning)  # on validation lists and the like, which hold no data
+            book = openpyxl.load_workbook(data, read_only=True, data_only=True, keep_links=False)
+            try:
+                return _rows(book, source)
+            finally:
+                book.close()
+    except InputFileError:
+        raise
+    except (zipfile.BadZipFile, zlib.error, LookupError, ValueError, TypeError, OSError, SyntaxError) as error:
+        # What openpyxl lets through on a damaged file depends on where the damage is.
         raise InputFileError(
             f"not a readable XLSX workbook ({error})", where=source.name, remedy="Save the table as XLSX or CSV."
         ) from error
-    try:
-        if source.part and source.part not in book.sheetnames:
-            hint = suggestion(source.part, book.sheetnames)
-            told = f"Sheets: {', '.join(book.sheetnames)}. {hint}".strip()
-            raise InputFileError(f"no sheet {source.part!r}", where=source.name, remedy=told)
-        sheet = book[source.part] if source.part else book.worksheets[0]
-        if hasattr(sheet, "reset_dimensions"):  # some writers state a wrong size
-            sheet.reset_dimensions()
-        return [tuple(row) for row in sheet.iter_rows(values_only=True)]
-    finally:
-        book.close()
+
+
+def _rows(book: Workbook, source: Source) -> list[tuple[object, ...]]:
+    if source.part and source.part not in book.sheetnames:
+        hint = suggestion(source.part, book.sheetnames)
+        told = f"Sheets: {', '.join(book.sheetnames)}. {hint}".strip()
+        raise InputFileError(f"no sheet {source.part!r}", where=source.name, remedy=told)
+    sheet = book[source.part] if source.part else book.worksheets[0]
+    if hasattr(sheet, "reset_dimensions"):  # some writers state a wrong size
+        sheet.reset_dimensions()
+    return [tuple(row) for row in sheet.iter_rows(values_only=True)]
 
 
 def _cell(value: object) -> str:
@@ -107,14 +123,18 @@ def read_parquet(source: Source, choose: Choose) -> RawTable:
     InputFileError
         If it is no Parquet file.
     """
+    data = io.BytesIO(source.data())
     try:
-        file = pq.ParquetFile(io.BytesIO(source.data()))
-        cells = file.schema_arrow.names
-        names, repeated = unique_names(cells)
-        wanted = list(choose(names))
-        table = file.read(columns=[cells[names.index(name)] for name in wanted])
-    except (pa.ArrowInvalid, OSError) as error:
+        file = pq.ParquetFile(data)
+    except (pa.ArrowException, OSError) as error:
         raise InputFileError(f"not a readable Parquet file ({error})", where=source.name) from error
+    cells = file.schema_arrow.names
+    names, repeated = unique_names(cells)
+    wanted = list(choose(names))
+    try:
+        table = file.read(columns=[cells[names.index(name)] for name in wanted])
+    except (pa.ArrowException, OSError) as error:
+        raise InputFileError(f"the Parquet file is damaged ({error})", where=source.name) from error
     columns = {name: _plain(table.column(index)) for index, name in enumerate(wanted)}
     rows = file.metadata.num_rows
     lines = np.arange(2, rows + 2, dtype="int32")

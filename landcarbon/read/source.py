@@ -78,24 +78,48 @@ def find_source(written: str, folder: Path, role: str, *, allow_outside: bool = 
     InputFileError
         If it is missing, a folder, or empty.
     """
-    name, _, part = written.partition("#")
+    name, part = _parted(written, folder)
     try:
         path = (folder / name).resolve()
-    except (OSError, ValueError, RuntimeError) as error:  # NUL in the name, a loop of links
-        raise InputFileError(f"not a usable file name ({error})", where=repr(name)) from error
-    if not allow_outside and not path.is_relative_to(folder.resolve()):
+        inside = path.is_relative_to(folder.resolve())
+        kind = _kind(path)
+    except (OSError, ValueError, RuntimeError) as error:  # NUL in the name, a loop of links, no right to look
+        raise InputFileError(f"not a usable file name ({error})", where=repr(written)) from error
+    if not allow_outside and not inside:
         raise SettingsError(
             f"the file of {role} lies outside the folder of the project file",
             where=written,
             remedy="Move it there, or set allow_outside = true under [inventory].",
         )
-    if path.is_dir():
-        raise InputFileError(f"this is a folder, but a file of {role} is wanted", where=name)
-    if not path.exists():
+    if kind == "missing":
         raise InputFileError(f"no such file ({role})", where=name, remedy=_others(path, folder))
-    if path.stat().st_size == 0:
+    if kind == "folder":
+        raise InputFileError(f"this is a folder, but a file of {role} is wanted", where=name)
+    if kind == "other":
+        raise InputFileError("this is neither a file nor a folder", where=name)
+    if kind == "empty":
         raise InputFileError(f"the file of {role} is empty (0 bytes)", where=name)
     return Source(written, path, part, role)
+
+
+def _parted(written: str, folder: Path) -> tuple[str, str]:
+    """Split off the sheet or member behind ``#``, unless the sign belongs to the name of a file that is there."""
+    try:
+        whole = (folder / written).exists()
+    except (OSError, ValueError):
+        whole = False
+    if whole:
+        return written, ""
+    name, _, part = written.partition("#")
+    return name, part
+
+
+def _kind(path: Path) -> str:
+    if path.is_dir():
+        return "folder"
+    if path.is_file():
+        return "file" if path.stat().st_size else "empty"
+    return "other" if path.exists() else "missing"
 
 
 def _others(path: Path, folder: Path) -> str:

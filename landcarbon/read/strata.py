@@ -9,11 +9,11 @@ import pandas as pd
 
 from landcarbon.errors import InputFileError
 from landcarbon.inventory.models import Settings
+from landcarbon.inventory.units import convert
 from landcarbon.read.limits import limit
 from landcarbon.read.mapping import read_mapped
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
-from landcarbon.read.units import convert
 
 if TYPE_CHECKING:
     from landcarbon.read.parcels import ParcelTable

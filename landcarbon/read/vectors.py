@@ -85,11 +85,11 @@ def _read_parquet(source: Source) -> gpd.GeoDataFrame:
 def _read_gdal(source: Source, layer: str | None) -> gpd.GeoDataFrame:
     path = _gdal_path(source)
     try:
-        layers = [str(name) for name in pyogrio.list_layers(path)[:, 0]]
-        chosen = _layer(layers, layer or source.part if source.suffix != ".zip" else layer, source)
         with warnings.catch_warnings():
             # Rings that are not closed or wound wrongly are mended and told by our own check of polygons.
             warnings.simplefilter("ignore", RuntimeWarning)
+            layers = [str(name) for name in pyogrio.list_layers(path)[:, 0]]
+            chosen = _layer(layers, layer or source.part if source.suffix != ".zip" else layer, source)
             return pyogrio.read_dataframe(path, layer=chosen, on_invalid="fix")
     except (DataSourceError, ValueError, shapely.errors.GEOSException) as error:
         if isinstance(error, InputFileError):

@@ -29,7 +29,7 @@ class VisitRows:
     Attributes
     ----------
     frame : DataFrame
-        survey, plot, date, visited (NaN if not said), share_inside, slope_deg, n_subplots, file, row.
+        survey, plot, date, visited (NaN if not said), doubt, share_inside, slope_deg, n_subplots, file, row.
     surveys : list of str
         Surveys that have a visits file.
     findings : list of DataFrame
@@ -67,7 +67,7 @@ def read_visits(settings: Settings, log: FileLog) -> VisitRows:
         findings += [*mapped.findings, *left_blank(mapped, "visits"), *more]
         findings.append(note("ragged row of visits", mapped.frame[mapped.ragged]))
         surveys += served
-    columns = ["survey", "plot", "date", "visited", "share_inside", "slope_deg", "n_subplots", "file", "row"]
+    columns = ["survey", "plot", "date", "visited", "doubt", "share_inside", "slope_deg", "n_subplots", "file", "row"]
     frame = pd.concat(parts, ignore_index=True)[columns] if parts else pd.DataFrame(columns=columns)
     return VisitRows(frame, surveys, findings)
 
@@ -77,6 +77,9 @@ def _with_survey(
 ) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
     frame = mapped.frame.copy()
     frame["file"] = frame["file"].astype("str")
+    # A list of all plots, printed beforehand, has blanks where the crew did not get to: no date and no word of a visit.
+    frame["doubt"] = ("visited" in mapped.given) & frame["visited"].isna() & frame["date"].isna()
+    frame.loc[mapped.bad.get("visited", pd.Series(dtype="str")).index, "doubt"] = True
     if "survey" in mapped.given and (len(served) > 1 or _labels_fit(frame["survey"], settings)):
         match = survey_by_label(frame["survey"].unique(), served)
         names = frame["survey"].map(match).astype("str")
@@ -141,7 +144,7 @@ def make_visits(
         index=False
     )
     frame = frame.astype({"survey": "str", "plot": "str"})
-    stated, more = _stated(rows.frame, set(plots["plot"]))
+    stated, more = _stated(rows.frame, list(plots["plot"]))
     findings += more
     frame = frame.merge(stated, how="left", on=["survey", "plot"], validate="one_to_one")
     frame = frame.merge(_seen(trees), how="left", on=["survey", "plot"], validate="one_to_one")
@@ -163,9 +166,9 @@ def make_visits(
     return frame[columns], findings
 
 
-def _stated(rows: pd.DataFrame, plots: set[str]) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
+def _stated(rows: pd.DataFrame, plots: list[str]) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
     """Keep one row per survey and plot that is in the plots table."""
-    unknown = ~rows["plot"].isin(list(plots))
+    unknown = ~rows["plot"].isin(plots)
     strange = rows[unknown]
     rows = rows[~unknown]
     twice = rows.duplicated(["survey", "plot"])
@@ -198,9 +201,14 @@ def _visited(frame: pd.DataFrame, settings: Settings, with_file: set[str]) -> li
     has_rows = frame["tree_rows"].notna()
     listed = frame["row"].notna()
     zero = {name for name, survey in settings.surveys.items() if survey.plots_without_rows == "zero"}
+    doubtful = listed & (frame["doubt"] == True) & ~has_rows  # noqa: E712  (blank where there is no row)
     frame["visited"] = (listed & (frame["said"] != 0)) | (~listed & (has_rows | frame["survey"].isin(list(zero))))
+    frame["visited"] &= ~doubtful
     unlisted = frame[has_rows & ~listed & frame["survey"].isin(list(with_file))]
-    findings = [note("visit not listed", unlisted.drop(columns=["file", "row"]))]
+    findings = [
+        note("visit not listed", unlisted.drop(columns=["file", "row"])),
+        note("visit in doubt", frame[doubtful]),
+    ]
     for survey, group in frame[~has_rows & ~listed].groupby("survey", sort=False):
         meaning = "visited and empty, so they count as zero" if survey in zero else "missing there"
         words = {"count": len(group), "survey": survey, "meaning": meaning}

@@ -121,7 +121,9 @@ def main() -> None:
                  for _ in range(options.runs)]  # fmt: skip
     low, high = (statistics.median(values) for values in zip(*pairs, strict=True))
     ratio = statistics.median(b / a for a, b in pairs)
-    print(f"{options.trees:,} trees, {options.runs} runs: floor {low:.3f} s, landcarbon {high:.3f} s, ratio {ratio:.2f}")
+    print(  # noqa: T201
+        f"{options.trees:,} trees, {options.runs} runs: floor {low:.3f} s, landcarbon {high:.3f} s, ratio {ratio:.2f}"
+    )
 
 
 if __name__ == "__main__":

@@ -3,7 +3,7 @@ function drawCarbonMap(place, data) {
   "use strict";
   const SVG = "http://www.w3.org/2000/svg";
   const HATCH = "url(#not-estimable)";
-  const LARGEST_PX = 13, SMALLEST_LARGEST_PX = 3.5, SPACING_SHARE = 0.25;
+  const LARGEST_PX = 13, SMALLEST_LARGEST_PX = 3.5, SPACING_SHARE = data.parcels.length ? 0.25 : 0.42;
   const D = {density: 0, densitySe: 1, densityLow: 2, densityHigh: 3, stock: 4, stockSe: 5, stockLow: 6, stockHigh: 7, plots: 8, method: 9};
   const C = {change: 0, se: 1, low: 2, high: 3, perYear: 4, perHaYear: 5, perHaYearSe: 6, co2: 7, paired: 8, since: 9, until: 10, years: 11, method: 12};
 

@@ -27,7 +27,7 @@ class _Unit:
 @cache
 def unit_table() -> dict[tuple[str, str], _Unit]:
     """Return the units by dimension and spelling."""
-    text = files("landcarbon.read").joinpath("units.csv").read_text(encoding="utf-8")
+    text = files("landcarbon").joinpath("read", "units.csv").read_text(encoding="utf-8")
     table = {}
     for line in csv.DictReader(text.splitlines()):
         factor = float(line["factor"]) if line["factor"] else None

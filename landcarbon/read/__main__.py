@@ -1,11 +1,13 @@
-"""Write the documentation page of the project file: ``python -m landcarbon.inventory [FILE]``."""
+"""Write the documentation page of the project file: ``python -m landcarbon.read [FILE]``."""
 
 from __future__ import annotations
 
 import sys
 from pathlib import Path
 
-from landcarbon.inventory.page import inventory_page
+from landcarbon.read.page import inventory_page
+
+__all__ = ["main"]
 
 
 def main() -> None:

@@ -45,7 +45,7 @@ class ColumnSpec:
 @cache
 def column_specs() -> tuple[ColumnSpec, ...]:
     """Return every canonical column, in the order of the data file."""
-    text = files("landcarbon.read").joinpath("columns.csv").read_text(encoding="utf-8")
+    text = files("landcarbon").joinpath("read", "columns.csv").read_text(encoding="utf-8")
     specs = []
     for line in csv.DictReader(text.splitlines()):
         needed, by_name = (line.pop(name) == "yes" for name in ("needed", "by_name"))

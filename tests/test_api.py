@@ -1,0 +1,77 @@
+"""The three uses of the Python face, a line or two each."""
+
+from __future__ import annotations
+
+import geopandas as gpd
+import pandas as pd
+import pytest
+
+import landcarbon
+from landcarbon.demo import copy_demo
+
+
+@pytest.fixture(scope="module")
+def inventory(tmp_path_factory):
+    return landcarbon.open_inventory(copy_demo(tmp_path_factory.mktemp("api") / "woodland"))
+
+
+def test_stocks_of_parcels_carry_their_geometry(inventory):
+    table = inventory.stocks(by="parcel")
+    assert isinstance(table, gpd.GeoDataFrame)
+    assert table.crs == inventory.results.parcels.crs
+    assert table.geometry.notna().all()
+
+
+def test_change_takes_years_or_names(inventory):
+    by_year = inventory.change(2014, 2024, by="parcel")
+    by_name = inventory.change("2014", "2024", by="parcel")
+    pd.testing.assert_frame_equal(pd.DataFrame(by_year), pd.DataFrame(by_name))
+
+
+def test_change_is_the_difference_of_the_stocks(inventory):
+    """Identity: in this version the change of a unit is the difference of its two stocks."""
+    stocks = inventory.stocks("inventory", pool="all").set_index("survey")["stock_t_c"]
+    change = inventory.change(2014, 2019, "inventory", pool="all")["change_t_c"].iloc[0]
+    assert change == pytest.approx(stocks["2019"] - stocks["2014"], rel=1e-9)
+
+
+def test_change_backwards_has_the_other_sign(inventory):
+    forward = inventory.change(2014, 2019, "inventory", pool="all").iloc[0]
+    backward = inventory.change(2019, 2014, "inventory", pool="all").iloc[0]
+    assert backward["change_t_c"] == pytest.approx(-forward["change_t_c"], rel=1e-12)
+    assert backward["change_se"] == pytest.approx(forward["change_se"], rel=1e-12)
+
+
+def test_map_is_one_file(inventory, tmp_path):
+    page = inventory.map(tmp_path / "carbon.html")
+    assert page.stat().st_size > 100_000
+    assert [path.name for path in tmp_path.iterdir()] == ["carbon.html"]
+
+
+def test_findings_are_a_copy(inventory):
+    findings = inventory.check()
+    findings["message"] = "changed"
+    assert "changed" not in set(inventory.check()["message"])
+
+
+@pytest.mark.parametrize(
+    ("call", "said"),
+    [
+        (lambda inv: inv.stocks(by="owner"), "by='owner'"),
+        (lambda inv: inv.stocks(pool="peat"), "no pool 'peat'"),
+        (lambda inv: inv.change(2014, 2030), "no survey 2030"),
+    ],
+)
+def test_faulty_calls_say_what_is_accepted(call, said, inventory):
+    with pytest.raises(landcarbon.UserError, match=said):
+        call(inventory)
+
+
+def test_a_missing_project_file_is_one_plain_error(tmp_path):
+    with pytest.raises(landcarbon.UserError, match=r"nowhere\.toml"):
+        landcarbon.open_inventory(tmp_path / "nowhere.toml")
+
+
+def test_unknown_name_of_the_package():
+    with pytest.raises(AttributeError, match="nosuch"):
+        landcarbon.nosuch  # noqa: B018
