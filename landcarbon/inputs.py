@@ -5,7 +5,7 @@ The columns of each table are listed, with unit and meaning, in ``landcarbon/rea
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import pandas as pd
@@ -44,6 +44,9 @@ class Inputs:
         Coordinate system of x, y and the parcels.
     area_method : str
         One sentence on where the areas come from.
+    samples : dict of DataFrame
+        Tables of the other pools by name (pieces, lines, logs, stumps, litter, ground_vegetation, saplings, soil); only
+        those the project file names.
     """
 
     trees: pd.DataFrame
@@ -57,3 +60,4 @@ class Inputs:
     files: pd.DataFrame
     crs: str | None
     area_method: str
+    samples: dict[str, pd.DataFrame] = field(default_factory=dict)

@@ -1,0 +1,79 @@
+"""The one shape of every pool: parts measured on plots, and the sums they make."""
+
+from __future__ import annotations
+
+import pandas as pd
+
+__all__ = ["PARTS", "PART_COLUMNS", "column_name", "empty_parts", "make_parts", "pool_of", "wide_parts"]
+
+#: Parts of each pool, in canonical order. A part is measured on its own set of plots.
+PARTS: dict[str, tuple[str, ...]] = {
+    "above_ground": ("trees", "saplings", "ground_vegetation"),
+    "below_ground": ("roots",),
+    "dead_wood": ("standing", "stumps", "down_coarse", "down_fine", "dead_roots"),
+    "litter": ("litter", "duff"),
+    "soil": ("soil",),
+}
+
+PART_COLUMNS = [
+    "survey",
+    "plot",
+    "pool",
+    "part",
+    "density_t_c_ha",  # t C per ha of the land sampled
+    "mass_t_ha",  # dry mass the carbon sits in; for soil the mass of fine soil
+    "samples",  # pieces, frames, cores or trees used
+    "method",
+    "known",  # weakest of the factors used: read, secondary, memory
+]
+
+
+def column_name(pool: str, part: str) -> str:
+    """Name of a part's column in the table of plots."""
+    return f"{pool}.{part}"
+
+
+def pool_of(column: str) -> str:
+    """Pool a part's column belongs to."""
+    return column.split(".", 1)[0]
+
+
+def empty_parts() -> pd.DataFrame:
+    """Return a table of parts without rows."""
+    text = {name: pd.Series(dtype="str") for name in PART_COLUMNS}
+    numbers = {name: pd.Series(dtype="float64") for name in ("density_t_c_ha", "mass_t_ha")}
+    return pd.DataFrame({**text, **numbers, "samples": pd.Series(dtype="int64")})[PART_COLUMNS]
+
+
+def make_parts(measured: pd.DataFrame, *, pool: str, part: str, method: str, known: str = "read") -> pd.DataFrame:
+    """Label the outcome of a pool module.
+
+    Parameters
+    ----------
+    measured : DataFrame
+        survey, plot, density_t_c_ha [t C/ha], mass_t_ha [t/ha], samples; one row per plot and survey where the part
+        was measured, also where nothing was found.
+    pool, part : str
+        As in ``PARTS``.
+    method : str
+        How it was obtained, in a few words.
+    known : {"read", "secondary", "memory"}
+        How the weakest factor is known.
+    """
+    if part not in PARTS[pool]:
+        raise ValueError(f"{part!r} is not a part of {pool!r}")
+    table = measured.assign(pool=pool, part=part, method=method, known=known)
+    table = table.astype({"survey": "str", "plot": "str", "samples": "int64"})
+    return table[PART_COLUMNS].reset_index(drop=True)
+
+
+def wide_parts(parts: pd.DataFrame) -> pd.DataFrame:
+    """Turn part rows into one row per survey and plot with a column ``pool.part`` each; NaN where not measured."""
+    if parts.empty:
+        return pd.DataFrame({"survey": pd.Series(dtype="str"), "plot": pd.Series(dtype="str")})
+    named = parts.assign(column=parts["pool"] + "." + parts["part"])
+    table = named.pivot(index=["survey", "plot"], columns="column", values="density_t_c_ha")
+    order = [column_name(pool, part) for pool, names in PARTS.items() for part in names]
+    table = table[[name for name in order if name in table]]
+    table.columns.name = None
+    return table.reset_index()
