@@ -6,17 +6,16 @@ Run ``python make_demo.py [FOLDER]``. The same seed gives the same files. Nothin
 from __future__ import annotations
 
 import sys
-import zipfile
-from io import BytesIO
 from pathlib import Path
 
 import geopandas as gpd
 import numpy as np
-import openpyxl
 import pandas as pd
 import pyogrio
 import pyproj
 import shapely
+from floor_sheets import write_floor
+from sheets import FIXED_TIME, Fault, fault_lines, write_xlsx
 from woodland import (
     CRS,
     LARGE_LIMIT_CM,
@@ -32,10 +31,9 @@ from woodland import (
 __all__ = ["make_demo"]
 
 SEED = 144
-Fault = tuple[str, int, str, str, str, str]  # file, line, column, as written, what is wrong, finding
+NUMERIC = {"tree_no": int, "stem_no": int, "diam_mm": int, "ht_m": float, "rot": int}
 
 FIRST_DAY = {2014: "2014-05-12", 2019: "2019-05-20", 2024: "2024-05-13"}
-FIXED_TIME = "2024-11-04T08:00:00Z"  # stamped into the container files, so that a rerun gives the same bytes
 
 
 # --- what the crews write down ---------------------------------------------------------------------------------------
@@ -173,17 +171,6 @@ def _plant(sheet: pd.DataFrame) -> pd.DataFrame:
     return pd.concat([sheet.loc[:twin], copy, sheet.loc[twin + 1 :]], ignore_index=True)
 
 
-def _fault_lines(file: str, table: pd.DataFrame) -> list[Fault]:
-    """List the faults of one table; the header is line 1."""
-    marked = table.reset_index(drop=True)
-    marked = marked[marked.fault != ""]
-    rows = []
-    for line, row in zip(marked.index + 2, marked.to_dict("records"), strict=True):
-        column, what, rule = row["fault"].split("|")
-        rows.append((file, int(line), column, row[column], what, rule))
-    return rows
-
-
 # --- the files ------------------------------------------------------------------------------------------------------
 
 
@@ -192,28 +179,6 @@ def _write_gpkg(parcels: gpd.GeoDataFrame, path: Path) -> None:
     pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": FIXED_TIME.replace("Z", ".000Z")})
     parcels.to_file(path, layer="parcels", driver="GPKG", engine="pyogrio")
     pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": None})
-
-
-def _write_xlsx(table: pd.DataFrame, path: Path) -> None:
-    """Write a workbook with real numbers in its cells, then repack it without the time of writing."""
-    book = openpyxl.Workbook()
-    sheet = book.active
-    sheet.title = "trees"
-    sheet.append(list(table.columns))
-    numeric = {"tree_no": int, "stem_no": int, "diam_mm": int, "ht_m": float, "rot": int}
-    cells = [[numeric.get(name, str)(value) if value else None for value in table[name]] for name in table.columns]
-    for row in zip(*cells, strict=True):
-        sheet.append(row)
-    raw = BytesIO()
-    book.save(raw)
-    with zipfile.ZipFile(raw) as old, zipfile.ZipFile(path, "w", zipfile.ZIP_DEFLATED) as new:
-        for name in sorted(old.namelist()):
-            content = old.read(name)
-            if name == "docProps/core.xml":
-                stamp = book.properties.modified.strftime("%Y-%m-%dT%H:%M:%SZ").encode()
-                created = book.properties.created.strftime("%Y-%m-%dT%H:%M:%SZ").encode()
-                content = content.replace(stamp, FIXED_TIME.encode()).replace(created, FIXED_TIME.encode())
-            new.writestr(zipfile.ZipInfo(name, (2024, 11, 4, 8, 0, 0)), content, zipfile.ZIP_DEFLATED)
 
 
 def _write_trees(sheet: pd.DataFrame, folder: Path) -> list[Fault]:
@@ -230,8 +195,8 @@ def _write_trees(sheet: pd.DataFrame, folder: Path) -> list[Fault]:
             plain.to_csv(folder / name, index=False, encoding="utf-8-sig", lineterminator="\n")
         else:
             name = f"trees_{survey}.xlsx"
-            _write_xlsx(plain, folder / name)
-        faults += _fault_lines(name, table)
+            write_xlsx({"trees": plain}, folder / name, NUMERIC)
+        faults += fault_lines(name, table)
     return faults
 
 
@@ -247,11 +212,11 @@ def _write_tables(plots: pd.DataFrame, visits: dict[int, pd.DataFrame], folder: 
         "lat|a digit of the latitude is wrong: the point falls 3 km outside all parcels|plot outside parcels"
     )
     table = table.assign(**{name: table[name].map("{:.6f}".format) for name in ("lon", "lat")})
-    faults = _fault_lines("plots.csv", table)
+    faults = fault_lines("plots.csv", table)
     table.drop(columns="fault").to_csv(folder / "plots.csv", index=False, lineterminator="\n")
     species = SPECIES[["code", "latin"]].assign(fault="")
     species.loc["SY", "fault"] = "latin|misspelt: the sycamore is Acer pseudoplatanus|species unknown"
-    faults += _fault_lines("species.csv", species)
+    faults += fault_lines("species.csv", species)
     species.drop(columns="fault").to_csv(folder / "species.csv", index=False, lineterminator="\n")
     for survey, visit in visits.items():
         visit.to_csv(folder / f"visits_{survey}.csv", index=False, lineterminator="\n")
@@ -285,6 +250,7 @@ def make_demo(folder: Path) -> None:
     sheet = _plant(_as_written(_tally(states, visits, rng)))
     _write_gpkg(parcels, folder / "parcels.gpkg")
     faults = _write_tables(plots, visits, folder) + _write_trees(sheet, folder)
+    faults += write_floor(plots, visits, states, folder, SEED)
     _write_readme(faults, folder)
 
 

@@ -18,11 +18,14 @@ import shapely
 
 __all__ = [
     "CRS",
+    "INGROWTH",
     "LARGE_LIMIT_CM",
     "SMALL_LIMIT_CM",
     "SMALL_RADIUS_M",
     "SPECIES",
+    "STORM",
     "SURVEYS",
+    "THINNED",
     "draw_parcels",
     "lay_out_plots",
     "live_through",

@@ -141,9 +141,17 @@ class Inventory:
         return target
 
     def run(self, out: str | Path | None = None) -> Path:
-        """Write the results folder; ``results/`` beside the project file unless told otherwise."""
+        """Write the results folder; ``results/`` beside the project file unless told otherwise.
+
+        Raises
+        ------
+        UserError
+            If nothing can be estimated; earlier results are left as they are.
+        """
+        from landcarbon.assemble import refuse_nothing
         from landcarbon.publish.folder import write_results
 
+        refuse_nothing(self.results)
         target = Path(out) if out is not None else self.settings.folder / "results"
         write_results(self.results, target)
         return target

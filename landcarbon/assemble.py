@@ -7,13 +7,14 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
+from allometry.roots import level, root_models
 from landcarbon.check.run import reconcile
+from landcarbon.errors import UserError
 from landcarbon.findings import join_findings
-from landcarbon.marks import output_marks
+from landcarbon.marks import area_marks, part_marks, pool_marks, row_marks, tree_marks
 from landcarbon.pipeline import (
     PlotStage,
     carbon_domain,
-    counted_pools,
     estimate,
     measure_trees,
     read_and_check,
@@ -24,11 +25,11 @@ from landcarbon.publish.results import Results
 if TYPE_CHECKING:
     from landcarbon.inventory import Settings
 
-__all__ = ["assemble", "long_plots", "run_stage"]
+__all__ = ["assemble", "long_plots", "refuse_nothing", "run_stage"]
 
 STANDING_DEAD_NOTE = (
-    "Dead wood holds standing dead trees only, at the dry mass of a live tree of their diameter: without deductions "
-    "for decay or lost tops it is an upper figure."
+    "Standing dead trees stand at the dry mass of a live tree of their size: without deductions for decay or lost tops "
+    "that is an upper figure."
 )
 
 
@@ -57,31 +58,99 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
     """Estimate from the plots and gather everything that is published."""
     stocks, change, findings = estimate(stage, settings)
     inputs = stage.inputs
+    all_findings = join_findings([inputs.findings, findings])
+    counts = reconcile(inputs)
     return Results(
         settings_summary=_summary(settings),
         stocks=stocks,
         change=change,
-        findings=join_findings([inputs.findings, findings]),
+        findings=all_findings,
         trees=inputs.trees,
-        plots=long_plots(stage.plot_pools, counted_pools(settings)),
+        plots=long_plots(stage, settings),
         parcels=inputs.parcels,
         plot_points=inputs.plots[["plot", "parcel", "stratum", "lon", "lat", "inside"]],
         surveys=inputs.surveys,
-        reconciliation=reconcile(inputs),
+        reconciliation=counts,
         run={"inputs": inputs.files.to_dict(orient="records"), "equations": _equations_used(stage)},
         crs=inputs.crs,
         area_method=inputs.area_method,
-        marks=output_marks(stage.plot_pools, _pool_ways(settings), _notes(settings)),
+        marks=_marks(stage, settings, stocks, all_findings, counts),
     )
 
 
-def long_plots(plot_pools: pd.DataFrame, pools: list[str]) -> pd.DataFrame:
-    """One row per survey, plot and pool, from the wide table of plots."""
-    keys = [name for name in plot_pools.columns if name not in [*pools, "all"]]
-    order = [*pools, "all"]
-    table = plot_pools.melt(id_vars=keys, value_vars=order, var_name="pool", value_name="density_t_c_ha")
-    first = ["survey", "plot", "pool", "density_t_c_ha"]
-    return table[first + [name for name in keys if name not in first]]
+def refuse_nothing(results: Results) -> None:
+    """Stop before results without any figure take the place of earlier ones.
+
+    Raises
+    ------
+    UserError
+        If no unit could be estimated at any survey; the worst findings are named.
+    """
+    if results.stocks["density_t_c_ha"].notna().any():
+        return
+    errors = results.findings[results.findings["severity"] == "error"]
+    counts = errors["rule"].value_counts()
+    worst = ", ".join(f"{rule} ({count})" for rule, count in counts.head(5).items())
+    raise UserError(
+        "nothing can be estimated: no stratum has two plots that count at any survey",
+        where=results.settings_summary["project_file"],
+        remedy=f"Findings: {worst or 'none of severity error'}. Run landcarbon check to see them all.",
+    )
+
+
+def long_plots(stage: PlotStage, settings: Settings) -> pd.DataFrame:
+    """Give one row per survey, plot, pool and part; a pool as a whole, and ``all``, have a blank part.
+
+    A pool stands for a plot only where all its parts were measured there.
+    """
+    table, sums = stage.plot_parts, stage.sums
+    columns = sums["all"]
+    keys = [name for name in table.columns if name not in columns]
+    blocks = []
+    for pool, parts in sums.items():
+        total = table[parts].sum(axis=1, skipna=False)
+        blocks.append(table[keys].assign(pool=pool, part="", density_t_c_ha=total))
+        if pool != "all":
+            blocks += [
+                table[keys].assign(pool=pool, part=column.split(".", 1)[1], density_t_c_ha=table[column])
+                for column in parts
+            ]
+    rows = pd.concat(blocks, ignore_index=True)
+    first = ["survey", "plot", "pool", "part", "density_t_c_ha"]
+    rows = rows[first + [name for name in keys if name not in first]]
+    told = stage.sample_parts[["survey", "plot", "pool", "part", "mass_t_ha", "samples", "method", "known"]]
+    rows = rows.merge(told, on=["survey", "plot", "pool", "part"], how="left")
+    for column, (method, known) in _tree_methods(settings).items():
+        pool, part = column.split(".")
+        here = (rows["pool"] == pool) & (rows["part"] == part) & rows["density_t_c_ha"].notna()
+        rows.loc[here, ["method", "known"]] = [method, known]
+    return rows
+
+
+def _tree_methods(settings: Settings) -> dict[str, tuple[str, str]]:
+    """How the parts that trees give are obtained, and how the weakest factor of the plot step is known."""
+    methods = {
+        "above_ground.trees": ("equation of each tree x carbon fraction x expansion factor; see trees.parquet", "read"),
+        "dead_wood.standing": ("standing dead trees, tree by tree; see trees.parquet", "read"),
+        "dead_wood.dead_roots": ("roots of standing dead trees, by decay class", "read"),
+    }
+    model = root_model(settings)
+    if model:
+        words = "per plot, from its shoot biomass per hectare" if level(model) == "stand" else "tree by tree"
+        methods["below_ground.roots"] = (f"root model {model}, {words}", root_known(model))
+    return methods
+
+
+def root_is_memory(settings: Settings) -> bool:
+    """Whether roots rest on a model known only from memory."""
+    model = root_model(settings)
+    return bool(model) and root_known(model) == "memory"
+
+
+def root_known(model: str) -> str:
+    """How the coefficients of a root model are known."""
+    table = root_models().set_index("model_id")
+    return str(table.loc[model, "known"])
 
 
 def _summary(settings: Settings) -> dict[str, Any]:
@@ -101,12 +170,32 @@ def _pool_ways(settings: Settings) -> dict[str, str]:
     ways = {}
     for name in type(settings.pools).model_fields:
         pool = getattr(settings.pools, name)
-        ways[name] = f"not counted: {pool.reason}" if pool.how == "not counted" else pool.how
+        words = {
+            "not counted": f"not counted: {pool.reason}",
+            "default": f"default factor {pool.value_t_c_ha} t C/ha, {pool.source}",
+        }
+        ways[name] = words.get(pool.how, pool.how)
     return ways
 
 
-def _notes(settings: Settings) -> list[str]:
-    return [STANDING_DEAD_NOTE] if "dead_wood" in counted_pools(settings) else []
+def _marks(
+    stage: PlotStage, settings: Settings, stocks: pd.DataFrame, findings: pd.DataFrame, counts: pd.DataFrame
+) -> list[str]:
+    figures = stocks[stocks["density_t_c_ha"].notna() & (stocks["pool"] != "all")]
+    surveys = [str(name) for name in stage.inputs.surveys["survey"]]
+    measured = {name: list(figures.loc[figures["survey"] == name, "pool"].unique()) for name in surveys}
+    whole = stage.inputs.trees.get("dead_how")
+    standing = (
+        "dead_wood.standing" in stage.plot_parts and whole is not None and "whole tree" in set(whole.astype("str"))
+    )
+    return [
+        *row_marks(findings, counts),
+        *area_marks(stocks),
+        *tree_marks(stage.inputs.trees, stage.plan.assignments, stage.plan.catalogue.table),
+        *part_marks(stage.sample_parts, root_model(settings) if root_is_memory(settings) else ""),
+        *pool_marks(_pool_ways(settings), measured),
+        *([STANDING_DEAD_NOTE] if standing else []),
+    ]
 
 
 def _equations_used(stage: PlotStage) -> list[dict[str, Any]]:

@@ -5,6 +5,7 @@ Whatever a user can cause ends in one message and exit code 2; 1 is kept for fau
 
 from __future__ import annotations
 
+import os
 import sys
 from pathlib import Path
 from typing import Annotated, Any
@@ -28,8 +29,18 @@ app = typer.Typer(
 _WIDTH, _HEIGHT = 110, 60  # for output that goes to a file or a pipe, where there is no size to ask for
 
 
+class _Output(Console):
+    """A console whose reader may leave early, as in ``landcarbon equations | head``: that is no fault."""
+
+    def on_broken_pipe(self) -> None:
+        """Leave with code 0; what is still in the buffer goes nowhere."""
+        self.quiet = True
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise SystemExit(0)
+
+
 def _console() -> Console:
-    return Console(highlight=False) if sys.stdout.isatty() else Console(highlight=False, width=_WIDTH, height=_HEIGHT)
+    return _Output(highlight=False) if sys.stdout.isatty() else _Output(highlight=False, width=_WIDTH, height=_HEIGHT)
 
 
 out = _console()
@@ -148,33 +159,42 @@ def trace(
     parcel: Annotated[str | None, typer.Option("--parcel", help="Parcel to trace.")] = None,
     stratum: Annotated[str | None, typer.Option("--stratum", help="Stratum to trace.")] = None,
     survey: Annotated[str | None, typer.Option("--survey", help="Survey; default: the last.")] = None,
-    pool: Annotated[str, typer.Option("--pool", help="Pool.")] = "above_ground",
-    trees: Annotated[int, typer.Option("--trees", min=0, help="How many of the largest trees to list.")] = 10,
+    pool: Annotated[str, typer.Option("--pool", help="Pool, or all.")] = "above_ground",
+    plot: Annotated[str | None, typer.Option("--plot", help="Only this plot, with all its trees.")] = None,
+    trees: Annotated[
+        int | None, typer.Option("--trees", min=0, help="How many of the largest trees to list; default: 10.")
+    ] = None,
 ) -> None:
     """Show the plots and trees a figure was worked out from, with file and line."""
     from landcarbon.publish.folder import open_results
-    from landcarbon.publish.terminal import print_trace
+    from landcarbon.publish.terminal_trace import print_trace
     from landcarbon.trace import trace_unit
 
-    print_trace(trace_unit(open_results(results), parcel=parcel, stratum=stratum, survey=survey, pool=pool), out, trees)
+    opened = open_results(results)
+    found = trace_unit(opened, parcel=parcel, stratum=stratum, survey=survey, pool=pool, plot=plot)
+    all_of_plot = len(found.trees) if plot is not None else 10
+    print_trace(found, out, all_of_plot if trees is None else trees)
 
 
 @app.command()
 def equations(
-    text: Annotated[str, typer.Argument(metavar="[TEXT]", help="Words to look for: a species, genus, source.")] = "",
+    text: Annotated[
+        list[str] | None,
+        typer.Argument(metavar="[TEXT]...", help="Words to look for: a species, genus, publication, id."),
+    ] = None,
     region: Annotated[str | None, typer.Option("--region", help="Only this region.")] = None,
     component: Annotated[str | None, typer.Option("--component", help="Only this component, e.g. agb.")] = None,
-    one: Annotated[str | None, typer.Option("--id", help="Show one equation in full.")] = None,
+    one: Annotated[str | None, typer.Option("--id", help="Show one in full.")] = None,
 ) -> None:
-    """List or search the catalogue of published equations."""
-    from allometry.catalogue import load_catalogue
-    from landcarbon.publish.terminal import print_equation, print_equations
+    """List or search the published equations, root models and height curves."""
+    from landcarbon.publish.equation_list import find_published, one_published
+    from landcarbon.publish.terminal_equations import print_found, print_published
 
-    catalogue = load_catalogue()
     if one is not None:
-        print_equation(catalogue.row(one), out)
+        print_published(*one_published(one), out)
     else:
-        print_equations(catalogue.find(text or None, region=region, component=component), out)
+        words = " ".join(text or [])
+        print_found(find_published(words, region=region, component=component), out, text=words)
 
 
 def _open(inventory: Path) -> Any:
@@ -190,6 +210,7 @@ def _status() -> Any:
 
 
 def _run(inventory: Path, target: Path, *, tiles: bool) -> Any:
+    from landcarbon.assemble import refuse_nothing
     from landcarbon.publish.folder import check_target, write_results
     from landcarbon.publish.terminal import print_results
 
@@ -198,6 +219,7 @@ def _run(inventory: Path, target: Path, *, tiles: bool) -> Any:
     with _status() as status:
         opened.progress = status
         results = opened.results
+        refuse_nothing(results)
         status("writing the results")
         write_results(results, target, base_tiles=tiles)
     print_results(results, out, folder=target.resolve())

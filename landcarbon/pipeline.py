@@ -22,10 +22,22 @@ from landcarbon.check.run import run_checks
 from landcarbon.errors import UserError
 from landcarbon.estimate.stocks import estimate_stocks
 from landcarbon.findings import empty_findings, join_findings, make_findings
-from landcarbon.plots import TREE_POOLS, PlotDesign, expansion_factors, plot_pools, plot_sums, visit_index
-from landcarbon.pools.trees import TreePlan, combine_stems, make_tree_plan, tree_biomass, tree_findings
+from landcarbon.inventory.measured import measured_parts
+from landcarbon.plots import TREE_PARTS, PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
+from landcarbon.pool_options import standing_options
+from landcarbon.pools.parts import column_name
+from landcarbon.pools.trees import (
+    TreePlan,
+    combine_stems,
+    dead_trees,
+    label_trees,
+    make_tree_plan,
+    tree_biomass,
+    tree_findings,
+)
 from landcarbon.publish.results import CHANGE_COLUMNS
 from landcarbon.read.load import load_inputs
+from landcarbon.sample_pools import join_parts, pool_sums, sample_parts
 
 if TYPE_CHECKING:
     from landcarbon.inputs import Inputs
@@ -35,13 +47,13 @@ __all__ = [
     "PlotStage",
     "carbon_domain",
     "change_between",
-    "counted_pools",
     "design_of",
     "estimate",
     "measure_trees",
     "read_and_check",
     "root_model",
     "survey_pairs",
+    "tree_parts",
 ]
 
 
@@ -55,13 +67,21 @@ class PlotStage:
         With trees evaluated and every finding so far.
     plan : TreePlan
         Equation and factors per species code.
-    plot_pools : DataFrame
-        One row per visited plot and survey.
+    plot_parts : DataFrame
+        One row per plot and survey with a column per part of a pool; NaN where the part was not measured.
+    sample_parts : DataFrame
+        The parts that are not from trees, with mass, number of samples, method and known mark.
     """
 
     inputs: Inputs
     plan: TreePlan
-    plot_pools: pd.DataFrame
+    plot_parts: pd.DataFrame
+    sample_parts: pd.DataFrame
+
+    @property
+    def sums(self) -> dict[str, list[str]]:
+        """Columns that make up each pool, and ``all``."""
+        return pool_sums(self.plot_parts)
 
 
 def read_and_check(settings: Settings) -> Inputs:
@@ -112,21 +132,27 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
         stress=settings.equations.stress,
         tree_root_model=root if root and level(root) == "tree" else "",
     )
-    trees, biomass_findings = tree_findings(_named(tree_biomass(trees, plan), plan), plan)
+    trees, biomass_findings = tree_findings(label_trees(tree_biomass(trees, plan), plan), plan)
     _stop_beyond_range(trees, settings)
+    wanted = tree_parts(settings)
+    dead_findings = empty_findings()
+    if any(part.startswith("dead_wood") for part in wanted):
+        trees, dead_findings = dead_trees(trees, plan, standing_options(settings))
     design = design_of(settings)
     index = visit_index(trees, inputs.visits)
     trees = trees.assign(expansion=expansion_factors(trees, inputs.visits, index, design))
     position = plan.positions(trees["species"])
-    memory = (assignments["known"] == "memory").to_numpy()
-    sums = plot_sums(trees, index, len(inputs.visits), conifer=plan.conifer[position], memory=memory[position])
-    pools, pool_findings = plot_pools(
+    sums = plot_sums(trees, index, len(inputs.visits), conifer=plan.conifer[position])
+    table, plot_findings = plot_parts(
         inputs.visits,
         inputs.plots,
         sums,
-        pools=counted_pools(settings),
+        parts=wanted,
         design=design,
         root_model=root if root and level(root) == "stand" else "",
+    )
+    parts, part_findings = sample_parts(
+        inputs, settings, assignments, catalogue, domain=carbon_domain(settings), design=design
     )
     findings = join_findings(
         [
@@ -136,10 +162,12 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
             memory_findings(assignments, trees),
             range_findings(trees),
             biomass_findings,
-            pool_findings,
+            dead_findings,
+            plot_findings,
+            part_findings,
         ]
     )
-    return PlotStage(replace(inputs, trees=trees, findings=findings), plan, pools)
+    return PlotStage(replace(inputs, trees=trees, findings=findings), plan, join_parts(table, parts, inputs), parts)
 
 
 def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
@@ -151,7 +179,7 @@ def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.Dat
     """
     surveys = [str(name) for name in stage.inputs.surveys["survey"]]
     options = _options(stage, settings)
-    stocks, findings = estimate_stocks(stage.plot_pools, surveys=surveys, **options)
+    stocks, findings = estimate_stocks(stage.plot_parts, surveys=surveys, **options)
     parts, found = [], [findings]
     for since, until in survey_pairs(surveys):
         part, finding = change_between(stage, settings, since, until)
@@ -170,7 +198,7 @@ def change_between(stage: PlotStage, settings: Settings, since: str, until: str)
     change, findings : DataFrame
         Without rows, and with a finding that says so, where one of the surveys has no plot to count.
     """
-    counted = set(stage.plot_pools["survey"])
+    counted = set(stage.plot_parts["survey"])
     lacking = [survey for survey in (since, until) if survey not in counted]
     if lacking:
         return pd.DataFrame(columns=CHANGE_COLUMNS), make_findings(
@@ -181,7 +209,7 @@ def change_between(stage: PlotStage, settings: Settings, since: str, until: str)
             message=f"No plot counts at survey {', '.join(lacking)}: change {since} to {until} cannot be stated.",
             remedy="See the other findings for why its plots do not count.",
         )
-    return estimate_change(stage.plot_pools, since=since, until=until, **_options(stage, settings))
+    return estimate_change(stage.plot_parts, since=since, until=until, **_options(stage, settings))
 
 
 def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
@@ -190,7 +218,8 @@ def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
     return {
         "strata": inputs.strata,
         "parcels": parcels,
-        "pools": counted_pools(settings),
+        "pools": [pool for pool in stage.sums if pool != "all"],
+        "sums": stage.sums,
         "confidence": settings.inventory.confidence,
         "inventory_name": settings.inventory.name,
     }
@@ -204,9 +233,12 @@ def survey_pairs(surveys: list[str]) -> list[tuple[str, str]]:
     return pairs
 
 
-def counted_pools(settings: Settings) -> list[str]:
-    """Pools that enter the sum, in canonical order."""
-    return [pool for pool in TREE_POOLS if getattr(settings.pools, pool).how != "not counted"]
+def tree_parts(settings: Settings) -> list[str]:
+    """Columns of the parts that trees give, as far as they are counted."""
+    wanted = {column_name(pool, part) for pool, parts in measured_parts(settings).items() for part in parts}
+    if settings.pools.below_ground.how != "not counted":
+        wanted.add("below_ground.roots")
+    return [column for column in TREE_PARTS if column in wanted]
 
 
 def root_model(settings: Settings) -> str:
@@ -223,16 +255,6 @@ def carbon_domain(settings: Settings) -> str:
         return settings.carbon.domain
     tropical = {"tropics", "mangrove"}
     return "tropical and subtropical" if settings.equations.region in tropical else "temperate and boreal"
-
-
-def _named(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
-    """Add accepted name and ``known`` mark, so that every tree row tells what it rests on."""
-    position = plan.positions(trees["species"])
-    names = plan.assignments[["accepted_name", "known"]].astype("str")
-    return trees.assign(
-        scientific_name=pd.Categorical(names["accepted_name"].to_numpy()[position]),
-        known=pd.Categorical(names["known"].to_numpy()[position]),
-    )
 
 
 def _fill_heights(trees: pd.DataFrame, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -259,10 +281,13 @@ def _fill_heights(trees: pd.DataFrame, settings: Settings) -> tuple[pd.DataFrame
     imputed = int((source == "curve").sum())
     findings = empty_findings()
     if imputed:
-        served = curves[curves["n"] > 0]
-        fitted = ", ".join(
-            f"{str(row.species) or 'all species'} (n {row.n}, RMSE {row.rmse_m:.1f} m)" for row in served.itertuples()
-        )
+        served = curves[curves["n"] > 0].drop_duplicates(["parameters", "n"], keep=False)
+        pooled = curves[curves["n"] > 0].drop(served.index).drop_duplicates(["parameters", "n"])
+        told = [
+            (str(name), n, rmse) for name, n, rmse in zip(served["species"], served["n"], served["rmse_m"], strict=True)
+        ]
+        told += [("all other species together", n, rmse) for n, rmse in zip(pooled["n"], pooled["rmse_m"], strict=True)]
+        fitted = ", ".join(f"{name or 'no species'} (n {n}, RMSE {rmse:.1f} m)" for name, n, rmse in told)
         findings = make_findings(
             "height from curve",
             severity="note",
@@ -308,7 +333,7 @@ def _stop_beyond_range(trees: pd.DataFrame, settings: Settings) -> None:
 
 def _carbon_at_stake(findings: pd.DataFrame, trees: pd.DataFrame) -> pd.DataFrame:
     """Fill in the carbon of the tree rows that findings are about."""
-    known = findings["row_id"].notna()
+    known = findings["row_id"].notna() & (findings["table"] == "trees")
     if not known.any():
         return findings
     carbon = trees.set_index("row_id")["carbon_kg"]

@@ -16,9 +16,9 @@ from landcarbon.errors import SettingsError
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.pools.trees import has_status
 
-__all__ = ["TREE_POOLS", "PlotDesign", "PlotSums", "expansion_factors", "plot_pools", "plot_sums", "visit_index"]
+__all__ = ["TREE_PARTS", "PlotDesign", "PlotSums", "expansion_factors", "plot_parts", "plot_sums", "visit_index"]
 
-TREE_POOLS = ("above_ground", "below_ground", "dead_wood")
+TREE_PARTS = ("above_ground.trees", "below_ground.roots", "dead_wood.standing", "dead_wood.dead_roots")
 _CM_PER_M = 100.0
 
 
@@ -82,8 +82,7 @@ class PlotSums:
     conifer: np.ndarray
     roots: np.ndarray
     dead_carbon: np.ndarray
-    beyond_range: np.ndarray
-    memory: np.ndarray
+    dead_root_carbon: np.ndarray
     trees: np.ndarray = field(default_factory=lambda: np.zeros(0))
 
     def __add__(self, other: PlotSums) -> PlotSums:
@@ -179,21 +178,19 @@ def expansion_factors(trees: pd.DataFrame, visits: pd.DataFrame, index: np.ndarr
     return np.where(inside, by_class * weight * per_visit[at], np.nan)
 
 
-def plot_sums(
-    trees: pd.DataFrame, index: np.ndarray, count: int, *, conifer: np.ndarray, memory: np.ndarray
-) -> PlotSums:
+def plot_sums(trees: pd.DataFrame, index: np.ndarray, count: int, *, conifer: np.ndarray) -> PlotSums:
     """Sum the trees of a batch over visits.
 
     Parameters
     ----------
     trees : DataFrame
-        Trees with biomass_kg, carbon_kg, expansion and used.
+        Trees with biomass_kg, carbon_kg, expansion and used; root_kg and dead_root_carbon_kg where roots are per tree.
     index : ndarray of int
         Visit of each tree.
     count : int
         Number of visits.
-    conifer, memory : ndarray of bool
-        Per tree: conifer; equation known only from memory.
+    conifer : ndarray of bool
+        Per tree.
     """
     counts = trees["used"].to_numpy() & (index >= 0)
     live = counts & has_status(trees["status"], "live")
@@ -208,29 +205,30 @@ def plot_sums(
         rows = np.flatnonzero(where)
         return np.bincount(at[rows], weights=values[rows], minlength=count)
 
-    roots = trees["root_kg"].to_numpy() * per_ha if "root_kg" in trees else None
+    def rooted(name: str, where: np.ndarray) -> np.ndarray:
+        return total(trees[name].to_numpy() * per_ha, where) if name in trees else np.zeros(count)
+
     return PlotSums(
         biomass=np.bincount(at, weights=mass, minlength=count),
         carbon=np.bincount(at, weights=np.where(live, carbon, 0.0), minlength=count),
         conifer=total(mass, live & conifer),
-        roots=np.zeros(count) if roots is None else total(roots, live),
+        roots=rooted("root_kg", live),
         dead_carbon=total(carbon, dead),
-        beyond_range=total(mass, live & trees["out_of_range"].to_numpy()),
-        memory=total(mass, live & memory),
+        dead_root_carbon=rooted("dead_root_carbon_kg", dead),
         trees=np.bincount(at, weights=live | dead, minlength=count),
     )
 
 
-def plot_pools(
+def plot_parts(
     visits: pd.DataFrame,
     plots: pd.DataFrame,
     sums: PlotSums,
     *,
-    pools: list[str],
+    parts: list[str],
     design: PlotDesign,
     root_model: str = "",
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Carbon density of every visited plot, one column per counted pool and ``all``.
+    """Carbon density of every visited plot, one column per part of a pool that trees give.
 
     Parameters
     ----------
@@ -238,8 +236,8 @@ def plot_pools(
         Canonical tables.
     sums : PlotSums
         Sums over trees, in the order of ``visits``.
-    pools : list of str
-        Pools counted, of ``TREE_POOLS``.
+    parts : list of str
+        Columns wanted, of ``TREE_PARTS``.
     design : PlotDesign
         Gives the planned number of subplots, for the relative area sampled.
     root_model : str
@@ -248,8 +246,7 @@ def plot_pools(
     Returns
     -------
     table : DataFrame
-        survey, plot, parcel, stratum, inside, date, size, the pools [t C/ha], all, and trees, biomass_t_ha,
-        beyond_range_t_ha, memory_t_ha.
+        survey, plot, parcel, stratum, inside, date, size, the parts [t C/ha], and trees, biomass_t_ha.
     findings : DataFrame
         Plots whose biomass lies outside the range of the root model.
 
@@ -262,12 +259,13 @@ def plot_pools(
         share = np.where(sums.biomass > 0, sums.conifer / sums.biomass, 0.0)
     outside = np.zeros(len(visits), dtype=bool)
     roots = sums.roots
-    if root_model and "below_ground" in pools:
+    if root_model and "below_ground.roots" in parts:
         roots, outside = stand_roots(root_model, sums.biomass, conifer_share=share)
     values = {
-        "above_ground": sums.carbon,
-        "below_ground": np.where(sums.biomass > 0, roots * fraction, 0.0),
-        "dead_wood": sums.dead_carbon,
+        "above_ground.trees": sums.carbon,
+        "below_ground.roots": np.where(sums.biomass > 0, roots * fraction, 0.0),
+        "dead_wood.standing": sums.dead_carbon,
+        "dead_wood.dead_roots": sums.dead_root_carbon,
     }
     where = plots.set_index("plot").reindex(visits["plot"].astype("str"))
     subplots = visits["n_subplots"].to_numpy(dtype=float)
@@ -285,14 +283,11 @@ def plot_pools(
             "inside": where["inside"].to_numpy(dtype=bool),
             "date": visits["date"].to_numpy(),
             "size": size,
-            **{pool: values[pool] for pool in pools},
+            **{part: values[part] for part in parts},
         }
     )
-    table["all"] = np.sum([table[pool].to_numpy() for pool in pools], axis=0)
     table["trees"] = sums.trees
     table["biomass_t_ha"] = sums.biomass
-    table["beyond_range_t_ha"] = sums.beyond_range
-    table["memory_t_ha"] = sums.memory
     visited = visits["visited"].to_numpy(dtype=bool)
     return table[visited].reset_index(drop=True), _root_findings(table, visited & outside, root_model)
 

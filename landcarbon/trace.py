@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 
+from allometry.roots import level
+from landcarbon.constants import KG_PER_T
 from landcarbon.errors import UserError
-from landcarbon.publish.results import Results
+from landcarbon.inventory.nearest import suggestion
+from landcarbon.publish.results import Results, parts_of_plots, sums_of_plots
 
-__all__ = ["Trace", "trace_unit"]
+__all__ = ["Trace", "trace_unit", "tree_shares"]
 
-TREE_STATUS = {"above_ground": ("live",), "dead_wood": ("dead",), "below_ground": ("live",), "all": ("live", "dead")}
+_MOST_NAMES = 12
 
 
 @dataclass(frozen=True)
@@ -24,18 +28,26 @@ class Trace:
     row : Series
         The published row.
     plots : DataFrame
-        Plots of the unit at that survey, with density_t_c_ha of the pool.
+        Plots of the unit at that survey: plot, stratum, date, size, density_t_c_ha (the plot's figure), then the
+        figures named in ``columns``.
+    columns : dict
+        Further columns of ``plots`` and their heading, e.g. ``trees_t_c_ha``, the sum of the trees listed.
     trees : DataFrame
-        Trees counted on those plots, largest contribution first, with file, row, equation, expansion and
-        density_t_c_ha, the tree's own contribution [t C per ha of its plot].
+        Tree rows that belong to the pool, largest contribution first: the columns of the published trees and pool,
+        part, mass_kg (dry), mass_t_ha (of the plot) and density_t_c_ha, the row's own contribution [t C per ha of its
+        plot], NaN where the pool is not worked out tree by tree.
     set_aside : DataFrame
         Findings of rows on those plots that were set aside.
+    notes : tuple of str
+        How the figures of the plots come about where trees alone do not explain them.
     """
 
     row: pd.Series
     plots: pd.DataFrame
+    columns: dict[str, str]
     trees: pd.DataFrame
     set_aside: pd.DataFrame
+    notes: tuple[str, ...] = ()
 
 
 def trace_unit(
@@ -45,6 +57,7 @@ def trace_unit(
     stratum: str | None = None,
     survey: str | None = None,
     pool: str = "above_ground",
+    plot: str | None = None,
 ) -> Trace:
     """Gather what one figure rests on.
 
@@ -58,55 +71,201 @@ def trace_unit(
         Default: the last.
     pool : str
         A pool of the stocks table.
+    plot : str, optional
+        Only this plot of the unit.
 
     Raises
     ------
     UserError
         If both units are given, or there is no such row.
+
+    Notes
+    -----
+    Names match without regard to case where that leaves one.
     """
     if parcel is not None and stratum is not None:
         raise UserError("a parcel and a stratum were given", remedy="Name one of them.")
-    by, unit = _unit(results, parcel, stratum)
-    surveys = [str(name) for name in results.surveys["survey"]]
-    when = surveys[-1] if survey is None else str(survey)
-    rows = results.stocks
-    found = rows[(rows["by"] == by) & (rows["unit"] == unit) & (rows["survey"] == when) & (rows["pool"] == pool)]
-    if found.empty:
-        units = rows.loc[rows["by"] == by, "unit"].drop_duplicates().tolist()
-        pools = rows["pool"].drop_duplicates().tolist()
-        raise UserError(
-            f"no figure for {by} {unit!r}, survey {when!r}, pool {pool!r}",
-            remedy=f"Units: {_some(units)}. Surveys: {_some(surveys)}. Pools: {_some(pools)}.",
-        )
-    plots = results.plots
-    here = (plots["survey"].astype("str") == when) & (plots["pool"] == pool) & plots["inside"]
+    row = _published(results, parcel, stratum, survey, pool)
+    by, unit, when, pool = (str(row[name]) for name in ("by", "unit", "survey", "pool"))
+    here = results.plots[(results.plots["survey"].astype("str") == when) & results.plots["inside"].astype(bool)]
     if by != "inventory":
-        here &= plots[by].astype("str") == unit
-    plots = plots.loc[here].reset_index(drop=True)
-    names = set(plots["plot"].astype("str"))
+        here = here[here[by].astype("str") == unit]
+    plots = sums_of_plots(here, pool).reset_index(drop=True)
+    if plot is not None:
+        named = _match(plot, plots["plot"].astype("str"), f"plot of {by} {unit}, survey {when},")
+        here, plots = here[here["plot"].astype("str") == named], plots[plots["plot"].astype("str") == named]
+    names = plots["plot"].astype("str")
+    trees = results.trees
+    trees = trees[trees["used"] & (trees["survey"].astype("str") == when) & trees["plot"].astype("str").isin(names)]
+    model = str(results.settings_summary.get("root_model") or "")
+    shares = tree_shares(trees, pool, _counted(here), model)
     findings = results.findings
     aside = findings[~findings["used"] & (findings["survey"] == when) & findings["plot"].isin(names)]
-    return Trace(found.iloc[0], plots, _trees(results.trees, when, names, pool), aside.reset_index(drop=True))
+    table, columns = _with_figures(plots.reset_index(drop=True), here, pool, shares)
+    notes = _notes(pool, here, model)
+    return Trace(row, table, columns, shares, aside.reset_index(drop=True), notes)
 
 
-def _unit(results: Results, parcel: str | None, stratum: str | None) -> tuple[str, str]:
-    if parcel is not None:
-        return "parcel", parcel
-    if stratum is not None:
-        return "stratum", stratum
-    return "inventory", results.name
+def tree_shares(trees: pd.DataFrame, pool: str, counted: Iterable[str], root_model: str = "") -> pd.DataFrame:
+    """Contribution of each tree row to the plot figures of a pool.
+
+    Parameters
+    ----------
+    trees : DataFrame
+        Published trees that are used.
+    pool : str
+        A pool, or ``all``: then a tree has one row for each pool it belongs to.
+    counted : iterable of str
+        Pools that are counted.
+    root_model : str
+        Root model in effect; one for stands gives trees no carbon of their own but their shoot biomass.
+
+    Returns
+    -------
+    DataFrame
+        As ``Trace.trees``. Roots by a tree-level ratio take the carbon fraction of the plot's live trees, as the
+        plot figures do.
+    """
+    wanted = set(counted) if pool == "all" else {pool}
+    # Roots of stands are no property of a tree: with the other pools they would only repeat the live trees.
+    per_stand = bool(root_model) and level(root_model) == "stand"
+    if pool == "all" and per_stand:
+        wanted.discard("below_ground")
+    status = trees["status"].astype("str")
+    live, dead = trees[status == "live"], trees[status == "dead"]
+    parts = []
+    if "above_ground" in wanted:
+        parts.append(_share(live, "above_ground", "trees", live["biomass_kg"], live["carbon_fraction"]))
+    if "below_ground" in wanted and root_model:
+        mass = live["biomass_kg"] if per_stand else live["root_kg"]
+        fraction = live["carbon_fraction"] if per_stand else _plot_fraction(live)
+        shares = _share(live, "below_ground", "roots", mass, fraction)
+        parts.append(shares.assign(density_t_c_ha=np.nan) if per_stand else shares)
+    if "dead_wood" in wanted:
+        mass = dead["dead_wood_kg"] if "dead_wood_kg" in dead else dead["biomass_kg"]
+        parts.append(_share(dead, "dead_wood", "standing", mass, dead["carbon_fraction"]))
+        if "dead_root_carbon_kg" in dead:
+            mass = dead["dead_root_carbon_kg"] / dead["carbon_fraction"]
+            parts.append(_share(dead, "dead_wood", "dead_roots", mass, dead["carbon_fraction"]))
+    if not parts:
+        parts = [_share(live.iloc[:0], pool, "", live["biomass_kg"].iloc[:0], live["carbon_fraction"].iloc[:0])]
+    table = pd.concat(parts, ignore_index=True)
+    largest = np.argsort(-table["density_t_c_ha"].fillna(table["mass_t_ha"]).to_numpy(), kind="stable")
+    return table.iloc[largest].reset_index(drop=True)
 
 
-def _trees(trees: pd.DataFrame, survey: str, plots: set[str], pool: str) -> pd.DataFrame:
-    wanted = TREE_STATUS.get(pool, ())
-    mask = trees["used"] & (trees["survey"].astype("str") == survey) & trees["plot"].astype("str").isin(plots)
-    chosen = trees[mask & trees["status"].astype("str").isin(wanted)]
-    share = chosen["carbon_kg"].to_numpy() * chosen["expansion"].to_numpy() / 1000.0
-    chosen = chosen.assign(density_t_c_ha=share)
-    order = np.argsort(-share, kind="stable")
-    return chosen.iloc[order].reset_index(drop=True)
+def _share(rows: pd.DataFrame, pool: str, part: str, mass: pd.Series, fraction: pd.Series) -> pd.DataFrame:
+    mass_t_ha = mass * rows["expansion"] / KG_PER_T
+    return rows.assign(
+        pool=pool,
+        part=part,
+        mass_kg=mass,
+        carbon_fraction=fraction,
+        mass_t_ha=mass_t_ha,
+        density_t_c_ha=mass_t_ha * fraction,
+    )
 
 
-def _some(values: list[str], most: int = 12) -> str:
-    text = ", ".join(str(value) for value in values[:most])
-    return f"{text}, … ({len(values)})" if len(values) > most else text
+def _plot_fraction(live: pd.DataFrame) -> pd.Series:
+    """Carbon fraction of the live trees of a plot together."""
+    mass = live["biomass_kg"] * live["expansion"]
+    plot = live["plot"].astype("str")
+    return (mass * live["carbon_fraction"]).groupby(plot).transform("sum") / mass.groupby(plot).transform("sum")
+
+
+def _counted(plots: pd.DataFrame) -> list[str]:
+    return [name for name in plots["pool"].astype("str").drop_duplicates() if name != "all"]
+
+
+def _with_figures(
+    plots: pd.DataFrame, here: pd.DataFrame, pool: str, shares: pd.DataFrame
+) -> tuple[pd.DataFrame, dict[str, str]]:
+    """Add what the figure of each plot is made of: pools, parts, trees, or the shoot biomass that roots rest on."""
+    names = plots["plot"].astype("str")
+    columns: dict[str, str] = {}
+    figures: dict[str, pd.Series] = {}
+
+    def add(column: str, heading: str, values: pd.Series) -> None:
+        figures[column] = names.map(values)
+        columns[column] = heading
+
+    if pool == "all":
+        for name in _counted(here):
+            rows = sums_of_plots(here, name)
+            add(name, name.replace("_", " "), rows.set_index(rows["plot"].astype("str"))["density_t_c_ha"])
+    else:
+        parts = parts_of_plots(here, pool)
+        for part, rows in parts.groupby(parts["part"].astype("str"), sort=False):
+            add(f"{pool}.{part}", str(part), rows.set_index(rows["plot"].astype("str"))["density_t_c_ha"])
+    by_plot = shares.groupby(shares["plot"].astype("str"))
+    if len(shares) and shares["density_t_c_ha"].isna().all():
+        shoot = by_plot["mass_t_ha"].sum()
+        carbon = (shares["mass_t_ha"] * shares["carbon_fraction"]).groupby(shares["plot"].astype("str")).sum()
+        add("shoot_t_ha", "shoot t/ha", shoot)
+        add("carbon_fraction", "C fraction", carbon / shoot)
+    elif len(shares):
+        add("tree_rows", "tree rows", by_plot.size())
+        add("trees_t_c_ha", "from trees", by_plot["density_t_c_ha"].sum())
+    for column in {"shoot_t_ha", "tree_rows", "trees_t_c_ha"} & set(figures):
+        figures[column] = figures[column].fillna(0)  # a plot visited without such a tree
+    return plots.assign(**figures), columns
+
+
+def _notes(pool: str, here: pd.DataFrame, model: str) -> tuple[str, ...]:
+    wanted = _counted(here) if pool == "all" else [pool]
+    notes = []
+    if "below_ground" in wanted and model:
+        if level(model) == "stand":
+            notes.append(
+                "Below-ground biomass is not a sum over trees: it is worked out per plot from the shoot biomass per "
+                f"hectare (live trees, dry) with the stand-level root model {model}, then times the carbon fraction of "
+                "the plot's live trees."
+            )
+        else:
+            notes.append(
+                f"Below-ground biomass comes tree by tree from the root ratio {model}, times the carbon fraction of "
+                "the plot's live trees."
+            )
+    by_trees = {"above_ground": {"trees"}, "below_ground": {"roots"}, "dead_wood": {"standing", "dead_roots"}}
+    parts = parts_of_plots(here)
+    for name in wanted:
+        own = parts.loc[parts["pool"].astype("str") == name, "part"].astype("str").unique()
+        others = [part for part in own if part not in by_trees.get(name, set())]
+        if others or name not in by_trees:
+            what = f"the parts {', '.join(others)} of {name}" if others else name
+            notes.append(f"No tree enters {what}: worked out per plot from samples or a default factor.")
+    return tuple(notes)
+
+
+def _published(results: Results, parcel: str | None, stratum: str | None, survey: str | None, pool: str) -> pd.Series:
+    rows = results.stocks
+    by, given = ("parcel", parcel) if parcel is not None else ("stratum", stratum)
+    if given is None:
+        by, unit = "inventory", results.name
+    else:
+        unit = _match(given, rows.loc[rows["by"] == by, "unit"], by)
+    surveys = [str(name) for name in results.surveys["survey"]]
+    when = surveys[-1] if survey is None else _match(str(survey), surveys, "survey")
+    named = _match(pool.replace("-", "_"), rows["pool"].astype("str"), "pool")
+    found = rows[(rows["by"] == by) & (rows["unit"] == unit) & (rows["survey"] == when) & (rows["pool"] == named)]
+    if found.empty:
+        raise UserError(
+            f"there is no figure for {by} {unit!r}, survey {when!r}, pool {named!r}",
+            remedy="See stocks.csv and findings.csv for what could be worked out.",
+        )
+    return found.iloc[0]
+
+
+def _match(given: str, known: Iterable[str], what: str) -> str:
+    """Return the name meant: as written, else the only one that differs in case or outer blanks alone."""
+    names = list(dict.fromkeys(str(name) for name in known))
+    if given in names:
+        return given
+    alike = [name for name in names if name.strip().casefold() == given.strip().casefold()]
+    if len(alike) == 1:
+        return alike[0]
+    if not names:
+        raise UserError(f"there is no {what} in these results", remedy="Leave it out to see the whole inventory.")
+    shown = ", ".join(names[:_MOST_NAMES]) + (f", … ({len(names)})" if len(names) > _MOST_NAMES else "")
+    hint = suggestion(given, names)
+    raise UserError(f"there is no {what} {given!r}", remedy=f"{hint} There are: {shown}.".strip())

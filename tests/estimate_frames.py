@@ -85,8 +85,10 @@ def stocks(
     surveys: Sequence[str] = ("2014",),
     pools: Sequence[str] = (POOL,),
     confidence: float = 0.95,
+    sums: Mapping[str, Sequence[str]] | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
-    return estimate_stocks(table, strata, parcels, surveys, pools=pools, confidence=confidence, inventory_name=NAME)
+    options = {"pools": pools, "confidence": confidence, "inventory_name": NAME, "sums": sums}
+    return estimate_stocks(table, strata, parcels, surveys, **options)
 
 
 def change(
@@ -96,6 +98,7 @@ def change(
     surveys: tuple[str, str] = ("t1", "t2"),
     pools: Sequence[str] = (POOL,),
     confidence: float = 0.95,
+    sums: Mapping[str, Sequence[str]] | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     return estimate_change(
         table,
@@ -106,6 +109,7 @@ def change(
         pools=pools,
         confidence=confidence,
         inventory_name=NAME,
+        sums=sums,
     )
 
 

@@ -72,3 +72,12 @@ def rules(inputs: Inputs, table: str | None = None) -> list[str]:
     """The rules that found something (in one table), in order and once each."""
     found = inputs.findings
     return list(dict.fromkeys(found["rule"] if table is None else found.loc[found["table"] == table, "rule"]))
+
+
+def accounted(inputs: Inputs) -> bool:
+    """Every row set aside, of trees and samples, has a finding, and no other row has one that says so."""
+    aside = inputs.findings[~inputs.findings["used"] & inputs.findings["row_id"].notna()]
+    return all(
+        set(frame.loc[~frame["used"], "row_id"]) == set(aside.loc[aside["table"] == table, "row_id"].astype(int))
+        for table, frame in {"trees": inputs.trees, **inputs.samples}.items()
+    )

@@ -15,6 +15,7 @@ from read_samples import settings_text
 from landcarbon.errors import SettingsError, UserError
 from landcarbon.inventory import load_settings, parse_settings, settings_reference, template_text
 from landcarbon.inventory.locate import key_lines, line_of
+from landcarbon.inventory.measured import measured_parts, tables_given
 from landcarbon.inventory.nearest import nearest
 from landcarbon.inventory.reference import keys_below, places_of
 from landcarbon.read.page import inventory_page
@@ -172,7 +173,7 @@ class TestFaults:
         ("more", "told"),
         [
             ('[pools]\nlitter = "not counted"', "needs a reason"),
-            ('[pools]\nlitter = "measured"', "'measured' is not available for this pool"),
+            ('[pools]\nharvested_wood = "measured"', "'measured' is not available for this pool"),
             ('[pools]\nsoil = { how = "guess" }', "'guess' is not accepted"),
             ('[pools]\nbelow_ground = { how = "ratio", model = "nowhere99" }', "no root model 'nowhere99'"),
             ('[pools]\nbelow_ground = { how = "ratio", mode = "x" }', "Did you mean 'model'?"),
@@ -234,6 +235,199 @@ class TestFaults:
     def test_bad_day(self):
         surveys = '[surveys.2014]\ntrees = "t.csv"\nsince = "1.5.2014"'
         assert "year-month-day" in fault(settings_text(surveys=surveys))
+
+
+SOIL = '[pools]\nsoil = "measured"\n[samples]\nsoil = "soil.csv"\n'
+WOOD = '[pools]\ndead_wood = "measured"\n[samples]\npieces = "pieces.csv"\n'
+
+
+class TestPools:
+    def test_every_way_to_obtain_a_pool(self):
+        more = (
+            '[pools]\nbelow_ground = "ratio"\ndead_wood = { how = "measured", parts = ["standing", "down"] }\n'
+            'litter = { how = "default", value_t_c_ha = 20, source = "a table" }\nsoil = { how = "measured" }\n'
+            '[samples]\npieces = "p.csv"\nsoil = "s.csv"\n[dead_wood]\nline_m = 12.0\n'
+            '[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n'
+        )
+        settings = parse_settings(settings_text(more=more))
+        assert (settings.pools.litter.value_t_c_ha, settings.pools.litter.source) == (20.0, "a table")
+        assert settings.samples.pieces == "p.csv"
+        assert measured_parts(settings) == {
+            "above_ground": ("trees",),
+            "dead_wood": ("standing", "down_coarse", "down_fine"),
+            "soil": ("soil",),
+        }
+
+    def test_parts_follow_the_tables(self):
+        more = (
+            '[pools]\ndead_wood = "measured"\nlitter = "measured"\n[samples]\nlitter = "l.csv"\nlogs = "g.csv"\n'
+            'saplings = "s.csv"\n[dead_wood]\nroots = "dead_wood"\n'
+        )
+        surveys = '[surveys.2014]\ntrees = "a.csv"\nground_vegetation = "v.csv"\n[surveys.2024]\ntrees = "b.csv"'
+        settings = parse_settings(settings_text(surveys=surveys, more=more))
+        assert measured_parts(settings) == {
+            "above_ground": ("trees", "saplings", "ground_vegetation"),
+            "dead_wood": ("standing", "down_coarse", "down_fine", "dead_roots"),
+            "litter": ("litter", "duff"),
+        }
+        assert tables_given(settings) == ("logs", "litter", "ground_vegetation", "saplings")
+
+    def test_standing_dead_trees_need_no_table(self):
+        settings = parse_settings(settings_text(more='[pools]\ndead_wood = "measured"'))
+        assert measured_parts(settings)["dead_wood"] == ("standing",)
+
+    def test_defaults(self):
+        settings = parse_settings(GOOD)
+        assert settings.dead_wood.classes == {}
+        assert (settings.dead_wood.volume, settings.dead_wood.roots) == ("auto", "not counted")
+        assert (settings.soil.bulk_density, settings.soil.incomplete) == (None, "set aside")
+        assert settings.litter.duff == ["duff", "humus"]
+        assert measured_parts(settings) == {"above_ground": ("trees",)}
+
+    def test_size_classes(self):
+        more = WOOD + (
+            '[dead_wood.classes.fine]\ncount = "fine_n"\nline_m = 2.0\nmean_diameter_cm = 0.30\ndensity_g_cm3 = 0.48\n'
+            '[dead_wood.classes.large]\ndiameter = ["d1", "d2"]\nline_m = 12\n'
+        )
+        classes = parse_settings(settings_text(more=more)).dead_wood.classes
+        assert (classes["fine"].count, classes["fine"].tilt_factor) == ("fine_n", 1.0)
+        assert (classes["large"].diameter, classes["large"].density_g_cm3) == (["d1", "d2"], None)
+
+    @pytest.mark.parametrize(
+        ("more", "key", "told"),
+        [
+            ('[pools]\nlitter = "measured"', "pools.litter", "there is no table of measurements. Give litter = 'FILE'"),
+            ('[pools]\nsoil = "ratio"', "pools.soil", "'ratio' is not available for this pool"),
+            ('[pools]\nlitter = { how = "default" }', "pools.litter", "needs value_t_c_ha and source"),
+            (
+                '[pools]\nlitter = { how = "default", value_t_c_ha = 20 }',
+                "pools.litter",
+                "needs value_t_c_ha and source",
+            ),
+            (
+                '[pools]\nlitter = { how = "default", value_t_c_ha = -1, source = "x" }',
+                "pools.litter.value_t_c_ha",
+                "greater than or equal to 0",
+            ),
+            (
+                '[pools]\nabove_ground = { how = "default", value_t_c_ha = 9, source = "x" }',
+                "pools.above_ground",
+                "'measured'",
+            ),
+            ('[pools]\nsoil = { how = "measured", source = "x" }', "pools.soil", "belong to how = 'default' only"),
+            (
+                '[pools]\ndead_wood = { how = "measured", parts = ["standing", "stump"] }',
+                "pools.dead_wood.parts[1]",
+                "Did you mean 'stumps'?",
+            ),
+            (
+                '[pools]\ndead_wood = { how = "measured", parts = ["down"] }',
+                "pools.dead_wood.parts[0]",
+                "the part 'down' has no table. Give pieces = 'FILE' or logs = 'FILE'",
+            ),
+            (
+                '[pools]\nabove_ground = { how = "measured", parts = ["trees", "saplings"] }',
+                "pools.above_ground.parts[1]",
+                "the part 'saplings' has no table",
+            ),
+            ('[pools]\nlitter = { how = "measured", parts = [] }', "pools.litter.parts", "at least 1 item"),
+            ('[dead_wood]\nvolume = "smallian"', "dead_wood.volume", "'smallian' is not accepted. Accepted: 'auto'"),
+            ('[dead_wood]\nroots = "litter"', "dead_wood.roots", "'not counted' or 'dead_wood'"),
+            ("[dead_wood]\nline_m = 0", "dead_wood.line_m", "greater than 0"),
+            ('[dead_wood.classes.a]\ncount = "n"\ndiameter = "d"', "dead_wood.classes.a", "not both"),
+            ('[dead_wood.classes.a]\ncount = "n"', "dead_wood.classes.a", "need mean_diameter_cm"),
+            (
+                '[dead_wood.classes.a]\ndiameter = "n"\nmean_diameter_cm = 2',
+                "dead_wood.classes.a",
+                "belongs to a class of counts",
+            ),
+            ('[dead_wood.classes.a]\ncuont = "n"', "dead_wood.classes.a.cuont", "Did you mean 'count'?"),
+            ("[litter]\ndry_share = 34.5", "litter.dry_share", "less than or equal to 1"),
+            ("[litter]\ncarbon_fractions = { duff = 37 }", "litter.carbon_fractions.duff", "less than or equal to 1"),
+            ("[saplings]\narea = 12", "saplings.area", "Did you mean 'area_m2'?"),
+            ('[soil]\nbulk_density = "fine"', "soil.bulk_density", "'fine per whole volume'"),
+            ('[soil]\npedotransfer = "saini"', "soil.pedotransfer", "Did you mean 'saini1966'?"),
+            ("[soil]\norganic_matter_per_carbon = 0.58", "soil.organic_matter_per_carbon", "greater than 1"),
+            (
+                "[soil]\nwindows = [ { from_cm = 5, to_cm = 10, top_cm = 15, bottom_cm = 15 } ]",
+                "soil.windows[0]",
+                "depths grow downwards",
+            ),
+            (
+                "[soil]\nwindows = [ { from_cm = 5, to_cm = 10, top_cm = 0, bottom_cm = 15 }, "
+                "{ from_cm = 20, to_cm = 25, top_cm = 10, bottom_cm = 30 } ]",
+                "soil",
+                "two windows overlap between top_cm and bottom_cm",
+            ),
+            ("[soil]\nwindows = [ { from_cm = 5, to_cm = 10, top_cm = 0 } ]", "soil.windows[0].bottom_cm", "missing"),
+            (WOOD, "samples.pieces", "nothing tells how long the lines are"),
+            ('[samples]\nlines = "l.csv"', "samples.lines", "none of the pieces found on them. Give pieces = 'FILE'"),
+            ('[samples]\nwood = "l.csv"', "samples.wood", "Known here: pieces, lines, logs"),
+            (SOIL, "pools.soil", "no reference depth or mass is given"),
+            (f"{SOIL}[soil]\ndepth_cm = 30", "soil.bulk_density", "this key is missing"),
+            (
+                f'{SOIL}[soil]\nbulk_density = "fine per whole volume"',
+                "soil.depth_cm",
+                "no reference depth or mass is given",
+            ),
+            (
+                f'{SOIL}[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\nmass_t_ha = 3500',
+                "soil.mass_t_ha",
+                "Keep one of the two",
+            ),
+            (
+                f'{SOIL}[soil]\nbulk_density = "fine per fine volume"\ndepth_cm = 30\n[columns.soil]\ncoarse = "x"',
+                "soil.coarse",
+                "Accepted: 'volume', 'mass'",
+            ),
+            (
+                f'{SOIL}[soil]\nbulk_density = "whole per whole volume"\ndepth_cm = 30\n[units.soil]\ncoarse = "%"',
+                "soil.coarse",
+                "Accepted: 'volume', 'mass'",
+            ),
+            (
+                f'{SOIL}[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n'
+                '[columns.soil]\norganic_matter = "LOI"',
+                "soil.organic_matter_per_carbon",
+                "nothing tells how much of it is carbon",
+            ),
+            ('[units.soil]\nbulk_density = "g"', "units.soil.bulk_density", "'g' is not a unit of density"),
+            ('[units.litter]\nfresh = "g/cm3"', "units.litter.fresh", "'g/cm3' is not a unit of mass"),
+            ('[columns.soils]\ntop = "x"', "columns.soils", "Did you mean 'soil'?"),
+        ],
+    )
+    def test_faults(self, more: str, key: str, told: str):
+        text = settings_text(more=more)
+        message = fault(text)
+        assert told in message
+        assert re.search(rf"line \d+, {re.escape(key)}: ", message)
+        first, last = (line_with(text, more.splitlines()[at]) for at in (0, -1))
+        lines = [int(number) for number in re.findall(r"line (\d+)", message)]
+        assert all(first <= line <= last for line in lines)
+
+    def test_coarse_fragments_are_inside_one_kind_of_bulk_density(self):
+        more = SOIL + '[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n[columns.soil]\ncoarse = "stones"'
+        assert parse_settings(settings_text(more=more)).soil.coarse is None
+
+    def test_lengths_of_lines_may_stand_in_many_places(self):
+        for more in (
+            WOOD + "[dead_wood]\nline_m = 20",
+            WOOD + 'lines = "lines.csv"',
+            WOOD + '[columns.pieces]\nline_length = "L"',
+            WOOD + '[dead_wood.classes.a]\ndiameter = "d"\nline_m = 12',
+            WOOD.replace('dead_wood = "measured"', "") + "[dead_wood]",
+        ):
+            assert parse_settings(settings_text(more=more)).samples.pieces == "pieces.csv"
+
+    def test_tables_given_twice(self):
+        surveys = '[surveys.2014]\ntrees = "t.csv"\nstumps = "a.csv"'
+        text = settings_text(surveys=surveys, more='[samples]\nstumps = "b.csv"')
+        message = fault(text)
+        assert f"line {line_with(text, 'a.csv')}, surveys.2014.stumps: tables of stumps are given both" in message
+
+    def test_pools_not_mentioned_stay_out_even_with_a_table(self):
+        settings = parse_settings(settings_text(more='[samples]\nlitter = "l.csv"\n[litter]\nframe_area_m2 = 0.1'))
+        assert (settings.pools.litter.how, settings.pools.litter.reason) == ("not counted", "no measurements given")
 
 
 class TestUnreadable:
@@ -375,8 +569,13 @@ class TestReference:
         assert [row.key for row in settings_reference() if not row.meaning] == []
 
     def test_known_keys(self):
-        assert keys_below(("surveys", "2014")) == ["trees", "visits", "since", "until", "plots_without_rows"]
-        assert keys_below(("pools", "litter")) == ["how", "model", "reason"]
+        samples = ["pieces", "lines", "logs", "stumps", "litter", "ground_vegetation", "saplings", "soil"]
+        assert keys_below(("samples",)) == samples
+        survey = ["trees", "visits", *samples, "since", "until", "plots_without_rows"]
+        assert keys_below(("surveys", "2014")) == survey
+        assert keys_below(("pools", "litter")) == ["how", "parts", "model", "value_t_c_ha", "source", "reason"]
+        assert keys_below(("soil", "windows", 0)) == ["from_cm", "to_cm", "top_cm", "bottom_cm"]
+        assert keys_below(("dead_wood", "classes", "fine"))[:2] == ["count", "diameter"]
         assert "radius_m" in keys_below(("plots", "design", "circles", 0))
         assert places_of("seed") == ["inventory"]
 

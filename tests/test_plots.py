@@ -11,7 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from landcarbon.errors import SettingsError
-from landcarbon.plots import PlotDesign, PlotSums, expansion_factors, plot_pools, plot_sums, visit_index
+from landcarbon.plots import PlotDesign, PlotSums, expansion_factors, plot_parts, plot_sums, visit_index
 
 CASES = pd.read_csv(Path(__file__).parent / "data" / "expansion_factors.csv")
 M_PER_FT = 0.3048
@@ -116,7 +116,7 @@ def evaluated(biomass, fraction=0.5, **columns):
 
 def sums_of(trees, visits):
     no = np.zeros(len(trees), dtype=bool)
-    return plot_sums(trees, visit_index(trees, visits), len(visits), conifer=no, memory=no)
+    return plot_sums(trees, visit_index(trees, visits), len(visits), conifer=no)
 
 
 PLOTS = pd.DataFrame({"plot": ["A", "B"], "parcel": ["p", "p"], "stratum": ["s", "s"], "inside": True})
@@ -125,30 +125,33 @@ PLOTS = pd.DataFrame({"plot": ["A", "B"], "parcel": ["p", "p"], "stratum": ["s",
 def test_visited_empty_plot_is_zero_and_unvisited_is_missing():
     visits = pd.concat([make_visits(), make_visits(plot="B")], ignore_index=True).assign(visited=[True, True])
     design = PlotDesign.circles([10.0], [0.0])
-    table, _ = plot_pools(visits, PLOTS, sums_of(evaluated([100.0]), visits), pools=["above_ground"], design=design)
+    table, _ = plot_parts(
+        visits, PLOTS, sums_of(evaluated([100.0]), visits), parts=["above_ground.trees"], design=design
+    )
     # Identity: 100 kg x 0.5 x 100 per ha = 5 t C/ha.
-    assert table.set_index("plot")["above_ground"].to_dict() == {"A": 5.0, "B": 0.0}
+    assert table.set_index("plot")["above_ground.trees"].to_dict() == {"A": 5.0, "B": 0.0}
     visits["visited"] = [True, False]
-    table, _ = plot_pools(visits, PLOTS, sums_of(evaluated([100.0]), visits), pools=["above_ground"], design=design)
+    table, _ = plot_parts(
+        visits, PLOTS, sums_of(evaluated([100.0]), visits), parts=["above_ground.trees"], design=design
+    )
     assert table["plot"].tolist() == ["A"]
 
 
 def test_stand_root_model_is_applied_to_the_plot_not_the_tree():
     """Two trees on one plot: roots of the sum, not the sum of the roots (the relation is not linear)."""
     visits, design = make_visits(), PlotDesign.circles([10.0], [0.0])
-    table, _ = plot_pools(
+    table, _ = plot_parts(
         visits,
         PLOTS,
         sums_of(evaluated([600.0, 400.0]), visits),
-        pools=["above_ground", "below_ground"],
+        parts=["above_ground.trees", "below_ground.roots"],
         design=design,
         root_model="cairns97_general",
     )
     shoot = 100.0  # t/ha
     # Published relation: Cairns et al. 1997 eq 1, as quoted in CDM AR-TOOL14 v04.2 p. 25; carbon fraction 0.5.
     roots = np.exp(-1.085 + 0.9256 * np.log(shoot))
-    assert table["below_ground"].iloc[0] == pytest.approx(roots * 0.5)
-    assert table["all"].iloc[0] == pytest.approx(50.0 + roots * 0.5)
+    assert table["below_ground.roots"].iloc[0] == pytest.approx(roots * 0.5)
 
 
 def test_rows_set_aside_do_not_count():

@@ -11,19 +11,11 @@ import pandas as pd
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
-from read_samples import PLOTS, TREES, read, rules, settings_text, write_inventory
+from read_samples import PLOTS, TREES, accounted, read, rules, settings_text, write_inventory
 
 from landcarbon.errors import InputFileError, SettingsError, UserError
-from landcarbon.inputs import Inputs
 from landcarbon.inventory import load_settings
 from landcarbon.read.load import load_inputs
-
-
-def accounted(inputs: Inputs) -> bool:
-    """Every tree row set aside has a finding, and no other row has one that says so."""
-    aside = set(inputs.trees.loc[~inputs.trees["used"], "row_id"])
-    told = inputs.findings.loc[~inputs.findings["used"], "row_id"].dropna()
-    return aside == set(told.astype(int))
 
 
 def refused(folder: Path, match: str, text: str | None = None, **files: str | bytes) -> None:

@@ -5,7 +5,9 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
+import pandas as pd
 import pytest
+from read_samples import accounted
 
 from landcarbon.inputs import Inputs
 from landcarbon.inventory import load_settings
@@ -70,6 +72,71 @@ scientific_name = "species"
 region = "mangrove"
 """
 
+MANGROVE_POOLS = (
+    MANGROVE.replace(
+        "[columns.trees]",
+        """pieces = "{folder}/woody_debris_tallies.csv"
+litter = "{folder}/litter_ground_vegetation.csv"
+ground_vegetation = "{folder}/litter_ground_vegetation.csv"
+[columns.pieces]
+line = "transect"
+[columns.litter]
+fresh = "litter_fresh_kg"
+ash = "ash_g_per_g"
+[columns.ground_vegetation]
+fresh = "live_fresh_kg"
+[columns.trees]""",
+    )
+    + """
+[pools]
+dead_wood = "measured"
+litter = "measured"
+[litter]
+frame_area_m2 = 1
+[ground_vegetation]
+frame_area_m2 = 1
+[dead_wood.classes]
+large_solid = {{ diameter = "large_solid_diam_cm", line_m = 12 }}
+large_rotten = {{ diameter = "large_rotten_diam_cm", line_m = 12 }}
+medium = {{ count = "medium_n", line_m = 5, mean_diameter_cm = 5.25 }}
+small = {{ count = "small_n", line_m = 3, mean_diameter_cm = 1.55 }}
+fine = {{ count = "fine_n", line_m = 2, mean_diameter_cm = 0.30 }}
+"""
+)
+
+FOREST_FLOOR = """
+[inventory]
+name = "soil and litter of a forest plot"
+allow_outside = true
+[plots]
+file = "{folder}/litter_layer.csv"
+design = {{ kind = "census", area_ha = 1 }}
+[surveys.2011]
+trees = "trees.csv"
+litter = "{folder}/litter_layer.csv"
+soil = "{folder}/soil_layers.csv"
+[columns]
+plots.plot = "hectare"
+litter = {{ plot = "hectare", dry = "dry_mass_g", fresh = "fresh_mass_g", frame_area = "sampled_area_m2" }}
+[columns.soil]
+plot = "hectare"
+top = "depth_top_cm"
+bottom = "depth_bottom_cm"
+bulk_density = "bd_fine_earth_profile_pit_g_cm3_total_volume"
+organic_carbon = "total_C_pct"
+[units]
+litter = {{ dry = "g", fresh = "g" }}
+soil = {{ organic_carbon = "%" }}
+[equations]
+region = "north_america"
+[pools]
+litter = "measured"
+soil = "measured"
+[soil]
+bulk_density = "fine per whole volume"
+depth_cm = 30
+"""
+
 
 def load(text: str, folder: Path, tmp_path: Path) -> Inputs:
     path = tmp_path / "inventory.toml"
@@ -116,3 +183,47 @@ def test_mangrove_plots(reference: Path, tmp_path: Path):
     assert "32-B" in set(inputs.trees["plot"])
     assert "32-B" not in set(inputs.plots["plot"])
     assert inputs.crs == "EPSG:32737"
+
+
+def test_mangrove_wood_and_litter(reference: Path, tmp_path: Path):
+    """Published: the description prints 1,212 rows of wood, 1,052 lines, four in each of 263 subplots, and so on."""
+    folder = reference / "real" / "zambezi_mangrove"
+    inputs = load(MANGROVE_POOLS, folder, tmp_path)
+    lines, pieces = inputs.samples["lines"], inputs.samples["pieces"]
+    assert inputs.files.set_index("role").loc["pieces 2013", "rows"] == 1_212
+    assert len(lines) == 1_052
+    assert set(lines.groupby(["plot", "subplot"]).size()) == {4}
+    assert lines.groupby(["plot", "subplot"]).ngroups == 263
+    assert set(lines["plot"]) == set(inputs.plots["plot"])
+    # the description: one row lacks the line name; 43 large solid pieces are under the limit of 7.6 cm
+    assert inputs.findings.loc[inputs.findings["rule"] == "row without line", "row"].tolist() == [514]
+    solid = pieces[pieces["size_class"] == "large_solid"]
+    assert (solid["diameter_cm"] < 7.6).sum() == 43
+    # independent: the sums of the columns as the general library pandas reads them
+    wide = pd.read_csv(folder / "woody_debris_tallies.csv")
+    counted = pieces.groupby("size_class")["count"].sum()
+    for name in ("medium", "small", "fine"):
+        assert counted[name] == wide[f"{name}_n"].sum()
+    for name in ("large_solid", "large_rotten"):
+        assert counted[name] == (wide[f"{name}_diam_cm"] > 0).sum()
+    # the description: 189 rows of litter on 42 plots
+    litter = inputs.samples["litter"]
+    assert (len(litter), litter["plot"].nunique()) == (189, 42)
+    assert accounted(inputs)
+
+
+def test_forest_floor_and_soil(reference: Path, tmp_path: Path):
+    """Published: the description prints 24 cells, 122 layers, nine frames of 25 cm by 25 cm in each cell."""
+    (tmp_path / "trees.csv").write_text("plot,species,dbh\n1,oak,10\n")
+    inputs = load(FOREST_FLOOR, reference / "real" / "scbi", tmp_path)
+    litter, soil = inputs.samples["litter"], inputs.samples["soil"]
+    assert (len(litter), len(soil), soil["plot"].nunique()) == (24, 122, 24)
+    assert set(litter["frame_area_m2"]) == {9 * 0.25 * 0.25}
+    # the first data line of each file, in our units
+    assert litter[["dry_kg", "fresh_kg"]].iloc[0].tolist() == pytest.approx([0.71368, 0.9374])
+    first = soil[["top_cm", "bottom_cm", "bulk_density_g_cm3", "organic_carbon_share"]].iloc[0]
+    assert first.tolist() == pytest.approx([0, 10, 0.74, 0.06907725])
+    # the description: 10 of 24 cells have no layer from 50 to 100 cm, one none from 30 to 50 cm
+    assert soil.loc[soil["top_cm"] == 50, "plot"].nunique() == 14
+    assert soil.loc[soil["top_cm"] == 30, "plot"].nunique() == 23
+    assert accounted(inputs)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pint
 import pytest
@@ -17,22 +19,28 @@ REGISTRY = pint.UnitRegistry()
 def in_pint(unit: str) -> str:
     if unit.startswith("1/"):
         return f"1/({in_pint(unit[2:])})"
-    for name in ("m2", "km2", "ft2"):
-        if unit == name:
-            return f"{unit[:-1]}**2"
+    unit = re.sub(r"(?<=[mt])([23])$", r"**\1", unit)
+    if unit == "per mille":
+        return "permille"
     # An acre of pint is that of the survey foot of the United States; ours is that of the international foot.
     return {"ac": "(4840 * yard**2)", "acre": "(4840 * yard**2)", "acres": "(4840 * yard**2)"}.get(unit, unit)
 
 
-@pytest.mark.parametrize(
-    ("dimension", "unit"), [key for key, unit in unit_table().items() if unit.factor is not None and key[0] != "share"]
-)
+@pytest.mark.parametrize(("dimension", "unit"), [key for key, unit in unit_table().items() if unit.factor is not None])
 def test_factors_against_pint(dimension: str, unit: str):
     """Independent: the unit library pint."""
-    base = {"length": "m", "area": "m**2", "per area": "1/m**2", "slope": "degree"}[dimension]
+    base = {
+        "length": "m",
+        "area": "m**2",
+        "per area": "1/m**2",
+        "slope": "degree",
+        "mass": "kg",
+        "density": "kg/m**3",
+        "share": "",
+    }[dimension]
     expected = REGISTRY.parse_expression(in_pint(unit))
     expected = (expected * REGISTRY.dimensionless if isinstance(expected, (int, float)) else expected).to(base)
-    assert unit_table()[dimension, unit].factor == pytest.approx(expected.magnitude, rel=1e-15)
+    assert unit_table()[dimension, unit].factor == pytest.approx(expected.magnitude, rel=1e-14)
 
 
 def test_slope_in_percent():
@@ -43,6 +51,13 @@ def test_slope_in_percent():
 
 def test_share_in_percent():
     assert convert(np.array([80.0]), "percent", "1").tolist() == [0.8]
+
+
+def test_one_share_in_every_unit():
+    """Identity: 5.8 percent are 58 g/kg, and so on; 5.8 itself is no binary number, hence the last bit."""
+    written = {"1": 0.058, "g/g": 0.058, "%": 5.8, "per mille": 58.0, "g/kg": 58.0, "mg/g": 58.0, "mg/kg": 58_000.0}
+    found = {unit: convert(np.array([value]), unit, "1")[0] for unit, value in written.items()}
+    assert found == pytest.approx(dict.fromkeys(written, 0.058), rel=2e-16)
 
 
 def test_millimetres_keep_their_digits():
@@ -71,7 +86,37 @@ def test_columns_are_sound():
         if spec.unit:
             assert spec.unit in accepted_units(spec.unit)
             assert spec.kind == "number"
-    frames = {"trees", "plots", "visits", "parcels", "strata", "species"}
-    assert {spec.table for spec in column_specs()} == frames
-    assert table_names() == ["trees", "plots", "visits", "parcels", "strata", "species"]
+        assert not (spec.kind in ("id", "text") and spec.essential)
+    assert table_names() == [
+        "trees", "plots", "visits", "parcels", "strata", "species", "lines", "pieces", "logs", "stumps", "litter",
+        "ground_vegetation", "saplings", "soil",
+    ]  # fmt: skip
     assert [name for name, spec in table_columns("trees").items() if spec.needed] == ["plot", "species", "dbh"]
+
+
+def test_columns_of_samples_have_the_names_the_pools_expect():
+    """Frozen: the columns agreed upon between reading and the pools, with the units in their names."""
+    common = ["survey", "plot", "subplot"]
+    wood = ["decay_class", "wood", "species"]
+    frame = [
+        "frame", "layer", "frame_area_m2", "fresh_kg", "sub_fresh_g", "sub_dry_g", "dry_kg", "depth_cm",
+        "bulk_density_g_cm3", "ash_share", "carbon_fraction",
+    ]  # fmt: skip
+    expected = {
+        "lines": ["line", "length_m", "slope_deg"],
+        "pieces": [
+            "line", "size_class", "count", "diameter_cm", "diameter_2_cm", *wood, "tilt_deg", "hollow_cm",
+            "sunk_share", "line_m",
+        ],
+        "logs": ["log", "length_m", "large_cm", "middle_cm", "small_cm", *wood, "hollow_cm", "sunk_share"],
+        "stumps": ["stump", "diameter_cm", "height_m", *wood],
+        "litter": frame,
+        "ground_vegetation": frame,
+        "saplings": ["species", "count", "dbh_cm", "height_m", "area_m2"],
+        "soil": [
+            "core", "top_cm", "bottom_cm", "bulk_density_g_cm3", "coarse_share", "organic_carbon_share",
+            "organic_matter_share", "total_carbon_share", "inorganic_carbon_share", "cores",
+        ],
+    }  # fmt: skip
+    found = {table: [spec.becomes for spec in table_columns(table).values()] for table in expected}
+    assert found == {table: [*common, *columns, "date"] for table, columns in expected.items()}

@@ -24,6 +24,8 @@ ROOMS = {
     "landcarbon.check": 4,
     "landcarbon.pools": 5,
     "landcarbon.plots": 6,
+    "landcarbon.pool_options": 7,
+    "landcarbon.sample_pools": 8,
     "landcarbon.estimate": 7,
     "landcarbon.change": 8,
     "landcarbon.marks": 8,

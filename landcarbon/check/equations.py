@@ -95,7 +95,7 @@ def range_findings(trees: pd.DataFrame) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        One note per survey for all trees together, then one warning per species and equation with such trees.
+        One warning per species and equation with such trees.
     """
     rows = trees[_counted(trees)]
     beyond = rows["out_of_range"].to_numpy(dtype=bool)
@@ -113,13 +113,6 @@ def range_findings(trees: pd.DataFrame) -> pd.DataFrame:
             "biomass_beyond": np.where(beyond, mass, 0.0),
         }
     )
-    by_survey = _summed(table, ["survey"])
-    shares = _shares(by_survey)
-    words = [
-        {"survey": survey, "count": int(count), "share": share}
-        for survey, count, share in zip(by_survey["survey"], by_survey["beyond"], shares, strict=True)
-    ]
-    overall = rule("beyond diameter range in all").found_each(by_survey[["survey"]], words, value=shares)
     by_kind = _summed(table, ["species", "equation"])
     words = [
         {"species": species, "count": int(count), "total": int(total), "share": share}
@@ -127,8 +120,7 @@ def range_findings(trees: pd.DataFrame) -> pd.DataFrame:
             by_kind["species"], by_kind["beyond"], by_kind["trees"], _shares(by_kind), strict=True
         )
     ]
-    single = rule("beyond diameter range").found_each(by_kind[[]], words, value=by_kind["equation"].to_numpy())
-    return joined([overall, single])
+    return joined([rule("beyond diameter range").found_each(by_kind[[]], words, value=by_kind["equation"].to_numpy())])
 
 
 def _summed(table: pd.DataFrame, by: list[str]) -> pd.DataFrame:

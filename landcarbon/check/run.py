@@ -91,7 +91,7 @@ def run_checks(inputs: Inputs, settings: Settings) -> Inputs:
 
 
 def reconcile(inputs: Inputs) -> pd.DataFrame:
-    """Count the fate of every tree row read, by survey.
+    """Count the fate of every row read, by table and survey.
 
     Parameters
     ----------
@@ -101,8 +101,8 @@ def reconcile(inputs: Inputs) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        survey, rows_read, live, dead, absent, set_aside, balance (0 if all rows are accounted for); a row with a blank
-        survey for rows whose survey is not known.
+        table, survey, rows_read, used, live, dead, absent, set_aside, balance (0 if all rows are accounted for); a row
+        with a blank survey for rows whose survey is not known. Rows of samples are neither live nor dead: empty there.
 
     Raises
     ------
@@ -122,7 +122,30 @@ def reconcile(inputs: Inputs) -> pd.DataFrame:
     for name in counts.columns:
         table[name] = counts[name].to_numpy(dtype=np.int64)
     table["balance"] = table["rows_read"] - table[[*_FATES, "set_aside"]].sum(axis=1)
-    _refuse_losses(table, trees.loc[~used, "row_id"], inputs.findings)
+    table.insert(2, "used", table[[*_FATES]].sum(axis=1))
+    findings = inputs.findings
+    _refuse_losses(table, trees.loc[~used, "row_id"], findings[findings["table"] == "trees"])
+    table.insert(0, "table", "trees")
+    return pd.concat([table, *(_of_samples(inputs, name) for name in inputs.samples)], ignore_index=True)
+
+
+def _of_samples(inputs: Inputs, name: str) -> pd.DataFrame:
+    """Count the rows of one sample table by survey: used or set aside, by reading or by the module of its pool."""
+    rows = inputs.samples[name]
+    found = inputs.findings[(inputs.findings["table"] == name) & ~inputs.findings["used"]]
+    aside = rows["row_id"].isin(found["row_id"].dropna())
+    silent = ~rows["used"].to_numpy(dtype=bool) & ~aside
+    if silent.any():
+        raise LandcarbonError(f"{int(silent.sum())} rows of {name} were set aside without a finding")
+    survey = rows["survey"].astype("object").where(rows["survey"].notna(), "").map(str)
+    names = [str(label) for label in inputs.surveys["survey"]]
+    names = [label for label in [*names, *sorted(set(survey) - set(names))] if (survey == label).any()]
+    read = survey.value_counts().reindex(names)
+    lost = aside.groupby(survey).sum().reindex(names)
+    table = pd.DataFrame({"table": name, "survey": names, "rows_read": read.to_numpy(dtype=np.int64)})
+    table["used"] = table["rows_read"] - lost.to_numpy(dtype=np.int64)
+    table["set_aside"] = lost.to_numpy(dtype=np.int64)
+    table["balance"] = table["rows_read"] - table["used"] - table["set_aside"]
     return table
 
 

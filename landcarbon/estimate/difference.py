@@ -14,7 +14,7 @@ from landcarbon.estimate.interval import satterthwaite
 from landcarbon.estimate.pairs import Pairs, PairSums, Side, cell_covariance, match_plots, side_of
 from landcarbon.estimate.ratio import MIN_PLOTS, Cells, Sample, inflation, means
 
-__all__ = ["Difference", "difference_of_ratios"]
+__all__ = ["Difference", "difference_of_ratios", "elapsed"]
 
 
 @dataclass(frozen=True)
@@ -100,7 +100,7 @@ def difference_of_ratios(
     df = np.minimum(satterthwaite(variance, part_df, codes, n_domains), plots[0] + plots[1] - paired - 1)
     density = second.mean.density - first.mean.density
     enough = (plots[0] >= MIN_PLOTS) & (plots[1] >= MIN_PLOTS) & np.isfinite(density)
-    days = _elapsed(samples, domains, pairs, cells, area_ha, allowed)
+    days = elapsed(samples, domains, pairs, cells, area_ha, allowed)
     textbook = first.spread.variance + second.spread.variance - 2.0 * cell_covariance(first, second, parts, cells)
     return Difference(
         density=np.where(enough, density, np.nan),
@@ -160,7 +160,7 @@ def _alone(side: Side, rows: np.ndarray, paired: np.ndarray, cells: Cells) -> tu
     return mean.weight**2 * inflation(mean.plots_stratum)[cells.stratum] * total, plots
 
 
-def _elapsed(
+def elapsed(
     samples: tuple[Sample, Sample],
     domains: tuple[np.ndarray, np.ndarray],
     pairs: Pairs,

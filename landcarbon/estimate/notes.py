@@ -75,6 +75,7 @@ def left_out(plots: Plots, survey: str, table: str = "estimate") -> pd.DataFrame
                 )
             )
     taken = plots.taken()[rows]
+    rest = "the sum then rests on the others" if ALL in plots.pools else "it is then estimated from those"
     missing = (~np.isfinite(plots.value[rows])[taken]).sum(axis=0)
     for count in sorted({int(number) for number in missing if number}):
         pools = pool_text(plots.pools, missing == count) or "any pool"
@@ -87,7 +88,7 @@ def left_out(plots: Plots, survey: str, table: str = "estimate") -> pd.DataFrame
                 value=str(count),
                 survey=survey,
                 message=f"{count} of {int(taken.sum())} plots have no value of {pools}: missing there, not zero.",
-                remedy="Nothing, if the pool was sampled on part of the plots only; the sum then rests on the others.",
+                remedy=f"Nothing, if it was sampled on part of the plots only; {rest}.",
             )
         )
     return join_findings(found)

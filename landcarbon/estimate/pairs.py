@@ -17,11 +17,15 @@ __all__ = ["PairSums", "Pairs", "Side", "cell_covariance", "match_plots", "pool_
 
 @dataclass(frozen=True)
 class Side:
-    """One set (a date or a pool): the sample, its domain means and deviations."""
+    """One set (a date or a pool): the sample, its domain means and deviations.
+
+    ``counted`` says which values of the sample enter the means.
+    """
 
     sample: Sample
     mean: Means
     spread: Deviations
+    counted: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -41,7 +45,7 @@ class Pairs:
 def side_of(sample: Sample, domain: np.ndarray, cells: Cells, area_ha: np.ndarray, allowed: np.ndarray) -> Side:
     """Estimate domain means and linearise them."""
     mean = means(sample, domain, cells, area_ha, allowed)
-    return Side(sample, mean, deviations(sample, mean, cells))
+    return Side(sample, mean, deviations(sample, mean, cells), sample.used & allowed[sample.stratum])
 
 
 def match_plots(samples: tuple[Sample, Sample], domains: tuple[np.ndarray, np.ndarray], allowed: np.ndarray) -> Pairs:

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
 
+from landcarbon.estimate.combine import Plan, plan_sums
 from landcarbon.estimate.interval import check_confidence, t_half_width
 from landcarbon.estimate.notes import (
     few_plots_in_parcels,
@@ -19,6 +20,9 @@ from landcarbon.estimate.notes import (
     zero_variance,
 )
 from landcarbon.estimate.ratio import MIN_PLOTS, RatioEstimate, Sample, counts, ratio_of_means
+from landcarbon.estimate.sum_levels import sum_levels
+from landcarbon.estimate.sum_notes import borrowed_parts, pools_left_out, sum_methods
+from landcarbon.estimate.sums import Sums, read_sums
 from landcarbon.estimate.tables import LEVELS, Plots, Units, read_plots
 from landcarbon.findings import empty_findings, join_findings, make_findings
 
@@ -52,12 +56,13 @@ _METHOD = {
 
 @dataclass(frozen=True)
 class _Level:
-    """Estimates of one level at one survey; ``area_ha`` has shape (units, pools)."""
+    """Estimates of one level at one survey; ``area_ha`` and ``method`` have shape (units, pools)."""
 
     by: str
     labels: list[str]
     area_ha: np.ndarray
     estimate: RatioEstimate
+    method: np.ndarray
 
 
 def estimate_stocks(
@@ -69,6 +74,7 @@ def estimate_stocks(
     pools: Sequence[str],
     confidence: float,
     inventory_name: str,
+    sums: Mapping[str, Sequence[str]] | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Estimate stocks at every survey.
 
@@ -76,7 +82,7 @@ def estimate_stocks(
     ----------
     plot_pools : DataFrame
         One row per visited plot and survey: survey, plot, parcel, stratum, date, size (relative sampled area), inside
-        and one column per pool and for ``all`` [t C/ha].
+        and one column per pool and for ``all``, or per part if ``sums`` is given [t C/ha]; NaN where not measured.
     strata : DataFrame
         stratum, area_ha [ha] (NaN if unknown).
     parcels : DataFrame or None
@@ -89,6 +95,9 @@ def estimate_stocks(
         Of the intervals, for example 0.95.
     inventory_name : str
         Unit of the inventory rows.
+    sums : mapping, optional
+        Columns that make up each pool. Each part is then estimated from its own plots, a pool is the sum of its parts
+        and ``all`` the sum of the pools that were measured at the survey.
 
     Returns
     -------
@@ -109,17 +118,23 @@ def estimate_stocks(
     Formulas and sources: ``docs/estimation.md``.
     """
     check_confidence(confidence)
-    plots = read_plots(plot_pools, strata, parcels, pools)
+    chosen = None if sums is None else read_sums(sums, pools)
+    plots = read_plots(plot_pools, strata, parcels, pools, parts=None if chosen is None else chosen.parts)
     names = _survey_names(surveys)
     found = [_unlisted_surveys(plots, names), _unlisted_parcels(plots), unknown_areas(plots.units)]
     blocks: dict[str, list[pd.DataFrame]] = {by: [] for by in LEVELS}
+    rows = plots.pools if chosen is None else chosen.names
     for survey in names:
         sample = plots.sample(survey)
-        levels = _levels(sample, plots.units, inventory_name)
+        if chosen is None:
+            levels = _levels(sample, plots.units, inventory_name)
+            found += _findings(levels, plots, sample, survey)
+        else:
+            levels, about = _levels_of_sums(sample, plots, chosen, survey, inventory_name)
+            found += about
         for level in levels:
-            blocks[level.by].append(_rows(level, survey, plots.pools, confidence))
-        found += _findings(levels, plots, sample, survey)
-    return unit_order(blocks, len(plots.pools), STOCK_COLUMNS), join_findings(found)
+            blocks[level.by].append(_rows(level, survey, rows, confidence))
+    return unit_order(blocks, len(rows), STOCK_COLUMNS), join_findings(found)
 
 
 def unit_order(blocks: dict[str, list[pd.DataFrame]], pools: int, columns: list[str]) -> pd.DataFrame:
@@ -151,16 +166,48 @@ def _levels(sample: Sample, units: Units, inventory_name: str) -> list[_Level]:
         return ratio_of_means(sample, domain, domains, units.stratum_area_ha, allowed)
 
     levels = []
+
+    def add(by: str, labels: list[str], area: np.ndarray, made: RatioEstimate) -> None:
+        levels.append(_Level(by, labels, area, made, _methods(by, made)))
+
     if units.has_total:
         area = np.where(allowed, units.stratum_area_ha[:, None], 0.0).sum(axis=0, keepdims=True)
-        levels.append(_Level("inventory", [inventory_name], area, estimate(np.zeros_like(sample.stratum), 1)))
+        add("inventory", [inventory_name], area, estimate(np.zeros_like(sample.stratum), 1))
     area = np.repeat(units.stratum_area_ha[:, None], pools, axis=1)
     by_stratum = estimate(sample.stratum, strata)
     by_stratum = replace(by_stratum, plots=counts(sample, strata).astype(np.int64))
-    levels.append(_Level("stratum", units.strata, area, by_stratum))
+    add("stratum", units.strata, area, by_stratum)
     area = np.repeat(units.parcel_area_ha[:, None], pools, axis=1)
-    levels.append(_Level("parcel", units.parcels, area, estimate(sample.parcel, len(units.parcels))))
+    add("parcel", units.parcels, area, estimate(sample.parcel, len(units.parcels)))
     return levels
+
+
+def _methods(by: str, estimate: RatioEstimate) -> np.ndarray:
+    """Say how each figure came about, or why there is none."""
+    count = estimate.plots
+    refused = np.array([f"not estimable: {number} plot(s)" for number in range(MIN_PLOTS)], dtype=object)
+    reason = np.where(
+        count < MIN_PLOTS, refused[np.minimum(count, MIN_PLOTS - 1)], "not estimable: area of its strata unknown"
+    )
+    return np.where(np.isfinite(estimate.density), _METHOD[by], reason)
+
+
+def _levels_of_sums(
+    sample: Sample, plots: Plots, sums: Sums, survey: str, inventory_name: str
+) -> tuple[list[_Level], list[pd.DataFrame]]:
+    """Estimate every level from parts with their own plots each, and say what is to be said about it."""
+    units = plots.units
+    plan = plan_sums((sample,), sums, units.stratum_area_ha)
+    levels = []
+    for level in sum_levels((sample,), plan, units, inventory_name):
+        made = level.estimate
+        plain = np.full(made.density.shape, _METHOD[level.by], dtype=object)
+        estimate = RatioEstimate(made.density, made.variance, made.df, made.plots[0])
+        text = sum_methods(plain, made, plan, [survey])
+        levels.append(_Level(level.by, level.labels, level.area_ha, estimate, text))
+        borrowed = made
+    about = _findings(levels, replace(plots, pools=sums.labels()), sample, survey, plan)
+    return levels, [*about, pools_left_out(plan, [survey]), borrowed_parts(borrowed, plan, units, survey)]
 
 
 def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd.DataFrame:
@@ -182,12 +229,6 @@ def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd
         "stock_high": (density + half) * area,
         "df": estimate.df,
     }
-    count = estimate.plots.ravel()
-    refused = np.array([f"not estimable: {number} plot(s)" for number in range(MIN_PLOTS)], dtype=object)
-    reason = np.where(
-        count < MIN_PLOTS, refused[np.minimum(count, MIN_PLOTS - 1)], "not estimable: area of its strata unknown"
-    )
-    method = np.where(np.isfinite(density).ravel(), _METHOD[level.by], reason)
     return pd.DataFrame(
         {
             "by": level.by,
@@ -195,33 +236,39 @@ def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd
             "survey": survey,
             "pool": np.tile(np.array(pools, dtype=object), units),
             **{name: values.ravel() for name, values in columns.items()},
-            "method": method,
+            "method": level.method.ravel(),
         }
     ).astype({name: "str" for name in ("by", "unit", "survey", "pool", "method")})
 
 
-def _findings(levels: list[_Level], plots: Plots, sample: Sample, survey: str) -> list[pd.DataFrame]:
-    units, pools = plots.units, plots.pools
-    found = [
-        left_out(plots, survey),
-        few_plots_in_strata(units, pools, [counts(sample, len(units.strata))], [survey]),
-    ]
+def _findings(
+    levels: list[_Level], plots: Plots, sample: Sample, survey: str, plan: Plan | None = None
+) -> list[pd.DataFrame]:
+    units, columns = plots.units, plots.pools
+    names = columns if plan is None else plan.sums.names
+    number = counts(sample, len(units.strata))
+    inside = np.ones(len(columns), dtype=bool) if plan is None else ~plan.out[plan.sums.pool]
+    shown = [name for name, yes in zip(columns, inside, strict=True) if yes]
+    found = [left_out(plots, survey), few_plots_in_strata(units, shown, [number[:, inside]], [survey])]
     for level in levels:
-        found.append(zero_variance(level.by, level.labels, pools, level.estimate.variance, survey))
+        found.append(zero_variance(level.by, level.labels, names, level.estimate.variance, survey))
     parcels = levels[-1].estimate
-    found.append(few_plots_in_parcels(units, pools, np.isfinite(parcels.density), survey))
-    found.append(_parcels_without_stratum(plots, sample, survey))
+    found.append(few_plots_in_parcels(units, names, np.isfinite(parcels.density), survey))
+    used = np.asarray(sample.used[:, -1] if plan is None else sample.used.any(axis=1))
+    enough = np.asarray(number[:, -1] >= MIN_PLOTS if plan is None else plan.allowed.any(axis=1))
+    found.append(_parcels_without_stratum(plots, sample, used, enough, survey))
     if levels[0].by == "inventory":
         total = float(levels[0].estimate.density[0, -1] * levels[0].area_ha[0, -1])
         found.append(parcel_sum(units, parcels.density[:, -1] * units.parcel_area_ha, total, survey))
     return found
 
 
-def _parcels_without_stratum(plots: Plots, sample: Sample, survey: str) -> pd.DataFrame:
+def _parcels_without_stratum(
+    plots: Plots, sample: Sample, used: np.ndarray, enough: np.ndarray, survey: str
+) -> pd.DataFrame:
     """Report parcels whose figure rests on part of their plots, as some lie in a stratum that is not estimable."""
     units = plots.units
-    enough = counts(sample, len(units.strata))[:, -1] >= MIN_PLOTS
-    in_parcel = (sample.parcel >= 0) & sample.used[:, -1]
+    in_parcel = (sample.parcel >= 0) & used
     lost = np.bincount(sample.parcel[in_parcel & ~enough[sample.stratum]], minlength=len(units.parcels))
     kept = np.bincount(sample.parcel[in_parcel & enough[sample.stratum]], minlength=len(units.parcels))
     hit = (lost > 0) & (kept >= MIN_PLOTS)

@@ -57,7 +57,7 @@ class Plots:
     frame : DataFrame
         The rows, sorted by plot; columns as given.
     pools : list of str
-        Pools to estimate, in canonical order.
+        Pools to estimate, in canonical order; or their parts.
     units : Units
         Strata and parcels.
     survey : ndarray of str
@@ -135,7 +135,12 @@ def pool_list(pools: Sequence[str]) -> list[str]:
 
 
 def read_plots(
-    plot_pools: pd.DataFrame, strata: pd.DataFrame, parcels: pd.DataFrame | None, pools: Sequence[str]
+    plot_pools: pd.DataFrame,
+    strata: pd.DataFrame,
+    parcels: pd.DataFrame | None,
+    pools: Sequence[str],
+    *,
+    parts: Sequence[str] | None = None,
 ) -> Plots:
     """Turn the plot table into arrays.
 
@@ -149,6 +154,8 @@ def read_plots(
         parcel, area_ha.
     pools : sequence of str
         Pools counted; ``all`` is added.
+    parts : sequence of str, optional
+        Columns to take instead of those of the pools.
 
     Returns
     -------
@@ -159,13 +166,13 @@ def read_plots(
     UserError
         If a column is missing, a label is listed twice, or an area is negative.
     """
-    names = pool_list(pools)
+    names = pool_list(pools) if parts is None else list(parts)
     lacking = [name for name in (*_REQUIRED, *names) if name not in plot_pools]
     if lacking:
         raise UserError(
             f"the plot table has no column {', '.join(lacking)}",
             where="plot table",
-            remedy=f"It needs {', '.join(_REQUIRED)} and one column per pool.",
+            remedy=f"It needs {', '.join(_REQUIRED)} and one column per {'pool' if parts is None else 'part'}.",
         )
     code, _ = pd.factorize(plot_pools["plot"].astype("category"), sort=True)
     order = np.argsort(code, kind="stable")

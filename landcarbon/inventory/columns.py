@@ -26,6 +26,8 @@ class ColumnSpec:
         True if the table cannot be used without it.
     by_name : bool
         True if a column of this name is taken without being mapped.
+    essential : bool
+        True if a row counts no more where this cell cannot be read; otherwise the cell is taken as blank.
     becomes : str
         Name of the column in the tables of the program.
     meaning : str
@@ -38,6 +40,7 @@ class ColumnSpec:
     unit: str
     needed: bool
     by_name: bool
+    essential: bool
     becomes: str
     meaning: str
 
@@ -48,8 +51,8 @@ def column_specs() -> tuple[ColumnSpec, ...]:
     text = files("landcarbon").joinpath("read", "columns.csv").read_text(encoding="utf-8")
     specs = []
     for line in csv.DictReader(text.splitlines()):
-        needed, by_name = (line.pop(name) == "yes" for name in ("needed", "by_name"))
-        specs.append(ColumnSpec(needed=needed, by_name=by_name, **line))
+        needed, by_name, essential = (line.pop(name) == "yes" for name in ("needed", "by_name", "essential"))
+        specs.append(ColumnSpec(needed=needed, by_name=by_name, essential=essential, **line))
     return tuple(specs)
 
 

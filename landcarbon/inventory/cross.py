@@ -7,21 +7,12 @@ from typing import Any
 from landcarbon.inventory.columns import table_columns, table_names
 from landcarbon.inventory.faults import Fault
 from landcarbon.inventory.ids import id_faults
-from landcarbon.inventory.models import POOL_NAMES, Settings
+from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
+from landcarbon.inventory.pool_cross import pool_faults
 from landcarbon.inventory.units import accepted_units, dimension_of
 
 __all__ = ["column_faults", "settings_faults"]
-
-# What this version can do for each pool; anything else would be promised and not kept.
-_HOW = {
-    "above_ground": ("measured",),
-    "below_ground": ("ratio", "not counted"),
-    "dead_wood": ("measured", "not counted"),
-    "litter": ("not counted",),
-    "soil": ("not counted",),
-    "harvested_wood": ("not counted",),
-}
 
 
 def column_faults(raw: dict[str, Any]) -> list[Fault]:
@@ -73,7 +64,7 @@ def settings_faults(settings: Settings) -> list[Fault]:
     return [
         *_survey_faults(settings),
         *_strata_faults(settings),
-        *_pool_faults(settings),
+        *pool_faults(settings),
         *_design_faults(settings),
         *id_faults(settings),
     ]
@@ -111,16 +102,6 @@ def _strata_faults(settings: Settings) -> list[Fault]:
         elif strata.areas and large not in strata.areas:
             remedy = suggestion(large, strata.areas) or f"Strata with an area: {', '.join(strata.areas)}."
             faults.append(Fault(("strata", "merge", small), f"no stratum {large!r} under areas", remedy))
-    return faults
-
-
-def _pool_faults(settings: Settings) -> list[Fault]:
-    faults = []
-    for name in POOL_NAMES:
-        how = getattr(settings.pools, name).how
-        if how not in _HOW[name]:
-            accepted = ", ".join(f"'{word}'" for word in _HOW[name])
-            faults.append(Fault(("pools", name), f"{how!r} is not available for this pool", f"Accepted: {accepted}."))
     return faults
 
 

@@ -5,7 +5,9 @@ The catalogue is loaded only where the project file names something from it.
 
 from __future__ import annotations
 
+import csv
 from collections.abc import Iterable
+from importlib.resources import files
 
 from landcarbon.inventory.faults import Fault
 from landcarbon.inventory.locate import Path
@@ -18,7 +20,7 @@ _MANY = 12  # up to this number every id is listed
 
 
 def id_faults(settings: Settings) -> list[Fault]:
-    """Check the ids of coordinate systems, root models, height curves, equations and publications.
+    """Check the ids of coordinate systems, root models, height curves, equations, publications and soil functions.
 
     Parameters
     ----------
@@ -30,6 +32,7 @@ def id_faults(settings: Settings) -> list[Fault]:
         *_root_faults(settings),
         *_height_faults(settings.heights),
         *_equation_faults(settings),
+        *_soil_faults(settings),
     ]
 
 
@@ -88,6 +91,15 @@ def _equation_faults(settings: Settings) -> list[Fault]:
     for place, source in enumerate(sources):
         faults += _unknown(("equations", "sources", place), "publication", source, table["source_key"].unique())
     return faults
+
+
+def _soil_faults(settings: Settings) -> list[Fault]:
+    function = settings.soil.pedotransfer
+    if function is None:
+        return []
+    text = files("landcarbon.factors").joinpath("pedotransfer.csv").read_text(encoding="utf-8")
+    known = [line["id"] for line in csv.DictReader(text.splitlines())]
+    return _unknown(("soil", "pedotransfer"), "function of bulk density", function, known)
 
 
 def _unknown(path: Path, what: str, given: str, known: Iterable[str]) -> list[Fault]:

@@ -10,9 +10,22 @@ from pydantic import BeforeValidator, Field, PrivateAttr, field_validator, model
 
 from landcarbon.inventory.base import Section
 from landcarbon.inventory.design import Design
+from landcarbon.inventory.pool_models import (
+    POOL_NAMES,
+    SAMPLE_TABLES,
+    DeadWood,
+    GroundVegetation,
+    Litter,
+    Pool,
+    Pools,
+    SampleFiles,
+    Saplings,
+    Soil,
+)
 
 __all__ = [
     "POOL_NAMES",
+    "SAMPLE_TABLES",
     "Carbon",
     "Dates",
     "Equations",
@@ -23,6 +36,7 @@ __all__ = [
     "Plots",
     "Pool",
     "Pools",
+    "Samples",
     "Settings",
     "Species",
     "Strata",
@@ -30,8 +44,6 @@ __all__ = [
     "Trees",
     "Visits",
 ]
-
-NO_REASON = "no measurements given"
 
 StatusName = Literal["live", "dead", "absent"]
 Region = Literal["north_america", "europe", "tropics", "mangrove", "australia"]
@@ -115,11 +127,18 @@ class Visits(Section):
     file: str | None = Field(default=None, description="One table of visits for all surveys")
 
 
-class Survey(Section):
-    """One survey."""
+class Samples(SampleFiles):
+    """Tables of samples that serve all surveys."""
 
+
+class _SurveyFiles(Section):
     trees: str | list[str] | None = Field(default=None, description="Tree table (or several) of this survey")
     visits: str | list[str] | None = Field(default=None, description="Table of visits of this survey")
+
+
+class Survey(SampleFiles, _SurveyFiles):
+    """One survey."""
+
     since: Day | None = Field(default=None, description="First day of the survey")
     until: Day | None = Field(default=None, description="Last day of the survey")
     plots_without_rows: Literal["missing", "zero"] = Field(
@@ -210,45 +229,6 @@ class Heights(Section):
     )
 
 
-class Pool(Section):
-    """How one pool is obtained."""
-
-    how: Literal["measured", "ratio", "default", "not counted"] = Field(description="How the pool is obtained")
-    model: str | None = Field(default=None, description="Model of the ratio; that of the region if left out")
-    reason: str | None = Field(default=None, description="Why the pool is not counted; needed then")
-
-    @model_validator(mode="before")
-    @classmethod
-    def _short(cls, raw: Any) -> Any:
-        return {"how": raw} if isinstance(raw, str) else raw
-
-    @model_validator(mode="after")
-    def _complete(self) -> Pool:
-        if self.how == "not counted" and not self.reason:
-            raise ValueError("a pool that is not counted needs a reason, e.g. reason = 'not sampled'")
-        if self.how != "ratio" and self.model:
-            raise ValueError("a model belongs to how = 'ratio' only")
-        return self
-
-
-def _not_mentioned() -> Pool:
-    return Pool(how="not counted", reason=NO_REASON)
-
-
-class Pools(Section):
-    """Carbon pools."""
-
-    above_ground: Pool = Field(default_factory=lambda: Pool(how="measured"), description="Living above-ground biomass")
-    below_ground: Pool = Field(default_factory=_not_mentioned, description="Living roots")
-    dead_wood: Pool = Field(default_factory=_not_mentioned, description="Dead wood; measured: standing dead trees")
-    litter: Pool = Field(default_factory=_not_mentioned, description="Litter")
-    soil: Pool = Field(default_factory=_not_mentioned, description="Soil organic carbon")
-    harvested_wood: Pool = Field(default_factory=_not_mentioned, description="Harvested wood products")
-
-
-POOL_NAMES = tuple(Pools.model_fields)
-
-
 class Carbon(Section):
     """Carbon in dry matter."""
 
@@ -280,6 +260,9 @@ class Settings(Section):
     plots: Plots = Field(description="Plots and their design")
     trees: Trees = Field(default_factory=Trees, description="Tree rows")
     visits: Visits = Field(default_factory=Visits, description="Visits of the crews")
+    samples: Samples = Field(
+        default_factory=Samples, description="Tables of what is measured beside the trees, for all surveys"
+    )
     surveys: dict[str, Survey] = Field(min_length=1, description="One table per survey, e.g. [surveys.2014]")
     columns: dict[str, dict[str, str | list[str]]] = Field(
         default={},
@@ -295,6 +278,13 @@ class Settings(Section):
     equations: Equations = Field(description="Choice of the biomass equations")
     heights: Heights = Field(default_factory=Heights, description="Heights not measured")
     pools: Pools = Field(default_factory=Pools, description="Pools counted, and how")
+    dead_wood: DeadWood = Field(default_factory=DeadWood, description="Dead wood")
+    litter: Litter = Field(default_factory=Litter, description="Litter and duff from frames")
+    ground_vegetation: GroundVegetation = Field(
+        default_factory=GroundVegetation, description="Herbs and shrubs clipped in frames"
+    )
+    saplings: Saplings = Field(default_factory=Saplings, description="Stems too small for the tree table")
+    soil: Soil = Field(default_factory=Soil, description="Soil organic carbon from cores and pits")
     carbon: Carbon = Field(default_factory=Carbon, description="Carbon in dry matter")
     estimation: Estimation = Field(default_factory=Estimation, description="Estimates")
 

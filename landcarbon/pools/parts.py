@@ -10,9 +10,9 @@ __all__ = ["PARTS", "PART_COLUMNS", "column_name", "empty_parts", "make_parts", 
 PARTS: dict[str, tuple[str, ...]] = {
     "above_ground": ("trees", "saplings", "ground_vegetation"),
     "below_ground": ("roots",),
-    "dead_wood": ("standing", "stumps", "down_coarse", "down_fine", "dead_roots"),
-    "litter": ("litter", "duff"),
-    "soil": ("soil",),
+    "dead_wood": ("standing", "stumps", "down_coarse", "down_fine", "dead_roots", "default"),
+    "litter": ("litter", "duff", "default"),
+    "soil": ("soil", "default"),
 }
 
 PART_COLUMNS = [

@@ -16,12 +16,15 @@ from allometry.catalogue import Catalogue
 from allometry.roots import tree_roots
 from landcarbon.factors.carbon import carbon_fraction
 from landcarbon.findings import empty_findings, join_findings, make_findings
+from landcarbon.pools.standing_dead import StandingOptions, dead_biomass
 
 __all__ = [
     "OUT_OF_RANGE_POLICIES",
     "TreePlan",
     "combine_stems",
+    "dead_trees",
     "has_status",
+    "label_trees",
     "make_tree_plan",
     "tree_biomass",
     "tree_findings",
@@ -158,7 +161,7 @@ def tree_biomass(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
     -------
     DataFrame
         ``trees`` with biomass_kg (above ground, dry), root_kg (NaN without a tree-level root model), carbon_fraction,
-        carbon_kg, out_of_range and equation. Rows with status absent have zero biomass; rows that cannot be
+        carbon_kg and out_of_range. Rows with status absent have zero biomass; rows that cannot be
         evaluated have NaN.
     """
     position = plan.positions(trees["species"])
@@ -176,8 +179,6 @@ def tree_biomass(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
     biomass = np.where(nothing, 0.0, biomass)
     fraction = np.where(dead, plan.dead_fraction[position], plan.live_fraction[position])
     added = {
-        "equation": _labels(plan.assignments["equation_id"], position),
-        "rung": _labels(plan.assignments["rung"], position),
         "biomass_kg": biomass,
         "carbon_fraction": fraction,
         "carbon_kg": biomass * fraction,
@@ -187,6 +188,46 @@ def tree_biomass(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
         roots = tree_roots(plan.tree_root_model, biomass, dbh_cm=dbh, conifer=plan.conifer[position])
         added["root_kg"] = np.where(nothing | dead, 0.0, roots)
     return trees.assign(**added)
+
+
+def dead_trees(trees: pd.DataFrame, plan: TreePlan, options: StandingOptions) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Turn the mass of standing dead trees into dead wood: by decay class, or as the options say.
+
+    Parameters
+    ----------
+    trees : DataFrame
+        From :func:`tree_biomass`; biomass_kg of a dead tree is that of a live tree of its size.
+    plan : TreePlan
+        Gives group and equation.
+    options : StandingOptions
+        Method and choices.
+
+    Returns
+    -------
+    trees : DataFrame
+        With dead_wood_kg, dead_how and, if counted, dead_root_carbon_kg; carbon_kg of dead trees follows dead_wood_kg.
+    findings : DataFrame
+        Faults of the dead trees.
+    """
+    position = plan.positions(trees["species"])
+    component = plan.catalogue.table.set_index("equation_id")["component"]
+    of_species = component.reindex(plan.assignments["equation_id"])
+    told = trees.assign(conifer=plan.conifer[position], component=_labels(of_species, position))
+    told, findings = dead_biomass(told, options)
+    counted = has_status(trees["status"], "dead") & told["used"].to_numpy()
+    fraction = trees["carbon_fraction"].to_numpy()
+    carbon = np.where(counted, told["dead_wood_kg"].to_numpy() * fraction, trees["carbon_kg"].to_numpy())
+    told = told.assign(carbon_kg=carbon)
+    if options.roots == "dead_wood":
+        told = told.assign(dead_root_carbon_kg=np.where(counted, told["dead_root_kg"].to_numpy() * fraction, 0.0))
+    return told.drop(columns=["component", "dead_root_kg"]), findings
+
+
+def label_trees(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
+    """Add accepted name, equation, rung of the ladder and ``known`` mark: what each tree row rests on."""
+    position = plan.positions(trees["species"])
+    named = {"scientific_name": "accepted_name", "equation": "equation_id", "rung": "rung", "known": "known"}
+    return trees.assign(**{ours: _labels(plan.assignments[theirs], position) for ours, theirs in named.items()})
 
 
 def tree_findings(trees: pd.DataFrame, plan: TreePlan) -> tuple[pd.DataFrame, pd.DataFrame]:

@@ -57,7 +57,7 @@ def figure(value: float, decimals: int, *, sign: bool = False) -> str:
 
 
 def interval(low: float, high: float, decimals: int, *, sign: bool = False) -> str:
-    """Write an interval, or a dash where there is none."""
-    if not (math.isfinite(low) and math.isfinite(high)):
+    """Write an interval, or a dash where there is none: unknown, or without width as the plots do not vary."""
+    if not (math.isfinite(low) and math.isfinite(high)) or low == high:
         return "\u2013"
     return f"{figure(low, decimals, sign=sign)} to {figure(high, decimals, sign=sign)}"

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 import pandas as pd
 
 from landcarbon.errors import ResultsError
-from landcarbon.publish.results import Results
+from landcarbon.publish.results import Results, sums_of_plots
 
 if TYPE_CHECKING:
     import geopandas as gpd
@@ -104,7 +104,7 @@ def plots_layer(results: Results) -> gpd.GeoDataFrame:
     points = results.plot_points[_POINT_FIELDS].reset_index(drop=True)
     for column in points.select_dtypes(include="category"):
         points[column] = points[column].astype("str")
-    whole = results.plots[results.plots["pool"].astype("str").eq("all")]
+    whole = sums_of_plots(results.plots, "all")
     if len(whole):
         wide = whole.assign(plot=whole["plot"].astype("str"), survey=whole["survey"].astype("str"))
         table = wide.pivot_table(index="plot", columns="survey", values="density_t_c_ha", aggfunc="first", sort=False)

@@ -1,22 +1,20 @@
-"""The figures and outlines of the map page: each stated once, as one JSON-able table for the script of the page."""
+"""The figures of the map page: each stated once, as one JSON-able table for the script of the page."""
 
 from __future__ import annotations
 
-import json
 import math
 from collections.abc import Hashable, Sequence
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 import pandas as pd
 
 from landcarbon.publish.colours import ColourScale, diverging_scale, sequential_scale
-from landcarbon.publish.results import Results
+from landcarbon.publish.map_shapes import DEGREE_DECIMALS, name_places, outlines
+from landcarbon.publish.results import Results, sums_of_plots
+from landcarbon.publish.words import POOL_NAMES
 
-if TYPE_CHECKING:
-    import geopandas as gpd
-
-__all__ = ["CHANGE_FIELDS", "STOCK_FIELDS", "display_tolerance", "page_data"]
+__all__ = ["CHANGE_FIELDS", "STOCK_FIELDS", "page_data"]
 
 #: Figures of one parcel at one survey, in the order the script reads them.
 STOCK_FIELDS = [
@@ -46,9 +44,8 @@ CHANGE_FIELDS = [
     "years",
 ]
 _DIGITS = 7  # significant digits on the page; the tables hold more
-_DEGREE_DECIMALS = 6  # about a tenth of a metre
-_LEAST_TOLERANCE_M = 0.5
-_TOLERANCE_SHARE = 1 / 20_000  # of the extent: well below a pixel when the whole map is in view
+# Above this many figures of parcels the page would grow too heavy with every pool; it then shows the sum alone.
+_MOST_ROWS = 20_000
 
 
 def page_data(results: Results) -> dict[str, Any]:
@@ -62,57 +59,102 @@ def page_data(results: Results) -> dict[str, Any]:
     Returns
     -------
     dict
-        layers, parcels, stocks, changes, methods, shapes (GeoJSON), plots and a few words; only lists, dicts, text and
-        numbers.
+        parcels, strata, plots, shapes (GeoJSON), pools (each with its layers and figures), methods and a few words;
+        only lists, dicts, text and numbers.
     """
     surveys = [str(name) for name in results.surveys["survey"]]
     pairs = _pairs(results.change)
-    names = [] if results.parcels is None else [str(name) for name in results.parcels["parcel"]]
+    points = _placed(results.plot_points)
+    strata = _strata_rows(results.stocks)
     methods: dict[str, int] = {}
-    stocks = [_figures(_of(results.stocks, survey=name), names, STOCK_FIELDS, methods) for name in surveys]
-    changes = [
-        _figures(_of(results.change, since=since, until=until), names, CHANGE_FIELDS, methods) for since, until in pairs
-    ]
-    plots = _plots(results, surveys)
+    pools, left_out = _pools(results, len(surveys) + len(pairs))
     return {
         "name": results.name,
         "interval": results.interval_name,
         "surveys": surveys,
         "pairs": [list(pair) for pair in pairs],
-        "layers": _layers(results, surveys, pairs, stocks, changes, plots),
-        "parcels": _parcel_rows(results.parcels),
-        "stocks": stocks,
-        "changes": changes,
+        "parcels": _parcel_rows(results),
+        "strata": strata,
+        "pools": [_pool(results, name, surveys, pairs, [row[0] for row in strata], methods) for name in pools],
         "methods": list(methods),
-        "shapes": _shapes(results.parcels),
-        "plots": plots,
+        "shapes": outlines(results.parcels),
+        "plots": _plots(points),
+        "counts": {
+            "plots": len(results.plot_points),
+            "outside": int((~results.plot_points["inside"].astype(bool)).sum()),
+            "unplaced": len(results.plot_points) - len(points),
+        },
+        "pools_left_out": left_out,
     }
 
 
-def display_tolerance(parcels: gpd.GeoDataFrame) -> float:
-    """Return by how much outlines may be simplified for display.
-
-    Parameters
-    ----------
-    parcels : GeoDataFrame
-        In a projected system with metres.
-
-    Returns
-    -------
-    float
-        Metres: half a metre, or a small share of the extent where that is wide.
-    """
-    left, bottom, right, top = parcels.total_bounds
-    extent = max(right - left, top - bottom)
-    return max(_LEAST_TOLERANCE_M, float(f"{extent * _TOLERANCE_SHARE:.1g}")) if math.isfinite(extent) else 0.0
+def _pools(results: Results, times: int) -> tuple[list[str], bool]:
+    """Name the pools of the page, the sum first, and tell whether some are left out for their weight."""
+    known = results.stocks[results.stocks["density_t_c_ha"].notna()]
+    present = set(known["pool"].astype("str"))
+    single = [name for name in POOL_NAMES if name in present and name != "all"]
+    if len(single) < 2:  # one pool is its own sum
+        return ["all"], False
+    parcels = 0 if results.parcels is None else len(results.parcels)
+    if parcels * times * (len(single) + 1) > _MOST_ROWS:
+        return ["all"], True
+    return ["all", *single], False
 
 
-def metric(parcels: gpd.GeoDataFrame) -> gpd.GeoDataFrame:
-    """Return the parcels in a projected system with metres."""
-    crs = parcels.crs
-    if crs is not None and crs.is_projected and crs.axis_info[0].unit_name == "metre":
-        return parcels
-    return parcels.to_crs(parcels.estimate_utm_crs())
+def _pool(
+    results: Results,
+    pool: str,
+    surveys: list[str],
+    pairs: list[tuple[str, str]],
+    strata: list[str],
+    methods: dict[str, int],
+) -> dict[str, Any]:
+    parcels = [] if results.parcels is None else [str(name) for name in results.parcels["parcel"]]
+    stocks, changes = _of(results.stocks, pool=pool), _of(results.change, pool=pool)
+    at = [_of(stocks, survey=name) for name in surveys]
+    between = [_of(changes, since=since, until=until) for since, until in pairs]
+    by_parcel = {
+        "stocks": [_figures(rows, "parcel", parcels, STOCK_FIELDS, methods) for rows in at],
+        "changes": [_figures(rows, "parcel", parcels, CHANGE_FIELDS, methods) for rows in between],
+    }
+    density = _plot_density(results, pool, surveys)
+    shown = _column(by_parcel["stocks"], STOCK_FIELDS.index("density_t_c_ha"))
+    if results.parcels is None:
+        shown = [value for row in density for value in row if value is not None]
+    # All surveys share one scale, and so do all changes, so that colours compare.
+    scales = {
+        "density": sequential_scale(shown),
+        "change": diverging_scale(_column(by_parcel["changes"], CHANGE_FIELDS.index("change_t_c_ha_yr"))),
+    }
+    of_pool = "" if pool == "all" else f" of {POOL_NAMES[pool]}"
+    layers = [
+        _layer("density", number, f"Carbon density{of_pool}, survey {name}", name, "t C/ha")
+        | _scale(scales["density"])
+        | {"total": _total(at[number], STOCK_FIELDS)}
+        for number, name in enumerate(surveys)
+    ] + [
+        _layer(
+            "change", number, f"Change of carbon{of_pool}, {since} to {until}", f"{since} to {until}", "t C/ha per year"
+        )
+        | _scale(scales["change"])
+        | {"total": _total(between[number], CHANGE_FIELDS)}
+        for number, (since, until) in enumerate(pairs)
+    ]
+    return {
+        "pool": pool,
+        "name": POOL_NAMES[pool],
+        "layers": layers,
+        "parcels": by_parcel,
+        "strata": {
+            "stocks": [_figures(rows, "stratum", strata, STOCK_FIELDS, methods) for rows in at],
+            "changes": [_figures(rows, "stratum", strata, CHANGE_FIELDS, methods) for rows in between],
+        },
+        "density": density,
+    }
+
+
+def _layer(kind: str, at: int, title: str, short: str, unit: str) -> dict[str, Any]:
+    return {"kind": kind, "at": at, "title": title, "short": short, "unit": unit}
 
 
 def _pairs(change: pd.DataFrame) -> list[tuple[str, str]]:
@@ -121,18 +163,18 @@ def _pairs(change: pd.DataFrame) -> list[tuple[str, str]]:
 
 
 def _of(frame: pd.DataFrame, **labels: str) -> pd.DataFrame:
-    keep = frame["pool"].astype("str").eq("all")
+    keep = pd.Series(True, index=frame.index)
     for column, label in labels.items():
         keep &= frame[column].astype("str").eq(label)
     return frame[keep]
 
 
 def _figures(
-    rows: pd.DataFrame, names: Sequence[str], fields: list[str], methods: dict[str, int]
+    rows: pd.DataFrame, by: str, names: Sequence[str], fields: list[str], methods: dict[str, int]
 ) -> list[list[float | None] | None]:
-    """Line the rows of the parcels up with their names; the last entry of each is the number of the method."""
-    parcels = rows[rows["by"].astype("str").eq("parcel")].drop_duplicates("unit")
-    table = parcels.set_index(parcels["unit"].astype("str"))
+    """Line the rows of the units up with their names; the last entry of each is the number of the method."""
+    units = rows[rows["by"].astype("str").eq(by)].drop_duplicates("unit")
+    table = units.set_index(units["unit"].astype("str"))
     position = table.index.get_indexer(pd.Index(list(names), dtype=table.index.dtype))
     values = np.column_stack([table[name].to_numpy(dtype=float, na_value=np.nan) for name in fields])
     described = [methods.setdefault(str(text), len(methods)) for text in table["method"]]
@@ -144,48 +186,6 @@ def _short(value: float) -> float | None:
         return None
     rounded = float(f"{value:.{_DIGITS}g}")
     return int(rounded) if rounded.is_integer() else rounded
-
-
-def _layers(
-    results: Results,
-    surveys: list[str],
-    pairs: list[tuple[str, str]],
-    stocks: list[list[Any]],
-    changes: list[list[Any]],
-    plots: list[dict[str, Any]],
-) -> list[dict[str, Any]]:
-    """Describe the layers. All surveys share one scale, and so do all changes, so that colours compare."""
-    shown = _column(stocks, STOCK_FIELDS.index("density_t_c_ha"))
-    if results.parcels is None:
-        shown = [value for plot in plots for value in plot["density"] if value is not None]
-    density = sequential_scale(shown)
-    change = diverging_scale(_column(changes, CHANGE_FIELDS.index("change_t_c_ha_yr")))
-    layers = [
-        {
-            "kind": "density",
-            "at": at,
-            "title": f"Carbon density, survey {survey}",
-            "short": survey,
-            "unit": "t C/ha",
-            **_scale(density),
-            "total": _total(_of(results.stocks, survey=survey), STOCK_FIELDS),
-        }
-        for at, survey in enumerate(surveys)
-    ]
-    if results.parcels is None:
-        return layers
-    return layers + [
-        {
-            "kind": "change",
-            "at": at,
-            "title": f"Change of carbon, {since} to {until}",
-            "short": f"{since} to {until}",
-            "unit": "t C/ha per year",
-            **_scale(change),
-            "total": _total(_of(results.change, since=since, until=until), CHANGE_FIELDS),
-        }
-        for at, (since, until) in enumerate(pairs)
-    ]
 
 
 def _column(tables: list[list[Any]], at: int) -> list[float]:
@@ -201,58 +201,58 @@ def _total(rows: pd.DataFrame, fields: list[str]) -> list[float | None] | None:
     return [_short(float(value)) for value in whole.iloc[0][fields]] if len(whole) else None
 
 
-def _parcel_rows(parcels: gpd.GeoDataFrame | None) -> list[list[Any]]:
+def _parcel_rows(results: Results) -> list[list[Any]]:
+    """List name, stratum, land use, area and the place of the name."""
+    parcels = results.parcels
     if parcels is None:
         return []
     area = parcels["area_ha"].to_numpy(dtype=float, na_value=np.nan)
     texts = [_texts(parcels[name]) for name in ("parcel", "stratum", "land_use")]
-    return [[*row, _short(size)] for *row, size in zip(*texts, area, strict=True)]
+    places = name_places(parcels)
+    return [[*row, _short(size), place] for *row, size, place in zip(*texts, area, places, strict=True)]
+
+
+def _strata_rows(stocks: pd.DataFrame) -> list[list[Any]]:
+    """List name and area, which may differ from survey to survey: the last known is taken."""
+    rows = stocks[stocks["by"].astype("str").eq("stratum")]
+    areas = rows.groupby(rows["unit"].astype("str"), sort=False)["area_ha"].last()
+    return [[str(name), _short(float(area))] for name, area in areas.items()]
 
 
 def _texts(column: pd.Series) -> list[str]:
     return ["" if missing else str(cell) for cell, missing in zip(column, column.isna(), strict=True)]
 
 
-def _shapes(parcels: gpd.GeoDataFrame | None) -> dict[str, Any]:
-    """Return the outlines in geographic coordinates, simplified for display; each knows the number of its parcel."""
-    import shapely
-
-    features: list[dict[str, Any]] = []
-    if parcels is not None and len(parcels):
-        flat = metric(parcels)
-        simple = flat.geometry.simplify(display_tolerance(flat), preserve_topology=True)
-        degrees = shapely.transform(simple.to_crs("EPSG:4326").to_numpy(), lambda xy: np.round(xy, _DEGREE_DECIMALS))
-        texts = shapely.to_geojson(degrees)
-        features = [
-            {"type": "Feature", "properties": {"i": number}, "geometry": json.loads(text)}
-            for number, text in enumerate(texts)
-            if text is not None
-        ]
-    return {"type": "FeatureCollection", "features": features}
+def _placed(points: pd.DataFrame) -> pd.DataFrame:
+    return points[points["lon"].notna() & points["lat"].notna()]
 
 
-def _plots(results: Results, surveys: list[str]) -> list[dict[str, Any]]:
-    """List the plots that have a position, with their density per survey (None where not measured)."""
-    points = results.plot_points
-    points = points[points["lon"].notna() & points["lat"].notna()]
-    whole = _of(results.plots)
-    keys = pd.MultiIndex.from_arrays([whole["survey"].astype("str"), whole["plot"].astype("str")])
-    density = pd.Series(whole["density_t_c_ha"].to_numpy(dtype=float, na_value=np.nan), index=keys)
-    density = density[~density.index.duplicated()]
-    names = points["plot"].astype("str")
-    wanted: list[tuple[Hashable, ...]] = [(survey, name) for name in names for survey in surveys]
+def _plots(points: pd.DataFrame) -> list[dict[str, Any]]:
+    """List the plots that have a position."""
     texts = [_texts(points[name]) for name in ("plot", "parcel", "stratum")]
     places = [points[name].astype(float) for name in ("lat", "lon")]
     inside = points["inside"].astype(bool)
-    values = density.reindex(wanted).to_numpy().reshape(len(points), len(surveys)) if wanted else np.empty((0, 0))
     return [
         {
             "plot": plot,
             "parcel": parcel,
             "stratum": stratum,
-            "at": [round(lat, _DEGREE_DECIMALS), round(lon, _DEGREE_DECIMALS)],
+            "at": [round(lat, DEGREE_DECIMALS), round(lon, DEGREE_DECIMALS)],
             "inside": bool(within),
-            "density": [_short(value) for value in found],
         }
-        for plot, parcel, stratum, lat, lon, within, found in zip(*texts, *places, inside, values, strict=True)
+        for plot, parcel, stratum, lat, lon, within in zip(*texts, *places, inside, strict=True)
     ]
+
+
+def _plot_density(results: Results, pool: str, surveys: list[str]) -> list[list[float | None]]:
+    """List the density of every placed plot at each survey; None where the pool was not measured."""
+    rows = sums_of_plots(results.plots, pool)
+    keys = pd.MultiIndex.from_arrays([rows["survey"].astype("str"), rows["plot"].astype("str")])
+    density = pd.Series(rows["density_t_c_ha"].to_numpy(dtype=float, na_value=np.nan), index=keys)
+    density = density[~density.index.duplicated()]
+    names = _placed(results.plot_points)["plot"].astype("str")
+    wanted: list[tuple[Hashable, ...]] = [(survey, name) for name in names for survey in surveys]
+    if not wanted:
+        return []
+    values = density.reindex(wanted).to_numpy().reshape(len(names), len(surveys))
+    return [[_short(value) for value in found] for found in values]

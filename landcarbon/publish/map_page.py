@@ -14,7 +14,8 @@ import folium
 import jinja2
 from branca.element import Element, Figure
 
-from landcarbon.publish.map_data import display_tolerance, metric, page_data
+from landcarbon.publish.map_data import page_data
+from landcarbon.publish.map_shapes import display_tolerance, metric
 from landcarbon.publish.results import Results
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
 
@@ -80,8 +81,9 @@ def map_page(results: Results, *, base_tiles: bool = False) -> str:
     Returns
     -------
     str
-        A whole HTML page: density of each survey and change between surveys by parcel, plots as points, legend,
-        figures on hover, a table of the figures, area method, sign rule, marks and cautions.
+        A whole HTML page: density of each survey and change between surveys by parcel, for all pools together or one
+        of them, plots as points, legend, figures on hover, tables of strata and parcels, area method, sign rule, marks
+        and cautions.
     """
     # Escaping is on: every text in the templates comes from files or settings.
     environment = jinja2.Environment(
@@ -113,6 +115,7 @@ def _words(results: Results) -> dict[str, Any]:
     return {
         "name": results.name or "Inventory",
         "has_parcels": results.parcels is not None,
+        "has_strata": bool(results.stocks["by"].astype("str").eq("stratum").any()),
         "positions": bool(
             results.parcels is not None
             or (results.plot_points["lon"].notna() & results.plot_points["lat"].notna()).any()

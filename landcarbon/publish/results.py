@@ -10,7 +10,7 @@ import pandas as pd
 if TYPE_CHECKING:
     import geopandas as gpd
 
-__all__ = ["CHANGE_COLUMNS", "STOCK_COLUMNS", "Results"]
+__all__ = ["CHANGE_COLUMNS", "STOCK_COLUMNS", "Results", "parts_of_plots", "sums_of_plots"]
 
 STOCK_COLUMNS = [
     "by",
@@ -72,7 +72,8 @@ class Results:
     trees : DataFrame
         Tree rows with the outcome of the tree step.
     plots : DataFrame
-        Long: survey, plot, pool, density_t_c_ha [t C/ha] and whatever else is known of the visit.
+        Long: survey, plot, pool, density_t_c_ha [t C/ha] and whatever else is known of the visit. Where there is a
+        column part, rows with an empty part hold the pool, the others its parts.
     parcels : GeoDataFrame or None
         parcel, stratum, land_use, area_ha [ha], geometry; None for an inventory without polygons.
     plot_points : DataFrame
@@ -120,3 +121,33 @@ class Results:
     def interval_name(self) -> str:
         """What an interval is called on the outputs, e.g. ``95 % interval``."""
         return "interval" if pd.isna(self.confidence) else f"{self.confidence * 100:g} % interval"
+
+
+def sums_of_plots(plots: pd.DataFrame, pool: str | None = None) -> pd.DataFrame:
+    """Return the rows of whole pools, without those of their parts.
+
+    Parameters
+    ----------
+    plots : DataFrame
+        As in :class:`Results`.
+    pool : str, optional
+        Only this pool.
+    """
+    keep = _blank(plots["part"]) if "part" in plots else pd.Series(True, index=plots.index)
+    if pool is not None:
+        keep &= plots["pool"].astype("str").eq(pool)
+    return plots[keep]
+
+
+def parts_of_plots(plots: pd.DataFrame, pool: str | None = None) -> pd.DataFrame:
+    """Return the rows of parts of pools; none where the table has no column part."""
+    if "part" not in plots:
+        return plots.iloc[:0].assign(part="")
+    keep = ~_blank(plots["part"])
+    if pool is not None:
+        keep &= plots["pool"].astype("str").eq(pool)
+    return plots[keep]
+
+
+def _blank(column: pd.Series) -> pd.Series:
+    return column.isna() | column.astype("str").eq("")

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
@@ -15,18 +15,27 @@ from landcarbon.publish.provenance import count_findings
 from landcarbon.publish.results import Results
 from landcarbon.publish.words import NOT_ESTIMABLE, POOL_NAMES
 
+if TYPE_CHECKING:
+    from rich.console import Console
+
 __all__ = [
     "change_table",
+    "column_of",
+    "finding_line",
     "findings_table",
     "number_of",
     "plain_text",
+    "print_wide",
     "reconciliation_table",
     "rows_of",
     "stocks_table",
     "table_of",
+    "table_width",
 ]
 
+_SEVERITY_STYLE = {"error": "red", "warning": "yellow", "note": ""}
 _TOP_FINDINGS = 12
+_UNLIMITED = 10_000
 _DASH = "\u2013"
 
 
@@ -58,6 +67,7 @@ def stocks_table(results: Results, by: str) -> Table:
         table.add_row(
             *map(plain_text, first), *_stock_cells(row), style="bold" if whole and row.pool == "all" else None
         )
+    _remark_on_spread(table, rows["density_se"])
     return table
 
 
@@ -92,6 +102,7 @@ def change_table(results: Results, by: str) -> Table:
     for row in rows.itertuples(index=False):
         first = [row.since, row.until] if by == "inventory" else [row.unit, row.since, row.until]
         table.add_row(*map(plain_text, first), *_change_cells(row))
+    _remark_on_spread(table, rows["change_se"])
     return table
 
 
@@ -142,13 +153,70 @@ def rows_of(frame: pd.DataFrame, by: str) -> pd.DataFrame:
     return frame[frame["by"].astype("str").eq(by)]
 
 
-def table_of(title: str, columns: list[tuple[str, str]]) -> Table:
-    """Make an empty table of the house form; a column is a heading and "left" (text, may wrap) or "right" (number)."""
+def table_of(title: str, columns: list[tuple[str, str]], *, whole: tuple[str, ...] = ()) -> Table:
+    """Make an empty table of the house form.
+
+    Parameters
+    ----------
+    title : str
+        Its heading.
+    columns : list of tuple
+        Heading and "left" (text, may wrap) or "right" (number).
+    whole : tuple of str
+        Headings of text columns that are never broken across lines, such as ids that are to be copied.
+    """
     table = Table(title=Text(title, style="bold"), title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
     for name, side in columns:
         number = side == "right"
-        table.add_column(Text(name), justify="right" if number else "left", no_wrap=number, overflow="fold")
+        uncut = number or name in whole
+        table.add_column(Text(name), justify="right" if number else "left", no_wrap=uncut, overflow="fold")
     return table
+
+
+def table_width(table: Table, console: Console) -> int:
+    """Return the columns a table needs if nothing in it is wrapped."""
+    return console.measure(table, options=console.options.update(width=_UNLIMITED)).maximum
+
+
+def print_wide(table: Table, console: Console) -> None:
+    """Print a table whose rows are not to be broken.
+
+    In a file or a pipe nothing limits the width. On a terminal too narrow for it every row becomes lines of its own:
+    the first cell, then the others with their headings.
+    """
+    needed = table_width(table, console)
+    if not console.is_terminal and needed > console.width:
+        before = console.width
+        console.width = needed
+        try:
+            console.print(table)
+        finally:
+            console.width = before
+    elif needed > console.width:
+        _print_listed(table, console)
+    else:
+        console.print(table)
+
+
+def _print_listed(table: Table, console: Console) -> None:
+    headings = [str(column.header) for column in table.columns]
+    rows = zip(*(column.cells for column in table.columns), strict=True)
+    console.print(table.title)
+    for first, *others in rows:
+        console.print(first, soft_wrap=True)
+        said = [f"{name} {cell}".strip() for name, cell in zip(headings[1:], others, strict=True) if str(cell)]
+        console.print(Text("  " + "; ".join(said)))
+
+
+def _remark_on_spread(table: Table, errors: pd.Series) -> None:
+    """Say why a figure has no interval: plots that are all alike say nothing of those not visited."""
+    if errors.eq(0).any():
+        table.caption = Text(f"{_DASH} no interval: no variation between plots", style="dim")
+        table.caption_justify = "left"
+
+
+def _spread(value: float, decimals: int) -> str:
+    return figure(float("nan") if value == 0 else value, decimals)
 
 
 def _stock_cells(row: Any) -> list[str]:
@@ -160,10 +228,10 @@ def _stock_cells(row: Any) -> list[str]:
         figure(area, decimals_for(float("nan"), area)),
         figure(plots, 0),
         NOT_ESTIMABLE if pd.isna(density) else figure(density, first),
-        figure(density_se, first),
+        _spread(density_se, first),
         interval(number_of(row, "density_low"), number_of(row, "density_high"), first),
         figure(stock, second),
-        figure(stock_se, second),
+        _spread(stock_se, second),
     ]
 
 
@@ -185,6 +253,28 @@ def number_of(row: Any, name: str) -> float:
     """Return a number of a row, NaN where it is missing."""
     value = getattr(row, name)
     return float("nan") if pd.isna(value) else float(value)
+
+
+def column_of(row: Any, name: str) -> str:
+    """Return a text of a row, empty where it or the column is missing."""
+    value = getattr(row, name, "")
+    return "" if pd.isna(value) else str(value)
+
+
+def finding_line(row: object) -> Text:
+    """Write one finding as a line: severity, place, what it means, the value, what to do."""
+    severity, file, line = (getattr(row, name) for name in ("severity", "file", "row"))
+    place = f"{file} line {line}" if file and not pd.isna(line) else str(file)
+    where = [place, *(f"{name} {getattr(row, name)}" for name in ("survey", "plot", "tree") if getattr(row, name))]
+    column, value = str(getattr(row, "column", "")), str(getattr(row, "value", ""))
+    shown = f" [{column} {value}]" if column and value else f" [{value}]" if value else ""
+    parts = [f"{', '.join(part for part in where if part)}: ", str(getattr(row, "message", "")), shown]
+    remedy = str(getattr(row, "remedy", ""))
+    return Text.assemble(
+        (f"{severity}: ", _SEVERITY_STYLE.get(str(severity), "")),
+        plain_text("".join(parts).removeprefix(": ")),
+        plain_text(f" {remedy}" if remedy else ""),
+    )
 
 
 def plain_text(value: object) -> Text:

@@ -9,6 +9,7 @@ from landcarbon.inputs import Inputs
 from landcarbon.inventory.models import Settings
 from landcarbon.read.crs import crs_text
 from landcarbon.read.plots import read_plots
+from landcarbon.read.samples import read_samples
 from landcarbon.read.source import FileLog
 from landcarbon.read.strata import make_strata, read_species, read_stated_areas
 from landcarbon.read.surveys import order_surveys
@@ -52,7 +53,9 @@ def load_inputs(settings: Settings) -> Inputs:
     visits, visit_findings = make_visits(settings, surveys, plots.frame, plots.extra, rows, read_visits(settings, log))
     stated, stated_findings = read_stated_areas(settings, log)
     strata, strata_findings = make_strata(stated, plots.frame, parcels)
-    species, species_findings = read_species(settings, rows, log)
+    samples = read_samples(settings, list(plots.frame["plot"]), log)
+    codes = set(rows["species"].cat.categories) | samples.species()
+    species, species_findings = read_species(settings, sorted(codes), log)
     findings = join_findings(
         [
             *(parcels.findings if parcels else []),
@@ -61,6 +64,7 @@ def load_inputs(settings: Settings) -> Inputs:
             *plots.findings,
             *trees.findings,
             *visit_findings,
+            *samples.findings,
             *species_findings,
         ]
     )
@@ -76,6 +80,7 @@ def load_inputs(settings: Settings) -> Inputs:
         files=log.frame(),
         crs=crs_text(plots.crs) if plots.crs is not None else None,
         area_method=_area_method(strata, parcels is not None, bool(parcels and parcels.stated)),
+        samples=samples.tables,
     )
 
 

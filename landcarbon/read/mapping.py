@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -22,7 +22,7 @@ from landcarbon.read.source import FileLog, Source
 from landcarbon.read.table import RawTable
 from landcarbon.read.text import read_text
 
-__all__ = ["Mapped", "column_plan", "left_blank", "map_raw", "read_mapped", "wanted_in"]
+__all__ = ["Mapped", "class_column", "column_plan", "left_blank", "map_raw", "read_mapped", "specs_of", "wanted_in"]
 
 _REPEATING = frozenset({"survey", "plot", "subplot", "species", "status", "decay_class"})
 
@@ -88,6 +88,36 @@ def read_mapped(source: Source, table: str, settings: Settings, log: FileLog) ->
     return map_raw(raw, table, source, settings, log)
 
 
+def class_column(name: str) -> str:
+    """Return our name of the column that holds the counts or diameters of a size class."""
+    return f"class {name}"
+
+
+def specs_of(table: str, settings: Settings) -> dict[str, ColumnSpec]:
+    """Return the columns of a table by name, those of the size classes of down wood among them.
+
+    Parameters
+    ----------
+    table : str
+        Canonical table.
+    settings : Settings
+        The project file.
+    """
+    specs = table_columns(table)
+    for name, one in settings.dead_wood.classes.items() if table == "pieces" else ():
+        if one.count or one.diameter:
+            model = specs["diameter" if one.diameter else "count"]
+            column = class_column(name)
+            specs[column] = replace(model, column=column, becomes=column, needed=True)
+    return specs
+
+
+def _class_names(column: str, settings: Settings) -> str | list[str] | None:
+    """Return the user's names of the column of a size class."""
+    one = settings.dead_wood.classes.get(column.removeprefix(class_column("")))
+    return (one.count or one.diameter) if one is not None and column.startswith(class_column("")) else None
+
+
 def column_plan(table: str, names: Sequence[str], source: Source, settings: Settings) -> dict[str, str]:
     """Find which column of a file serves each canonical column.
 
@@ -115,7 +145,7 @@ def column_plan(table: str, names: Sequence[str], source: Source, settings: Sett
     folded = {name.casefold(): name for name in reversed(names)}
     plan: dict[str, str] = {}
     missing: list[str] = []
-    for column, spec in table_columns(table).items():
+    for column, spec in specs_of(table, settings).items():
         wanted, mapped = _wanted(spec, settings)
         there = [name if name in names else folded.get(name.casefold()) for name in wanted]
         found = next((name for name in there if name is not None), None)
@@ -124,14 +154,15 @@ def column_plan(table: str, names: Sequence[str], source: Source, settings: Sett
         elif spec.needed or (mapped and wanted):
             missing.append(_missing(column, wanted or [column], names))
     if missing:
-        told = f"Columns in the file: {', '.join(names)}. Name the right one under [columns.{table}]."
+        where = f"[columns.{table}]" + (" or [dead_wood.classes]" if table == "pieces" else "")
+        told = f"Columns in the file: {', '.join(names)}. Name the right one under {where}."
         raise InputFileError("; ".join(missing), where=source.name, remedy=told)
     return plan
 
 
 def _wanted(spec: ColumnSpec, settings: Settings) -> tuple[list[str], bool]:
     """Return the names a column may have in the file, and whether the user gave them."""
-    given = settings.columns.get(spec.table, {}).get(spec.column)
+    given = settings.columns.get(spec.table, {}).get(spec.column, _class_names(spec.column, settings))
     if given is not None:
         names = [given] if isinstance(given, str) else given
         return [name.strip() for name in names if name.strip()], True
@@ -180,12 +211,13 @@ def map_raw(raw: RawTable, table: str, source: Source, settings: Settings, log: 
     mapped = Mapped(_base(raw), plan, {}, raw.ragged, [*raw.findings, *blank])
     units = settings.units.get(table, {})
     columns: dict[str, object] = {}
-    for column, spec in table_columns(table).items():
+    for column, spec in specs_of(table, settings).items():
         cells = raw.columns.get(plan.get(column, ""))
         parsed = _parse(cells, spec, settings.dates.format, comma_decimals=raw.comma_decimals, rows=len(raw))
         if isinstance(parsed, Parsed):
             _note_bad(mapped, column, cells, parsed, raw.lines)
-            values = convert(parsed.values, units.get(column, ""), spec.unit) if spec.unit else parsed.values
+            unit = units.get("diameter" if column.startswith(class_column("")) else column, "")
+            values = convert(parsed.values, unit, spec.unit) if spec.unit else parsed.values
             columns[spec.becomes] = values
         else:
             columns[spec.becomes] = parsed
@@ -254,7 +286,8 @@ def _note_bad(mapped: Mapped, column: str, cells: pa.Array | None, parsed: Parse
 
 def wanted_in(column: str, table: str) -> str:
     """Return in words what a cell of a column has to hold."""
-    kind = table_columns(table)[column].kind
+    known = table_columns(table)
+    kind = known[column].kind if column in known else "number"
     return {"date": "date in the form expected", "flag": "yes or no"}.get(kind, "number")
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -105,15 +106,15 @@ def make_strata(
     return frame, findings
 
 
-def read_species(settings: Settings, trees: pd.DataFrame, log: FileLog) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
-    """Return the scientific name of every species code that occurs in the tree rows.
+def read_species(settings: Settings, codes: Sequence[str], log: FileLog) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
+    """Return the scientific name of every species code that occurs in the tables.
 
     Parameters
     ----------
     settings : Settings
         The project file.
-    trees : DataFrame
-        Tree rows.
+    codes : sequence of str
+        Distinct codes, in order.
     log : FileLog
         Notes what was read.
 
@@ -144,7 +145,6 @@ def read_species(settings: Settings, trees: pd.DataFrame, log: FileLog) -> tuple
         kept = differing[~twice]
         names = {**dict(zip(kept["species"], kept["scientific_name"], strict=True)), **names}
     folded = {key.casefold(): value for key, value in names.items()}
-    codes = list(trees["species"].cat.categories)
     found = [names.get(code) or folded.get(code.casefold()) or "" for code in codes]
     frame = pd.DataFrame({"species": pd.Series(codes, dtype="str"), "scientific_name": pd.Series(found, dtype="str")})
     unnamed = (frame["scientific_name"] == "") & (frame["species"] != "")

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable
+from collections.abc import Collection, Iterable
+from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
@@ -14,7 +15,16 @@ from landcarbon.inventory.models import Settings
 
 Moment = pd.Timestamp | NaTType
 
-__all__ = ["files_of", "label_year", "order_surveys", "survey_by_date", "survey_by_label"]
+__all__ = [
+    "Assigned",
+    "assign_surveys",
+    "day_text",
+    "files_of",
+    "label_year",
+    "order_surveys",
+    "survey_by_date",
+    "survey_by_label",
+]
 
 
 def files_of(settings: Settings, kind: str) -> dict[str, list[str]]:
@@ -24,10 +34,11 @@ def files_of(settings: Settings, kind: str) -> dict[str, list[str]]:
     ----------
     settings : Settings
         The project file.
-    kind : {"trees", "visits"}
-        Which files.
+    kind : str
+        trees, visits or a table of samples.
     """
-    shared = _listed(getattr(settings, kind).file)
+    whole = getattr(settings, kind).file if kind in ("trees", "visits") else getattr(settings.samples, kind)
+    shared = _listed(whole)
     found: dict[str, list[str]] = {}
     for name, survey in settings.surveys.items():
         for file in _listed(getattr(survey, kind)) or shared:
@@ -93,6 +104,81 @@ def survey_by_date(dates: pd.Series, settings: Settings, surveys: list[str], fil
             )
         places[((dates >= since) & (dates <= until)).to_numpy()] = place
     return places
+
+
+@dataclass(frozen=True)
+class Assigned:
+    """Surveys of the rows of a file.
+
+    Attributes
+    ----------
+    names : Series
+        Survey of each row; blank if none.
+    lost : ndarray of bool
+        Rows that belong to no survey of the file.
+    rule : str
+        Rule of reading these break.
+    value : ndarray
+        What these rows say of their survey.
+    """
+
+    names: pd.Series
+    lost: np.ndarray
+    rule: str
+    value: np.ndarray
+
+
+def assign_surveys(
+    frame: pd.DataFrame, given: Collection[str], settings: Settings, served: list[str], *, file: str, table: str
+) -> Assigned:
+    """Find the survey of every row of a table of samples.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        survey (labels as written), date.
+    given : collection of str
+        Which of our columns the file has.
+    settings : Settings
+        The project file.
+    served : list of str
+        Surveys the file serves.
+    file, table : str
+        The file and its canonical table, for messages.
+
+    Raises
+    ------
+    InputFileError
+        If the file serves several surveys and nothing tells them apart.
+    """
+    labels, rows = frame["survey"], len(frame)
+    if "survey" in given:
+        known = survey_by_label(labels.unique(), list(settings.surveys))
+        names = labels.map(known).astype("str")
+        if len(served) == 1:
+            lost = ((names != "") & (names != served[0])).to_numpy()
+            rule, names = "other survey", pd.Series([served[0]] * rows, dtype="str")
+        else:
+            lost = ~names.isin(served).to_numpy()
+            rule, names = "unknown survey", names.where(~lost, "")
+        return Assigned(names, lost, rule, labels[lost].to_numpy(dtype=object))
+    if len(served) == 1:
+        nothing = np.zeros(rows, dtype=bool)
+        return Assigned(pd.Series([served[0]] * rows, dtype="str"), nothing, "other survey", np.empty(0, dtype=object))
+    if "date" not in given:
+        raise InputFileError(
+            f"the file serves the surveys {', '.join(served)}, but has neither a survey nor a date column",
+            where=file,
+            remedy=f"Map one of them under [columns.{table}].",
+        )
+    places = survey_by_date(frame["date"], settings, served, file)
+    names = pd.Series(np.append(np.array(served, dtype=object), "")[places], dtype="str")
+    return Assigned(names, places < 0, "date outside surveys", day_text(frame.loc[places < 0, "date"]))
+
+
+def day_text(days: pd.Series) -> np.ndarray:
+    """Return dates as year-month-day, blank for none."""
+    return days.dt.strftime("%Y-%m-%d").fillna("").to_numpy(dtype=object)
 
 
 def label_year(name: str) -> int | None:

@@ -14,7 +14,7 @@ from landcarbon.inventory.models import Settings
 from landcarbon.read.mapping import Mapped, read_mapped, wanted_in
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
-from landcarbon.read.surveys import files_of, survey_by_date, survey_by_label
+from landcarbon.read.surveys import day_text, files_of, survey_by_date, survey_by_label
 
 __all__ = ["STATUS_DEFAULTS", "TreeRows", "read_trees"]
 
@@ -149,7 +149,7 @@ class _FileRows:
             return
         other = self._label_places() == -2
         value = self.labels[other].to_numpy(dtype=object)
-        self._aside(other, "other survey", value=value, fill={"survey": self.served[0]})
+        self._aside(other, "other survey", value=value, fill={"survey": self.served[0], "table": "trees"})
 
     def _many_by_label(self) -> None:
         places = self._label_places()
@@ -169,7 +169,7 @@ class _FileRows:
         places = survey_by_date(self.frame["date"], self.settings, self.served, file)
         self._place(places)
         lost = places < 0
-        self._aside(lost, "date outside surveys", value=_day_text(self.frame.loc[lost, "date"]))
+        self._aside(lost, "date outside surveys", value=day_text(self.frame.loc[lost, "date"]))
 
     def _status(self) -> None:
         codes = self.frame["status"]
@@ -211,10 +211,6 @@ class _FileRows:
                     fill=words,
                 )
             )
-
-
-def _day_text(days: pd.Series) -> np.ndarray:
-    return days.dt.strftime("%Y-%m-%d").fillna("").to_numpy(dtype=object)
 
 
 def _status_name(code: str, given: dict[str, str]) -> str:

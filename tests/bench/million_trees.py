@@ -22,7 +22,7 @@ import pyarrow.parquet as pq
 from allometry.assign import assign
 from allometry.catalogue import load_catalogue
 from landcarbon.estimate.stocks import estimate_stocks
-from landcarbon.plots import PlotDesign, expansion_factors, plot_pools, plot_sums, visit_index
+from landcarbon.plots import PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
 from landcarbon.pools.trees import make_tree_plan, tree_biomass, tree_findings
 
 SPECIES = [
@@ -88,12 +88,18 @@ def ours(path: Path, tables: dict[str, pd.DataFrame]) -> pd.DataFrame:
     index = visit_index(trees, visits)
     trees = trees.assign(expansion=expansion_factors(trees, visits, index, design))
     position = plan.positions(trees["species"])
-    memory = (assignments["known"] == "memory").to_numpy()[position]
-    sums = plot_sums(trees, index, len(visits), conifer=plan.conifer[position], memory=memory)
-    pools = ["above_ground", "below_ground", "dead_wood"]
-    table, _ = plot_pools(visits, plots, sums, pools=pools, design=design, root_model="cairns97_temperate")
+    sums = plot_sums(trees, index, len(visits), conifer=plan.conifer[position])
+    parts = ["above_ground.trees", "below_ground.roots", "dead_wood.standing"]
+    table, _ = plot_parts(visits, plots, sums, parts=parts, design=design, root_model="cairns97_temperate")
     stocks, _ = estimate_stocks(
-        table, tables["strata"], tables["parcels"], SURVEYS, pools=pools, confidence=0.95, inventory_name="bench"
+        table,
+        tables["strata"],
+        tables["parcels"],
+        SURVEYS,
+        pools=[part.split(".")[0] for part in parts],
+        sums={**{part.split(".")[0]: [part] for part in parts}, "all": parts},
+        confidence=0.95,
+        inventory_name="bench",
     )
     return stocks
 

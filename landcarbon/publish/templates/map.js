@@ -4,6 +4,8 @@ function drawCarbonMap(place, data) {
   const SVG = "http://www.w3.org/2000/svg";
   const HATCH = "url(#not-estimable)";
   const LARGEST_PX = 13, SMALLEST_LARGEST_PX = 3.5, SPACING_SHARE = data.parcels.length ? 0.25 : 0.42;
+  const FEWEST_FOR_STRAYS = 5, STRAY_TIMES = 8, CLOSEST_ZOOM = 18, CLOSEST_ZOOM_PLOTS = 16;
+  const NAME_PX = 12, NAME_SPILL = 1.1, NAME_SHIFTS = [0, -16, 16, -30, 30], MOST_NAMES = 300, MOST_DISCS = 2000;
   const D = {density: 0, densitySe: 1, densityLow: 2, densityHigh: 3, stock: 4, stockSe: 5, stockLow: 6, stockHigh: 7, plots: 8, method: 9};
   const C = {change: 0, se: 1, low: 2, high: 3, perYear: 4, perHaYear: 5, perHaYearSe: 6, co2: 7, paired: 8, since: 9, until: 10, years: 11, method: 12};
 
@@ -40,6 +42,7 @@ function drawCarbonMap(place, data) {
     if (!known(value)) return "not estimable";
     const digits = decimalsFor(se, value);
     let text = (signed && value > 0 ? "+" : "") + figure(value, digits) + " " + unit;
+    if (se === 0) return text + " (no variation between plots, so no interval)";
     if (known(se)) text += ", SE " + figure(se, digits);
     if (known(low) && known(high)) text += " (" + data.interval + " " + figure(low, digits) + " to " + figure(high, digits) + ")";
     return text;
@@ -51,7 +54,9 @@ function drawCarbonMap(place, data) {
   const plain = (value) => figure(value, decimalsFor(null, value));
 
   // ---- what a layer says of a parcel ----
-  const row = (layer, i) => (layer.kind === "density" ? data.stocks : data.changes)[layer.at][i];
+  let pool = data.pools[0];
+  const figuresOf = (units, layer, i) => pool[units][layer.kind === "density" ? "stocks" : "changes"][layer.at][i];
+  const row = (layer, i) => figuresOf("parcels", layer, i);
   function shade(layer, i) {
     const found = row(layer, i);
     return found ? found[layer.kind === "density" ? D.density : C.perHaYear] : null;
@@ -105,7 +110,9 @@ function drawCarbonMap(place, data) {
   if (map.attributionControl) map.attributionControl.setPrefix("Leaflet");
   L.control.scale().addTo(map);
   map.createPane("plots").style.zIndex = 450;
-  let shown = data.layers[0];
+  map.createPane("names").style.zIndex = 460;
+  map.getPane("names").style.pointerEvents = "none";
+  let shown = pool.layers[0];
 
   function parcelStyle(feature) {
     const i = feature.properties.i, value = shade(shown, i), open = spansZero(shown, i);
@@ -121,38 +128,93 @@ function drawCarbonMap(place, data) {
   }).addTo(map);
 
   const bounds = L.latLngBounds([]);
-  // A plot with a slipped coordinate may lie far off: where there are parcels, they alone set the view.
+  // A plot with a slipped coordinate may lie far off: where there are parcels, they alone set the view; elsewhere plots
+  // many times further out than nearly all others are left out of it.
+  function withoutStrays(places) {
+    const middle = (at) => places.map((place) => place[at]).sort((a, b) => a - b)[Math.floor(places.length / 2)];
+    const centre = L.latLng(middle(0), middle(1)), distances = places.map((place) => centre.distanceTo(place));
+    const most = [...distances].sort((a, b) => a - b)[Math.floor(0.9 * (places.length - 1))];
+    return places.length < FEWEST_FOR_STRAYS || !(most > 0) ? places : places.filter((_, at) => distances[at] <= STRAY_TIMES * most);
+  }
+  const inView = data.shapes.features.length ? [] : withoutStrays(data.plots.map((plot) => plot.at));
   if (data.shapes.features.length) bounds.extend(parcels.getBounds());
-  else data.plots.forEach((plot) => bounds.extend(plot.at));
+  else inView.forEach((place) => bounds.extend(place));
+  const farOff = data.shapes.features.length ? 0 : data.plots.length - inView.length;
 
   // The size of a plot shows its density at the survey in view; of a change, at the later survey.
   const surveyAt = (layer) => (layer.kind === "density" ? layer.at : data.surveys.indexOf(data.pairs[layer.at][1]));
-  const densest = Math.max(...data.plots.flatMap((plot) => plot.density.map((value) => value || 0)), 0);
+  let densest = 0; // of the pool in view
+  const findDensest = () => { densest = pool.density.reduce((most, plot) => plot.reduce((a, b) => Math.max(a, b || 0), most), 0); };
   let largest = LARGEST_PX; // of the discs; less where many plots crowd the view, so that they do not hide the parcels
   const least = () => Math.min(2.5, largest / 2), absent = () => Math.min(3.5, largest);
   const radius = (density) => Math.max(least(), densest > 0 ? largest * Math.sqrt(Math.max(density, 0) / densest) : 0);
   function fitDiscs() {
     if (!data.plots.length || !bounds.isValid()) return;
     const size = map.project(bounds.getNorthWest()).subtract(map.project(bounds.getSouthEast()));
-    const spacing = Math.sqrt(Math.abs(size.x * size.y) / data.plots.length);
+    const longest = Math.max(Math.abs(size.x), Math.abs(size.y));
+    if (longest < 1) return; // one plot, or all in one place
+    const spacing = Math.sqrt(Math.max(Math.abs(size.x * size.y), longest * longest / 10) / data.plots.length);
     largest = Math.min(LARGEST_PX, Math.max(SMALLEST_LARGEST_PX, SPACING_SHARE * spacing));
   }
-  function plotStyle(plot) {
-    const density = plot.density[surveyAt(shown)];
+  function plotStyle(at) {
+    const plot = data.plots[at], density = pool.density[at][surveyAt(shown)];
     const base = {color: "#111", weight: largest < 6 ? 0.8 : 1.3, opacity: 1, fillColor: "#fff", fillOpacity: 0.8, dashArray: null};
     if (!plot.inside) return {...base, radius: absent(), color: "#b3261e", weight: 2, fillOpacity: 0};
     if (!known(density)) return {...base, radius: absent(), dashArray: "2 2", fillOpacity: 0};
-    if (!data.parcels.length) return {...base, radius: radius(density), fillColor: colour(shown, density), fillOpacity: 1};
+    if (!data.parcels.length && shown.kind === "density") return {...base, radius: radius(density), fillColor: colour(shown, density), fillOpacity: 1};
     return {...base, radius: radius(density)};
   }
-  function plotTip(plot) {
+  function plotTip(at) {
+    const plot = data.plots[at], density = pool.density[at];
     const under = [plot.parcel && "parcel " + plot.parcel, plot.stratum && "stratum " + plot.stratum, !plot.inside && "outside all parcels, not counted"];
-    const pairs = data.surveys.map((survey, at) => ["Density " + survey, known(plot.density[at]) ? plain(plot.density[at]) + " t C/ha" : "not measured"]);
-    return described("Plot " + plot.plot, under.filter(Boolean).join(" \u00b7 "), pairs);
+    const pairs = data.surveys.map((survey, k) => ["Density " + survey, known(density[k]) ? plain(density[k]) + " t C/ha" : "not measured"]);
+    return described("Plot " + plot.plot, under.filter(Boolean).join(" \u00b7 "), data.pools.length > 1 ? [["Pool", pool.name], ...pairs] : pairs);
   }
-  const marks = data.plots.map((plot) => L.circleMarker(plot.at, {pane: "plots", ...plotStyle(plot)})
-    .bindTooltip(() => plotTip(plot), {className: "figures-tip", opacity: 1}));
+  findDensest();
+  const marks = data.plots.map((plot, at) => L.circleMarker(plot.at, {pane: "plots", ...plotStyle(at)})
+    .bindTooltip(() => plotTip(at), {className: "figures-tip", opacity: 1}));
   const plots = L.layerGroup(marks).addTo(map);
+
+  // ---- names of the parcels: only where they fit, never one over the other, and off the plots if there is room ----
+  const names = L.layerGroup().addTo(map);
+  const pen = document.createElement("canvas").getContext("2d");
+  const shapeOf = new Map();
+  parcels.eachLayer((shape) => shapeOf.set(shape.feature.properties.i, shape));
+  const largestFirst = data.parcels.map((_, i) => i).filter((i) => shapeOf.has(i) && data.parcels[i][4])
+    .sort((a, b) => (data.parcels[b][3] || 0) - (data.parcels[a][3] || 0));
+  const overlap = (a, b) => a.left < b.right && b.left < a.right && a.top < b.bottom && b.top < a.bottom;
+  function discBoxes(view) {
+    if (!map.hasLayer(plots)) return [];
+    return marks.filter((mark) => view.contains(mark.getLatLng())).slice(0, MOST_DISCS).map((mark) => {
+      const at = map.latLngToLayerPoint(mark.getLatLng()), r = mark.getRadius();
+      return {left: at.x - r, right: at.x + r, top: at.y - r, bottom: at.y + r};
+    });
+  }
+  function placeNames() {
+    names.clearLayers();
+    const box = document.getElementById("names-on");
+    if (!box || !box.checked) return;
+    pen.font = getComputedStyle(map.getContainer()).font.replace(/^[\s\S]*?[\d.]+px/, "600 " + NAME_PX + "px");
+    const view = map.getBounds().pad(0.05), discs = discBoxes(view), taken = [];
+    for (const i of largestFirst) {
+      if (taken.length >= MOST_NAMES) break;
+      const limits = shapeOf.get(i).getBounds();
+      if (!view.intersects(limits)) continue;
+      const room = map.latLngToLayerPoint(limits.getSouthEast()).subtract(map.latLngToLayerPoint(limits.getNorthWest()));
+      const width = pen.measureText(data.parcels[i][0]).width + 6, height = NAME_PX + 4;
+      if (width > NAME_SPILL * room.x || height > room.y) continue;
+      const centre = map.latLngToLayerPoint(data.parcels[i][4]);
+      const places = NAME_SHIFTS.filter((dy) => Math.abs(dy) < room.y / 3).map((dy) => {
+        const spot = {left: centre.x - width / 2, right: centre.x + width / 2, top: centre.y + dy - height / 2, bottom: centre.y + dy + height / 2};
+        return {...spot, dy: dy, hidden: discs.filter((disc) => overlap(disc, spot)).length};
+      }).filter((spot) => !taken.some((other) => overlap(other, spot)));
+      const best = places.sort((a, b) => a.hidden - b.hidden || Math.abs(a.dy) - Math.abs(b.dy))[0];
+      if (!best) continue;
+      taken.push(best);
+      const icon = L.divIcon({className: "parcel-name", html: node("span", {text: data.parcels[i][0], "aria-hidden": "true"}), iconSize: [width, height], iconAnchor: [width / 2, height / 2 - best.dy]});
+      names.addLayer(L.marker(data.parcels[i][4], {icon: icon, pane: "names", interactive: false, keyboard: false}));
+    }
+  }
 
   function addHatch() {
     const svg = map.getPane("overlayPane").querySelector("svg");
@@ -190,9 +252,9 @@ function drawCarbonMap(place, data) {
       const power = 10 ** Math.floor(Math.log10(densest)), top = Math.floor(densest / power) * power;
       for (const value of [top, top / 2, top / 10]) keys.push(key(disc(radius(value), {}), plain(value).replace(/\.0+$/, "") + " t C/ha"));
     }
-    if (data.plots.some((plot) => plot.inside && !known(plot.density[at]))) keys.push(key(disc(absent(), {fill: "none", "stroke-dasharray": "2 2"}), "not measured then"));
+    if (data.plots.some((plot, k) => plot.inside && !known(pool.density[k][at]))) keys.push(key(disc(absent(), {fill: "none", "stroke-dasharray": "2 2"}), "not measured then" + (data.pools.length > 1 && pool === data.pools[0] ? ", or not in all pools" : "")));
     const strays = data.plots.filter((plot) => !plot.inside).length;
-    if (strays) keys.push(key(disc(absent(), {fill: "none", stroke: "#b3261e", "stroke-width": 2}), "outside all parcels: " + strays));
+    if (strays && data.parcels.length) keys.push(key(disc(absent(), {fill: "none", stroke: "#b3261e", "stroke-width": 2}), "outside all parcels: " + strays));
     return keys;
   }
   function totalLine() {
@@ -203,38 +265,55 @@ function drawCarbonMap(place, data) {
     else line.append(estimate(found[C.change], found[C.se], found[C.low], found[C.high], "t C", true) + "; " + dioxide(found));
     return line;
   }
+  function countLines() {
+    const n = data.counts, said = [], plots_ = (k) => k + " of " + n.plots + (n.plots === 1 ? " plot " : " plots ");
+    if (n.outside && data.parcels.length) said.push(plots_(n.outside) + (n.outside === 1 ? "lies outside all parcels and is" : "lie outside all parcels and are") + " not counted (zoom out to those beyond the view).");
+    if (n.unplaced && n.unplaced < n.plots) said.push(plots_(n.unplaced) + (n.unplaced === 1 ? "has no position and is" : "have no position and are") + " not drawn.");
+    if (farOff) said.push(plots_(farOff) + (farOff === 1 ? "lies" : "lie") + " far from the others, beyond this view: are the coordinates right?");
+    return said.map((text) => node("p", {class: "counted", text: text}));
+  }
   function fillLegend() {
     const legend = document.getElementById("legend");
-    const words = shown.kind === "density" ? "t C/ha, all counted pools" : "t C/ha per year; + gained, \u2212 lost by the land";
-    legend.replaceChildren(node("h2", {text: (shown.kind === "density" ? "Density " : "Change ") + shown.short}), node("p", {class: "unit", text: words}), node("ul", {class: "keys"}, ...classKeys(), ...parcelKeys()), totalLine());
+    const words = shown.kind === "density" ? "t C/ha, " + pool.name : "t C/ha per year, " + pool.name + "; + gained, \u2212 lost by the land";
+    legend.replaceChildren(node("h2", {text: (shown.kind === "density" ? "Density " : "Change ") + shown.short}), node("p", {class: "unit", text: words}), node("ul", {class: "keys"}, ...classKeys(), ...parcelKeys()), totalLine(), ...countLines());
     if (data.plots.length && map.hasLayer(plots)) {
       legend.append(node("h2", {text: "Plots, survey " + data.surveys[surveyAt(shown)]}), node("ul", {class: "keys"}, ...plotKeys()));
     }
   }
 
-  // ---- table of the figures ----
-  function fillTable() {
-    const details = document.getElementById("figures");
+  // ---- tables of the figures ----
+  function fillTable(id, units, rows) {
+    const details = document.getElementById(id);
     if (!details || !details.open) return;
     const density = shown.kind === "density";
     const columns = density
       ? [["density t C/ha", D.density, D.densitySe], ["SE", D.densitySe, D.densitySe], ["low", D.densityLow, D.densitySe], ["high", D.densityHigh, D.densitySe], ["stock t C", D.stock, D.stockSe], ["SE", D.stockSe, D.stockSe], ["plots", D.plots, null]]
       : [["change t C", C.change, C.se], ["SE", C.se, C.se], ["low", C.low, C.se], ["high", C.high, C.se], ["t C/yr", C.perYear, null], ["t C/ha per year", C.perHaYear, C.perHaYearSe], ["t CO\u2082/yr", C.co2, null], ["plots at both", C.paired, null]];
     const whole = density ? [D.plots] : [C.paired];
-    const head = node("tr", {}, ...["parcel", "area ha", ...columns.map((column) => column[0]), "method"].map((text) => node("th", {text: text, scope: "col"})));
-    const rows = data.parcels.map(([name, , , area], i) => {
-      const found = row(shown, i) || [];
-      const cells = columns.map(([, at, spread]) => node("td", {text: known(found[at]) ? figure(found[at], whole.includes(at) ? 0 : decimalsFor(found[spread], found[at])) : ""}));
+    const spreads = density ? [D.densitySe, D.densityLow, D.densityHigh, D.stockSe] : [C.se, C.low, C.high];
+    const head = node("tr", {}, ...[units === "parcels" ? "parcel" : "stratum", "area ha", ...columns.map((column) => column[0]), "method"].map((text) => node("th", {text: text, scope: "col"})));
+    const lines = rows.map(([name, area], i) => {
+      const found = figuresOf(units, shown, i) || [];
+      const alike = found[density ? D.densitySe : C.se] === 0; // no interval where the plots do not vary
+      const cells = columns.map(([, at, spread]) => {
+        const text = !known(found[at]) ? "" : alike && spreads.includes(at) ? "\u2013" : figure(found[at], whole.includes(at) ? 0 : decimalsFor(found[spread], found[at]));
+        return node("td", {text: text});
+      });
       const method = data.methods[found[density ? D.method : C.method]] || "not estimable";
-      return node("tr", {}, node("td", {text: name}), node("td", {text: known(area) ? plain(area) : ""}), ...cells, node("td", {text: method, class: "text"}));
+      return node("tr", {}, node("td", {text: name}), node("td", {text: known(area) ? plain(area) : ""}), ...cells, node("td", {text: method + (alike ? "; no variation between plots" : ""), class: "text"}));
     });
-    details.querySelector(".scroll").replaceChildren(node("table", {}, node("caption", {text: shown.title, class: "unit"}), node("thead", {}, head), node("tbody", {}, ...rows)));
+    const caption = shown.title + ", " + pool.name;
+    details.querySelector(".scroll").replaceChildren(node("table", {}, node("caption", {text: pool === data.pools[0] ? caption : shown.title, class: "unit"}), node("thead", {}, head), node("tbody", {}, ...lines)));
+  }
+  function fillTables() {
+    fillTable("strata-figures", "strata", data.strata);
+    fillTable("figures", "parcels", data.parcels.map(([name, , , area]) => [name, area]));
   }
 
   // ---- switching ----
   function drawPlots() {
     fitDiscs();
-    marks.forEach((mark, at) => { const style = plotStyle(data.plots[at]); mark.setStyle(style); mark.setRadius(style.radius); });
+    marks.forEach((mark, at) => { const style = plotStyle(at); mark.setStyle(style); mark.setRadius(style.radius); });
   }
   function show(layer) {
     shown = layer;
@@ -251,37 +330,59 @@ function drawCarbonMap(place, data) {
       }
     });
     fillLegend();
-    fillTable();
+    fillTables();
+  }
+  function choosePool(name) {
+    pool = data.pools.find((each) => each.pool === name);
+    findDensest();
+    show(pool.layers.find((layer) => layer.kind === shown.kind && layer.at === shown.at));
   }
   function choices(kind, title) {
-    const group = data.layers.filter((layer) => layer.kind === kind);
+    const group = data.pools[0].layers.filter((layer) => layer.kind === kind);
     if (!group.length) return [];
     const labels = group.map((layer) => {
-      const input = node("input", {type: "radio", name: "layer", value: String(data.layers.indexOf(layer))});
+      const input = node("input", {type: "radio", name: "layer", value: kind + " " + layer.at});
       input.checked = layer === shown;
-      input.addEventListener("change", () => show(layer));
+      input.addEventListener("change", () => show(pool.layers.find((each) => each.kind === kind && each.at === layer.at)));
       return node("label", {}, input, node("span", {text: layer.short}));
     });
     return [node("fieldset", {}, node("legend", {text: title}), node("div", {class: "choices"}, ...labels))];
   }
+  function poolChoice() {
+    if (data.pools.length < 2) return data.pools_left_out ? [node("p", {class: "unit", text: "Only the sum of the pools is on this page, for its weight; stocks.csv and change.csv hold every pool."})] : [];
+    const select = node("select", {id: "pool"}, ...data.pools.map((each) => node("option", {value: each.pool, text: each.name})));
+    select.addEventListener("change", () => choosePool(select.value));
+    return [node("label", {class: "pool"}, document.createTextNode("Pool "), select)];
+  }
+  function switchFor(id, text, act) {
+    const box = node("input", {type: "checkbox", id: id, autocomplete: "off"});
+    box.checked = true;
+    box.addEventListener("change", () => act(box.checked));
+    return node("label", {class: "switch"}, box, document.createTextNode(text));
+  }
   function fillSwitches() {
     const form = document.getElementById("layers");
-    form.append(...choices("density", "Density at the survey"), ...choices("change", "Change between surveys"));
-    if (!data.plots.length) return;
-    const box = node("input", {type: "checkbox", id: "plots-on"});
-    box.checked = true;
-    box.addEventListener("change", () => { if (box.checked) plots.addTo(map); else plots.remove(); fillLegend(); });
-    form.append(node("label", {class: "switch"}, box, document.createTextNode("Plots, sized by density")));
+    form.append(...poolChoice(), ...choices("density", "Density at the survey"), ...choices("change", "Change between surveys"));
+    if (data.plots.length) form.append(switchFor("plots-on", "Plots, sized by density", (on) => { if (on) plots.addTo(map); else plots.remove(); fillLegend(); placeNames(); }));
+    if (largestFirst.length) form.append(switchFor("names-on", "Parcel names, where they fit", placeNames));
   }
+  const fit = () => { if (bounds.isValid()) map.fitBounds(bounds, {padding: [24, 24], maxZoom: data.shapes.features.length ? CLOSEST_ZOOM : CLOSEST_ZOOM_PLOTS, animate: false}); };
 
-  if (bounds.isValid()) map.fitBounds(bounds, {padding: [24, 24], maxZoom: 18, animate: false});
+  map.on("zoomend", () => { const before = largest; drawPlots(); if (largest !== before) fillLegend(); });
+  map.on("moveend", placeNames);
+  fit();
   addHatch();
   fillSwitches();
   if (shown) show(shown);
-  map.on("zoomend", () => { const before = largest; drawPlots(); if (largest !== before) fillLegend(); });
-  const details = document.getElementById("figures");
-  if (details) details.addEventListener("toggle", fillTable);
-  // The legend of another layer may be longer, and the map grows with it.
-  if (window.ResizeObserver) new ResizeObserver(() => map.invalidateSize({pan: false})).observe(map.getContainer());
+  fit(); // once more: the legend has set the height of the map
+  placeNames();
+  for (const id of ["figures", "strata-figures"]) {
+    const details = document.getElementById(id);
+    if (details) details.addEventListener("toggle", fillTables);
+  }
+  // The legend of another layer may be longer, and the map grows with it; the view follows until the reader moves it.
+  let untouched = true;
+  for (const event of ["pointerdown", "wheel", "keydown"]) map.getContainer().addEventListener(event, () => { untouched = false; }, {capture: true, passive: true});
+  if (window.ResizeObserver) new ResizeObserver(() => { map.invalidateSize({pan: false}); if (untouched) fit(); }).observe(map.getContainer());
   return map;
 }

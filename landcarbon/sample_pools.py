@@ -1,0 +1,275 @@
+"""The pools measured beside the trees: each module in turn, and its rows joined to the table of plots."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from allometry.assign import assign
+from allometry.catalogue import Catalogue
+from landcarbon.constants import M2_PER_HECTARE
+from landcarbon.factors.carbon import carbon_fraction
+from landcarbon.findings import join_findings
+from landcarbon.inventory.measured import measured_parts
+from landcarbon.plots import PlotDesign
+from landcarbon.pool_options import (
+    down_wood_options,
+    litter_options,
+    sapling_options,
+    soil_options,
+    stump_options,
+    vegetation_options,
+)
+from landcarbon.pools.defaults import default_rows
+from landcarbon.pools.down_wood import down_wood, logs
+from landcarbon.pools.frames import ground_vegetation, litter
+from landcarbon.pools.parts import PARTS, column_name, empty_parts, wide_parts
+from landcarbon.pools.saplings import saplings
+from landcarbon.pools.soil import soil
+from landcarbon.pools.stumps import stumps
+
+if TYPE_CHECKING:
+    from landcarbon.inputs import Inputs
+    from landcarbon.inventory import Settings
+
+__all__ = ["join_parts", "pool_sums", "sample_parts"]
+
+_LINE_PARTS = ("down_coarse", "down_fine")
+
+
+def sample_parts(
+    inputs: Inputs,
+    settings: Settings,
+    assignments: pd.DataFrame,
+    catalogue: Catalogue,
+    *,
+    domain: str,
+    design: PlotDesign,
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Work out every part that is measured on samples, or given by a default factor.
+
+    Parameters
+    ----------
+    inputs : Inputs
+        Checked tables.
+    settings : Settings
+        The project file.
+    assignments : DataFrame
+        Equation, wood density and group of every species code.
+    catalogue : Catalogue
+        The published equations, for saplings.
+    domain : str
+        Climate domain of the carbon fractions.
+    design : PlotDesign
+        Gives the area for logs and stumps where the file states none.
+
+    Returns
+    -------
+    parts, findings : DataFrame
+    """
+    wanted = measured_parts(settings)
+    dead = wanted.get("dead_wood", ())
+    on_lines, line_findings = _wood_on_lines(inputs, settings, assignments, dead, domain=domain, design=design)
+    coarse = empty_parts() if on_lines is None else on_lines[on_lines["part"] == "down_coarse"]
+    steps = [
+        (on_lines, line_findings),
+        _wood_on_area(inputs, settings, assignments, dead, coarse[["survey", "plot"]], domain=domain, design=design),
+        _frames(inputs, settings, wanted),
+        _saplings(inputs, settings, assignments, catalogue, wanted=wanted, domain=domain),
+        _soil(inputs, settings, wanted),
+        (_defaults(inputs, settings), None),
+    ]
+    parts = [table for table, _ in steps if table is not None and len(table)]
+    findings = [found for _, found in steps if found is not None]
+    table = pd.concat(parts, ignore_index=True) if parts else empty_parts()
+    named = pd.Series(list(zip(table["pool"], table["part"], strict=True)), dtype="object")
+    counted = {(pool, part) for pool, chosen in wanted.items() for part in (*chosen, "default")}
+    counted |= {(pool, "default") for pool in PARTS}
+    return table[named.isin(counted).to_numpy()].reset_index(drop=True), join_findings(findings)
+
+
+def join_parts(trees: pd.DataFrame, parts: pd.DataFrame, inputs: Inputs) -> pd.DataFrame:
+    """Put the parts beside the tree parts, one row per plot and survey.
+
+    Parameters
+    ----------
+    trees : DataFrame
+        Table of plots from the trees, with the columns of their parts.
+    parts : DataFrame
+        From :func:`sample_parts`.
+    inputs : Inputs
+        For the place of plots on which no trees were measured, only samples taken.
+
+    Returns
+    -------
+    DataFrame
+        The columns of ``trees`` and one per further part; NaN where a part was not measured.
+    """
+    wide = wide_parts(parts)
+    table = trees.merge(wide, on=["survey", "plot"], how="outer", indicator=True)
+    lone = (table.pop("_merge") == "right_only").to_numpy()
+    if lone.any():
+        place = inputs.plots.set_index("plot").reindex(table.loc[lone, "plot"])
+        for name in ("parcel", "stratum", "inside"):
+            table.loc[lone, name] = place[name].to_numpy()
+        table.loc[lone, "size"] = 1.0
+        table["inside"] = table["inside"].astype(bool)
+        dates = inputs.visits.assign(
+            survey=inputs.visits["survey"].astype("str"), plot=inputs.visits["plot"].astype("str")
+        )
+        known = dates.set_index(["survey", "plot"])["date"]
+        keys = pd.MultiIndex.from_frame(table.loc[lone, ["survey", "plot"]])
+        table.loc[lone, "date"] = known.reindex(keys).to_numpy()
+        for name in ("trees", "biomass_t_ha"):
+            table.loc[lone, name] = np.nan
+    order = {survey: at for at, survey in enumerate(inputs.surveys["survey"].astype("str"))}
+    place_of = {plot: at for at, plot in enumerate(inputs.plots["plot"].astype("str"))}
+    rank = table["survey"].map(order).to_numpy() * len(place_of) + table["plot"].map(place_of).to_numpy()
+    return table.iloc[np.argsort(rank, kind="stable")].reset_index(drop=True)
+
+
+def pool_sums(table: pd.DataFrame) -> dict[str, list[str]]:
+    """Columns that make up each pool, and ``all``, in canonical order; only parts measured somewhere."""
+    sums: dict[str, list[str]] = {}
+    for pool, names in PARTS.items():
+        columns = [column_name(pool, part) for part in names]
+        present = [column for column in columns if column in table and table[column].notna().any()]
+        if present:
+            sums[pool] = present
+    return {**sums, "all": [column for columns in sums.values() for column in columns]}
+
+
+def _species(assignments: pd.DataFrame) -> pd.DataFrame:
+    wanted = ["species", "accepted_name", "conifer", "wood_density_g_cm3", "wood_density_known"]
+    table = assignments[wanted].rename(columns={"accepted_name": "scientific_name"})
+    return table[table["species"] != ""].reset_index(drop=True)
+
+
+def _area_m2(design: PlotDesign) -> float:
+    return max(design.area_ha) * M2_PER_HECTARE if design.area_ha else float("nan")
+
+
+def _visited(inputs: Inputs, table: str) -> pd.DataFrame:
+    """Return the plots visited at the surveys that have rows in a sample table."""
+    surveys = set(inputs.samples[table]["survey"].astype("str"))
+    visits = inputs.visits[inputs.visits["visited"].to_numpy(dtype=bool)]
+    keys = visits[["survey", "plot"]].astype("str")
+    return keys[keys["survey"].isin(surveys)].reset_index(drop=True)
+
+
+def _wood_on_lines(
+    inputs: Inputs,
+    settings: Settings,
+    assignments: pd.DataFrame,
+    wanted: tuple[str, ...],
+    *,
+    domain: str,
+    design: PlotDesign,
+) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
+    if not set(wanted) & set(_LINE_PARTS) or "lines" not in inputs.samples:
+        return None, None
+    options = down_wood_options(settings, area_m2=_area_m2(design), domain=domain)
+    return down_wood(inputs.samples["pieces"], inputs.samples["lines"], options, _species(assignments))
+
+
+def _wood_on_area(
+    inputs: Inputs,
+    settings: Settings,
+    assignments: pd.DataFrame,
+    wanted: tuple[str, ...],
+    on_lines: pd.DataFrame,
+    *,
+    domain: str,
+    design: PlotDesign,
+) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
+    parts, findings = [], []
+    area = _area_m2(design)
+    if "down_coarse" in wanted and "logs" in inputs.samples:
+        options = down_wood_options(settings, area_m2=area, domain=domain)
+        visited = _visited(inputs, "logs")
+        table, found = logs(inputs.samples["logs"], visited, options, _species(assignments), on_lines=on_lines)
+        parts.append(table)
+        findings.append(found)
+    if "stumps" in wanted and "stumps" in inputs.samples:
+        stump = stump_options(settings, area_m2=area, domain=domain)
+        table, found = stumps(inputs.samples["stumps"], _visited(inputs, "stumps"), stump, _species(assignments))
+        parts.append(table)
+        findings.append(found)
+    return (pd.concat(parts, ignore_index=True) if parts else None), join_findings(findings)
+
+
+def _frames(
+    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]]
+) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
+    parts, findings = [], []
+    if wanted.get("litter") and "litter" in inputs.samples:
+        table, found = litter(inputs.samples["litter"], litter_options(settings))
+        parts.append(table)
+        findings.append(found)
+    if "ground_vegetation" in wanted.get("above_ground", ()) and "ground_vegetation" in inputs.samples:
+        table, found = ground_vegetation(inputs.samples["ground_vegetation"], vegetation_options(settings))
+        parts.append(table)
+        findings.append(found)
+    return (pd.concat(parts, ignore_index=True) if parts else None), join_findings(findings)
+
+
+def _saplings(
+    inputs: Inputs,
+    settings: Settings,
+    assignments: pd.DataFrame,
+    catalogue: Catalogue,
+    *,
+    wanted: dict[str, tuple[str, ...]],
+    domain: str,
+) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
+    if "saplings" not in wanted.get("above_ground", ()) or "saplings" not in inputs.samples:
+        return None, None
+    rows = inputs.samples["saplings"]
+    codes = pd.Index(rows["species"].astype("str").unique())
+    listed = assignments.set_index("species").reindex(codes)
+    lacking = set(rows.loc[rows["height_m"].isna(), "species"].astype("str"))
+    names = listed["scientific_name"].fillna(pd.Series(codes, index=codes)).to_numpy()
+    table = pd.DataFrame({"species": codes, "scientific_name": names})
+    options = settings.equations
+    chosen = assign(
+        table.assign(has_height=[code not in lacking for code in codes]),
+        region=options.region,
+        country=options.country or None,
+        sources=tuple(options.sources),
+        explicit=dict(options.species),
+        use_height="auto" if options.use_height is True else options.use_height,
+        overrides=dict(options.wood_density),
+        has_stress=options.stress is not None,
+    )
+    position = pd.Index(chosen["species"]).get_indexer(rows["species"].astype("str"))
+    code = pd.Index(catalogue.table["equation_id"]).get_indexer(chosen["equation_id"])[position]
+    density = chosen["wood_density_g_cm3"].to_numpy(dtype=float)[position]
+    stress = None if options.stress is None else np.full(1, options.stress)
+    mass, _ = catalogue.evaluate_codes(
+        code, rows["dbh_cm"].to_numpy(dtype=float), rows["height_m"].to_numpy(dtype=float), density, stress
+    )
+    group = np.where(chosen["conifer"].to_numpy(dtype=bool), "conifer", "broadleaf").astype(object)
+    fraction = carbon_fraction(group, domain=domain)[position]
+    marks = [str(mark) for mark in chosen["known"]]
+    known = next((mark for mark in ("memory", "secondary") if mark in marks), "read")
+    return saplings(rows, mass, fraction, sapling_options(settings, known=known))
+
+
+def _soil(
+    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]]
+) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
+    if not wanted.get("soil") or "soil" not in inputs.samples:
+        return None, None
+    return soil(inputs.samples["soil"], soil_options(settings))
+
+
+def _defaults(inputs: Inputs, settings: Settings) -> pd.DataFrame | None:
+    tables = []
+    visits = inputs.visits.astype({"survey": "str", "plot": "str"})
+    for name in type(settings.pools).model_fields:
+        pool = getattr(settings.pools, name)
+        if pool.how == "default":
+            tables.append(default_rows(visits, name, pool.value_t_c_ha, pool.source, part="default"))
+    return pd.concat(tables, ignore_index=True) if tables else None
