@@ -16,11 +16,10 @@ from allometry.assign import assign
 from allometry.catalogue import load_catalogue
 from allometry.heights import impute, published_height
 from allometry.roots import default_model, level
-from landcarbon.change import estimate_change
 from landcarbon.check.equations import memory_findings, range_findings, species_findings
 from landcarbon.check.run import run_checks
+from landcarbon.columns import with_columns
 from landcarbon.errors import UserError
-from landcarbon.estimate.stocks import estimate_stocks
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.inventory.measured import measured_parts
 from landcarbon.plots import TREE_PARTS, PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
@@ -38,6 +37,7 @@ from landcarbon.pools.trees import (
 from landcarbon.publish.results import CHANGE_COLUMNS
 from landcarbon.read.load import load_inputs
 from landcarbon.sample_pools import join_parts, pool_sums, sample_parts
+from landcarbon.statements import state_change, state_stocks
 
 if TYPE_CHECKING:
     from landcarbon.inputs import Inputs
@@ -140,7 +140,7 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
         trees, dead_findings = dead_trees(trees, plan, standing_options(settings))
     design = design_of(settings)
     index = visit_index(trees, inputs.visits)
-    trees = trees.assign(expansion=expansion_factors(trees, inputs.visits, index, design))
+    trees = with_columns(trees, {"expansion": expansion_factors(trees, inputs.visits, index, design)})
     position = plan.positions(trees["species"])
     sums = plot_sums(trees, index, len(inputs.visits), conifer=plan.conifer[position])
     table, plot_findings = plot_parts(
@@ -178,8 +178,7 @@ def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.Dat
     stocks, change, findings : DataFrame
     """
     surveys = [str(name) for name in stage.inputs.surveys["survey"]]
-    options = _options(stage, settings)
-    stocks, findings = estimate_stocks(stage.plot_parts, surveys=surveys, **options)
+    stocks, findings = state_stocks(stage.plot_parts, stage.sums, surveys, **_options(stage, settings))
     parts, found = [], [findings]
     for since, until in survey_pairs(surveys):
         part, finding = change_between(stage, settings, since, until)
@@ -196,20 +195,8 @@ def change_between(stage: PlotStage, settings: Settings, since: str, until: str)
     Returns
     -------
     change, findings : DataFrame
-        Without rows, and with a finding that says so, where one of the surveys has no plot to count.
     """
-    counted = set(stage.plot_parts["survey"])
-    lacking = [survey for survey in (since, until) if survey not in counted]
-    if lacking:
-        return pd.DataFrame(columns=CHANGE_COLUMNS), make_findings(
-            "survey without plots",
-            severity="error",
-            table="change",
-            survey=lacking[0],
-            message=f"No plot counts at survey {', '.join(lacking)}: change {since} to {until} cannot be stated.",
-            remedy="See the other findings for why its plots do not count.",
-        )
-    return estimate_change(stage.plot_parts, since=since, until=until, **_options(stage, settings))
+    return state_change(stage.plot_parts, stage.sums, since, until, **_options(stage, settings))
 
 
 def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
@@ -218,8 +205,6 @@ def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
     return {
         "strata": inputs.strata,
         "parcels": parcels,
-        "pools": [pool for pool in stage.sums if pool != "all"],
-        "sums": stage.sums,
         "confidence": settings.inventory.confidence,
         "inventory_name": settings.inventory.name,
     }

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -11,7 +12,7 @@ from allometry.assign import assign
 from allometry.catalogue import Catalogue
 from landcarbon.constants import M2_PER_HECTARE
 from landcarbon.factors.carbon import carbon_fraction
-from landcarbon.findings import join_findings
+from landcarbon.findings import join_findings, make_findings
 from landcarbon.inventory.measured import measured_parts
 from landcarbon.plots import PlotDesign
 from landcarbon.pool_options import (
@@ -69,6 +70,7 @@ def sample_parts(
     -------
     parts, findings : DataFrame
     """
+    inputs, outside = _inside(inputs)
     wanted = measured_parts(settings)
     dead = wanted.get("dead_wood", ())
     on_lines, line_findings = _wood_on_lines(inputs, settings, assignments, dead, domain=domain, design=design)
@@ -80,6 +82,7 @@ def sample_parts(
         _saplings(inputs, settings, assignments, catalogue, wanted=wanted, domain=domain),
         _soil(inputs, settings, wanted),
         (_defaults(inputs, settings), None),
+        (None, outside),
     ]
     parts = [table for table, _ in steps if table is not None and len(table)]
     findings = [found for _, found in steps if found is not None]
@@ -141,6 +144,31 @@ def pool_sums(table: pd.DataFrame) -> dict[str, list[str]]:
     return {**sums, "all": [column for columns in sums.values() for column in columns]}
 
 
+def _inside(inputs: Inputs) -> tuple[Inputs, pd.DataFrame]:
+    """Set aside samples of plots outside all parcels, as is done with their trees."""
+    lone = set(inputs.plots.loc[~inputs.plots["inside"].to_numpy(dtype=bool), "plot"].astype("str"))
+    if not lone:
+        return inputs, join_findings([])
+    samples, findings = {}, []
+    for name, rows in inputs.samples.items():
+        away = rows["plot"].astype("str").isin(lone) & rows["used"]
+        samples[name] = rows[~away].reset_index(drop=True)
+        findings.append(
+            make_findings(
+                "plot outside",
+                rows[away],
+                severity="note",
+                table=name,
+                column="plot",
+                used=False,
+                message="The plot lies outside every parcel, so it says nothing about the land of the inventory; the "
+                "row is not counted.",
+                remedy="Nothing if this is so; otherwise correct the coordinates of the plot or name its parcel.",
+            )
+        )
+    return replace(inputs, samples=samples), join_findings(findings)
+
+
 def _species(assignments: pd.DataFrame) -> pd.DataFrame:
     wanted = ["species", "accepted_name", "conifer", "wood_density_g_cm3", "wood_density_known"]
     table = assignments[wanted].rename(columns={"accepted_name": "scientific_name"})
@@ -151,11 +179,12 @@ def _area_m2(design: PlotDesign) -> float:
     return max(design.area_ha) * M2_PER_HECTARE if design.area_ha else float("nan")
 
 
-def _visited(inputs: Inputs, table: str) -> pd.DataFrame:
-    """Return the plots visited at the surveys that have rows in a sample table."""
+def _visited(inputs: Inputs, table: str, area_m2: float) -> pd.DataFrame:
+    """Return the plots visited at the surveys that have rows in a sample table, with the area searched [m2]."""
     surveys = set(inputs.samples[table]["survey"].astype("str"))
     visits = inputs.visits[inputs.visits["visited"].to_numpy(dtype=bool)]
     keys = visits[["survey", "plot"]].astype("str")
+    keys["area_m2"] = area_m2 * visits["share_inside"].to_numpy(dtype=float)
     return keys[keys["survey"].isin(surveys)].reset_index(drop=True)
 
 
@@ -188,13 +217,15 @@ def _wood_on_area(
     area = _area_m2(design)
     if "down_coarse" in wanted and "logs" in inputs.samples:
         options = down_wood_options(settings, area_m2=area, domain=domain)
-        visited = _visited(inputs, "logs")
+        visited = _visited(inputs, "logs", options.log_area_m2)
         table, found = logs(inputs.samples["logs"], visited, options, _species(assignments), on_lines=on_lines)
         parts.append(table)
         findings.append(found)
     if "stumps" in wanted and "stumps" in inputs.samples:
         stump = stump_options(settings, area_m2=area, domain=domain)
-        table, found = stumps(inputs.samples["stumps"], _visited(inputs, "stumps"), stump, _species(assignments))
+        table, found = stumps(
+            inputs.samples["stumps"], _visited(inputs, "stumps", stump.log_area_m2), stump, _species(assignments)
+        )
         parts.append(table)
         findings.append(found)
     return (pd.concat(parts, ignore_index=True) if parts else None), join_findings(findings)
@@ -247,14 +278,32 @@ def _saplings(
     code = pd.Index(catalogue.table["equation_id"]).get_indexer(chosen["equation_id"])[position]
     density = chosen["wood_density_g_cm3"].to_numpy(dtype=float)[position]
     stress = None if options.stress is None else np.full(1, options.stress)
-    mass, _ = catalogue.evaluate_codes(
+    mass, beyond = catalogue.evaluate_codes(
         code, rows["dbh_cm"].to_numpy(dtype=float), rows["height_m"].to_numpy(dtype=float), density, stress
     )
     group = np.where(chosen["conifer"].to_numpy(dtype=bool), "conifer", "broadleaf").astype(object)
     fraction = carbon_fraction(group, domain=domain)[position]
     marks = [str(mark) for mark in chosen["known"]]
     known = next((mark for mark in ("memory", "secondary") if mark in marks), "read")
-    return saplings(rows, mass, fraction, sapling_options(settings, known=known))
+    parts, findings = saplings(rows, mass, fraction, sapling_options(settings, known=known))
+    return parts, join_findings([findings, _beyond(rows[beyond], chosen["equation_id"].to_numpy()[position[beyond]])])
+
+
+def _beyond(rows: pd.DataFrame, equations: np.ndarray) -> pd.DataFrame:
+    """Point at saplings below or above the diameters of their equation, one finding per equation."""
+    counts = pd.Series(equations).value_counts(sort=False)
+    return join_findings(
+        make_findings(
+            "saplings beyond diameter range",
+            severity="warning",
+            table="saplings",
+            column="dbh_cm",
+            value=str(name),
+            message=f"{count} rows of saplings lie outside the diameter range of the equation {name}.",
+            remedy="Choose an equation made for small stems in [equations.species], if there is one.",
+        )
+        for name, count in counts.items()
+    )
 
 
 def _soil(

@@ -17,6 +17,8 @@ from landcarbon.publish.results import Results, parts_of_plots, sums_of_plots
 __all__ = ["Trace", "trace_unit", "tree_shares"]
 
 _MOST_NAMES = 12
+#: Parts of pools that are worked out from trees.
+_TREE_PARTS = {"above_ground": ("trees",), "below_ground": ("roots",), "dead_wood": ("standing", "dead_roots")}
 
 
 @dataclass(frozen=True)
@@ -226,15 +228,24 @@ def _notes(pool: str, here: pd.DataFrame, model: str) -> tuple[str, ...]:
                 f"Below-ground biomass comes tree by tree from the root ratio {model}, times the carbon fraction of "
                 "the plot's live trees."
             )
-    by_trees = {"above_ground": {"trees"}, "below_ground": {"roots"}, "dead_wood": {"standing", "dead_roots"}}
-    parts = parts_of_plots(here)
-    for name in wanted:
-        own = parts.loc[parts["pool"].astype("str") == name, "part"].astype("str").unique()
-        others = [part for part in own if part not in by_trees.get(name, set())]
-        if others or name not in by_trees:
-            what = f"the parts {', '.join(others)} of {name}" if others else name
-            notes.append(f"No tree enters {what}: worked out per plot from samples or a default factor.")
+    others = [text for text in (_without_trees(name, here) for name in wanted) if text]
+    if others:
+        notes.append(f"No tree enters {'; '.join(others)}: worked out per plot from samples or a default factor.")
+    if sums_of_plots(here, pool)["density_t_c_ha"].isna().any():
+        notes.append(
+            "A plot without a figure was not measured for every part of it; each part is estimated from the plots it "
+            "was measured on, and the parts are added."
+        )
     return tuple(notes)
+
+
+def _without_trees(pool: str, here: pd.DataFrame) -> str:
+    """Name what of a pool does not come from trees; empty if all does."""
+    parts = parts_of_plots(here, pool)["part"].astype("str").unique()
+    others = [part for part in parts if part not in _TREE_PARTS.get(pool, ())]
+    if pool not in _TREE_PARTS:
+        return pool
+    return f"{pool} ({', '.join(others)})" if others else ""
 
 
 def _published(results: Results, parcel: str | None, stratum: str | None, survey: str | None, pool: str) -> pd.Series:

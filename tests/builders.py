@@ -87,6 +87,7 @@ def make_inputs(
     parcels: Rows | None = None,
     surveys: Rows | None = None,
     findings: pd.DataFrame | None = None,
+    samples: Mapping[str, pd.DataFrame] | None = None,
 ) -> Inputs:
     """Build sound canonical tables around the rows given."""
     table = make_trees(trees)
@@ -115,6 +116,7 @@ def make_inputs(
         files=pd.DataFrame({"file": pd.Series(dtype="str"), "role": pd.Series(dtype="str")}),
         crs="EPSG:32632",
         area_method="made up for a test",
+        samples=dict(samples or {}),
     )
 
 

@@ -171,9 +171,13 @@ def test_vanished_trees_are_counted_by_plot():
     assert (
         vanished["message"]
         .iloc[0]
-        .startswith("Live trees of survey 2014 without a row in survey 2019 although the plot was visited: 6.")
+        .startswith("Live trees of survey 2014 without a row in survey 2019 although the plot was visited: 6 (num")
     )
-    assert vanished["value"].tolist() == ["3, 4, 5, 6, 7, …"]
+    assert "6 (numbers 3, 4, 5, 6, 7, …)" in vanished["message"].iloc[0]
+    assert vanished["value"].tolist() == ["6 trees"]
+    # file and line of the first of them, in the survey it was last seen
+    assert vanished[["file", "row"]].to_numpy().tolist() == [["trees.csv", 4]]
+    assert vanished["row_id"].isna().all()
 
 
 def test_trees_of_a_plot_that_was_not_visited_have_not_vanished():
@@ -185,7 +189,8 @@ def test_trees_of_a_plot_that_was_not_visited_have_not_vanished():
     ]
     vanished = found(rows, "vanished", visits=visits, surveys=[{"survey": y} for y in ("2014", "2019", "2024")])
     assert vanished["survey"].tolist() == ["2024"]
-    assert vanished["value"].tolist() == ["2"]
+    assert vanished["value"].tolist() == ["1 tree"]
+    assert "1 (numbers 2)" in vanished["message"].iloc[0]
 
 
 def test_a_tree_set_aside_has_not_vanished():
@@ -198,7 +203,8 @@ def test_a_thick_newcomer_was_missed_before():
     nested = make_settings(kind="nested", dbh_min_cm=[7.0])
     rows = [tree(1, "2014", 20.0), tree(1, "2019", 21.0), tree(2, "2019", 50.0), tree(3, "2019", 44.0)]
     missed = found(rows, "missed before", nested)
-    assert missed["value"].tolist() == ["2"]
+    assert "2019 and are too thick to have grown in since 2014: 1 (numbers 2)" in missed["message"].iloc[0]
+    assert missed["row"].tolist() == [4]
 
 
 def test_a_copied_sheet():

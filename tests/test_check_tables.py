@@ -118,7 +118,69 @@ def test_plots_outside_all_parcels():
     outcome = coordinates(make_inputs(plots=[{"plot": "A"}, {"plot": "B", "inside": False}]), CENSUS)
     assert rules(outcome) == ["plot outside parcels"]
     assert outcome.findings["value"].tolist() == ["500000.0, 5300000.0"]
+    assert outcome.findings["severity"].tolist() == ["warning"]
     assert not outcome.findings["used"].any()
+
+
+def plots_at(lon, lat, outside, total=9):
+    """Plots of which the first ones lie outside, at one place in degrees."""
+    return [
+        {"plot": f"P{at}", "inside": at >= outside} | ({"lon": lon, "lat": lat} if at < outside else {})
+        for at in range(total)
+    ]
+
+
+@pytest.mark.parametrize(("outside", "told"), [(1, 0), (2, 0), (3, 1), (9, 1)])
+def test_many_plots_outside_are_told_once(outside, told):
+    # limit of the rules: more than a third, and at least two
+    plots = plots_at(-9.0, 47.85, outside, total=8 if outside < 9 else 9)
+    outcome = coordinates(make_inputs(plots=plots, parcels=[{}]), CENSUS)
+    assert rules(outcome) == ["many plots outside parcels"] * told + ["plot outside parcels"] * outside
+
+
+@pytest.mark.parametrize(
+    ("lon", "lat", "said"),
+    [
+        (-9.0005, 47.8525, "With the other sign of the longitude 9 of them would lie among the parcels."),
+        (9.0005, -47.8525, "With the other sign of the latitude 9 of them"),
+        (47.8525, 9.0005, "With longitude and latitude exchanged 9 of them"),
+        (12.0, 12.0, "may say little about the land."),
+    ],
+)
+def test_the_slip_that_fits_is_named(lon, lat, said):
+    # independent: the parcel of the builder, one hectare at 500000, 5300000 in UTM zone 32, lies on the central
+    # meridian of 9 degrees east; its latitude by pyproj
+    from pyproj import Transformer
+
+    place = Transformer.from_crs("EPSG:32632", "EPSG:4326", always_xy=True).transform(500_050, 5_300_050)
+    assert place == pytest.approx((9.0005, 47.8525), abs=0.001)
+    exact = {9.0005: place[0], -9.0005: -place[0], 47.8525: place[1], -47.8525: -place[1]}
+    plots = plots_at(exact.get(lon, lon), exact.get(lat, lat), outside=9)
+    found = coordinates(make_inputs(plots=plots, parcels=[{}]), CENSUS).findings.iloc[0]
+    assert (found["rule"], found["severity"], found["value"]) == (
+        "many plots outside parcels", "error", "9 of 9 plots",
+    )  # fmt: skip
+    assert found["message"].endswith(said) or said in found["message"]
+    assert "sign of the longitude" in found["remedy"]
+
+
+def test_plots_that_cannot_be_placed_are_not_said_to_lie_outside():
+    plots = [{"plot": "A"}, {"plot": "B", "x": np.nan, "inside": False}, {"plot": "C", "y": np.nan, "parcel": "P1"}]
+    outcome = coordinates(make_inputs(plots=plots), CENSUS)
+    assert rules(outcome) == ["plot in no parcel", "coordinates missing"]
+    assert outcome.findings["severity"].tolist() == ["error", "warning"]
+    assert outcome.findings["used"].tolist() == [False, True]
+
+
+def test_trees_of_a_plot_that_cannot_be_placed():
+    plots = [{"plot": "A", "x": np.nan, "inside": False}, {"plot": "B", "inside": False}, {"plot": "C"}]
+    trees = [{"plot": name} for name in "ABC"]
+    checked = run_checks(make_inputs(trees=trees, plots=plots), CENSUS)
+    found = checked.findings[checked.findings["table"] == "trees"]
+    assert found["rule"].tolist() == ["plot outside", "plot without place"]
+    assert found["plot"].tolist() == ["B", "A"]
+    assert found["message"].iloc[1].startswith("The plot has no usable coordinates")
+    assert checked.trees["used"].tolist() == [False, False, True]
 
 
 def test_plots_without_a_stratum():
@@ -146,6 +208,7 @@ def test_strata_with_fewer_than_two_plots():
         ("2014", "larch"), ("2014", "scree"), ("2019", "larch"), ("2019", "oak"), ("2019", "scree"),
     ]  # fmt: skip
     assert "12.50 ha" in found["message"].iloc[0]
+    assert set(found["severity"]) == {"note"}  # the estimate says it loudly
     merged = too_few_plots(inputs, make_settings(merge={"larch": "oak", "scree": "oak"})).findings
     assert merged.empty
 
@@ -165,6 +228,14 @@ def test_plots_outside_do_not_count_for_the_stratum():
 def test_a_survey_nobody_went_to():
     inputs = make_inputs(plots=[{"plot": "A"}, {"plot": "B"}], surveys=[{"survey": "2014"}], visits=[])
     assert rules(too_few_plots(inputs, CENSUS)) == ["no visit"]
+
+
+def test_a_survey_whose_plots_all_lie_outside_blames_the_plots():
+    plots = [{"plot": "A", "inside": False}, {"plot": "B", "inside": False}]
+    found = too_few_plots(make_inputs(plots=plots, surveys=[{"survey": "2014"}]), CENSUS).findings
+    assert found["rule"].tolist() == ["no plot inside"]
+    assert found["message"].iloc[0].startswith("The plots visited in survey 2014 (2) all lie outside every parcel")
+    assert "plots table" in found["remedy"].iloc[0]
 
 
 def test_parcels_without_plots():

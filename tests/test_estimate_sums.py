@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from time import perf_counter
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -99,7 +101,8 @@ def test_part_on_a_subset_of_plots() -> None:
     assert rows.loc["above_ground", "density_se"] == pytest.approx(trees.std(ddof=1) / np.sqrt(5))
     assert rows.loc["soil", "density_se"] == pytest.approx(soil.std(ddof=1) / np.sqrt(3))
     first, second = 2 * trees.var(ddof=1) / 25, 3 * joint.var(ddof=1)
-    assert rows.loc["all", "df"] == pytest.approx(((first + second) / (first / 2 + second / np.sqrt(2))) ** 2)
+    shared = 2 * 3 / np.sqrt(3 * 5) * first * second / np.sqrt(4 * 2)  # three of the plots tell about both
+    assert rows.loc["all", "df"] == pytest.approx((first + second) ** 2 / (first**2 / 4 + second**2 / 2 + shared))
     assert rows.loc["all", "method"] == "stratified ratio of means, parts on different plots"
     assert rows.loc["soil", "method"] == "stratified ratio of means"
     note = findings.set_index("rule").loc["pool not measured"]
@@ -273,3 +276,19 @@ def test_all_may_be_given() -> None:
     sums = SUMS | {"all": PARTS[::-1]}
     assert read_sums(sums, list(SUMS)).parts == PARTS
     assert read_sums(sums, [*SUMS, "all"]).names == [*SUMS, "all"]
+
+
+def test_many_plots_and_parcels_take_seconds() -> None:
+    """A tenth of the intended load, with a generous limit: no loop over plots or parcels has crept in."""
+    rng = np.random.default_rng(1)
+    count, parcels = 20_000, 2_000
+    values = {part: rng.gamma(4.0, 20.0, count) for part in PARTS}
+    values["soil.soil"][rng.random(count) < 0.9] = np.nan
+    values["dead_wood.down"][rng.random(count) < 0.5] = np.nan
+    place = rng.integers(0, parcels, count)
+    table = parts_table(values, parcel=[f"c{i}" for i in place], stratum=[f"s{i}" for i in place % 8])
+    began = perf_counter()
+    frame, _ = run(table, {f"s{i}": 1000.0 for i in range(8)}, {f"c{i}": 4.0 for i in range(parcels)})
+    assert perf_counter() - began < 10
+    assert len(frame) == 4 * 2009
+    assert frame["density_t_c_ha"].notna().mean() > 0.99

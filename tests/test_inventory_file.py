@@ -73,7 +73,7 @@ class TestLoading:
             'kind = "circle", radius_m = 5',
             'kind = "rectangle", width_m = 20, length_m = 25',
             'kind = "nested", circles = [ { radius_m = 4, dbh_min_cm = 0 }, { radius_m = 12.6, dbh_min_cm = 20 } ]',
-            'kind = "angle_count", basal_area_factor = 4',
+            'kind = "angle_count", basal_area_factor = 4, unit = "m2/ha"',
             'kind = "angle_count", basal_area_factor = 10, unit = "ft2/ac"',
             'kind = "census", area_ha = 0.04',
             'kind = "census"',
@@ -224,9 +224,25 @@ class TestFaults:
         assert "plots.design: the census design needs the area of the plots" in message
 
     def test_slope_correction_needs_lengths(self):
-        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 4 }'
+        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 4, unit = "m2/ha" }'
         plots += '\nslope_correction = "design on slope"'
         assert "no lengths laid out along the slope" in fault(settings_text(plots=plots))
+
+    def test_basal_area_factor_needs_its_unit(self):
+        plots = 'file = "p.csv"\ndesign = { kind = "angle_count", basal_area_factor = 10 }'
+        message = fault(settings_text(plots=plots))
+        assert 'plots.design.unit: this key is missing. Accepted: "m2/ha" or "ft2/ac".' in message
+
+    def test_key_of_another_kind_of_design(self):
+        plots = 'file = "p.csv"\ndesign = { kind = "circle", width_m = 20, length_m = 25 }'
+        message = fault(settings_text(plots=plots))
+        assert "plots.design.width_m: unknown key. It belongs to kind 'rectangle'; kind 'circle' takes radius_m." in (
+            message
+        )
+        plots = 'file = "p.csv"\ndesign = { kind = "weighted", radius_m = 20 }'
+        assert "It belongs to kind 'circle'; kind 'weighted' takes no further key." in fault(settings_text(plots=plots))
+        plots = 'file = "p.csv"\ndesign = { kind = "circle", radius = 20 }'
+        assert "plots.design.radius: unknown key. Did you mean 'radius_m'?" in fault(settings_text(plots=plots))
 
     def test_window_backwards(self):
         surveys = '[surveys.2014]\ntrees = "t.csv"\nsince = 2014-10-01\nuntil = 2014-05-01'
@@ -332,6 +348,34 @@ class TestPools:
             ),
             ('[pools]\nlitter = { how = "measured", parts = [] }', "pools.litter.parts", "at least 1 item"),
             ('[dead_wood]\nvolume = "smallian"', "dead_wood.volume", "'smallian' is not accepted. Accepted: 'auto'"),
+            (
+                '[dead_wood]\nstanding = "class"',
+                "dead_wood.standing",
+                "'decay class', 'whole tree' or 'mangrove status'",
+            ),
+            ("[dead_wood]\nclass_density = { sound = 0 }", "dead_wood.class_density.sound", "greater than 0"),
+            ('[dead_wood]\nmissing_class = "6"', "dead_wood.missing_class", "Classes of down wood: 1, 2, 3, 4, 5."),
+            (
+                '[dead_wood]\nclass_density = { sound = 0.5, rotten = 0.2 }\nmissing_class = "roten"',
+                "dead_wood.missing_class",
+                "'roten' is not among the decay classes of class_density. Did you mean 'rotten'?",
+            ),
+            (
+                '[dead_wood]\nclass_density = { sound = 0.5, rotten = 0.2 }\nmissing_class = "3"',
+                "dead_wood.missing_class",
+                "Classes of class_density: sound, rotten.",
+            ),
+            (
+                '[pools]\ndead_wood = "measured"\n[dead_wood]\nstanding = "mangrove status"\nmissing_class = "4"',
+                "dead_wood.missing_class",
+                "'4' is not among the decay classes of standing dead trees. Classes of standing dead trees: 1, 2, 3.",
+            ),
+            ('[litter]\ncarbon_basis = "ash"', "litter.carbon_basis", "'dry matter' or 'organic matter'"),
+            ('[ground_vegetation]\ncarbon_basis = "ash"', "ground_vegetation.carbon_basis", "'dry matter'"),
+            ('[litter]\ncarbon_set = "IPCC 2019"', "litter.carbon_set", "'IPCC 2006' or 'hardwood 2009'"),
+            ('[litter]\nforest_floor = "beech"', "litter.forest_floor", "'pine', 'hardwood', 'birch' or 'spruce'"),
+            ("[litter]\nbulk_densities = { duff = 0 }", "litter.bulk_densities.duff", "greater than 0"),
+            ('[soil]\norganic = "peat"', "soil.organic", "true or false is wanted"),
             ('[dead_wood]\nroots = "litter"', "dead_wood.roots", "'not counted' or 'dead_wood'"),
             ("[dead_wood]\nline_m = 0", "dead_wood.line_m", "greater than 0"),
             ('[dead_wood.classes.a]\ncount = "n"\ndiameter = "d"', "dead_wood.classes.a", "not both"),
@@ -404,6 +448,39 @@ class TestPools:
         first, last = (line_with(text, more.splitlines()[at]) for at in (0, -1))
         lines = [int(number) for number in re.findall(r"line (\d+)", message)]
         assert all(first <= line <= last for line in lines)
+
+    def test_choices_of_the_pool_modules(self):
+        more = (
+            '[pools]\ndead_wood = "measured"\n'
+            '[dead_wood]\nstanding = "whole tree"\nclass_density = { sound = 0.5, rotten = 0.2 }\n'
+            'missing_class = "rotten"\n[litter]\ncarbon_basis = "organic matter"\ncarbon_set = "hardwood 2009"\n'
+            'forest_floor = "spruce"\nbulk_densities = { duff = 0.12 }\n[ground_vegetation]\n'
+            'carbon_basis = "dry matter"\n[soil]\norganic = true\n'
+        )
+        settings = parse_settings(settings_text(more=more))
+        wood = settings.dead_wood
+        assert (wood.standing, wood.missing_class) == ("whole tree", "rotten")
+        assert wood.class_density == {"sound": 0.5, "rotten": 0.2}
+        litter = settings.litter
+        assert (litter.carbon_basis, litter.carbon_set, litter.forest_floor, litter.bulk_densities) == (
+            "organic matter", "hardwood 2009", "spruce", {"duff": 0.12},
+        )  # fmt: skip
+        assert settings.ground_vegetation.carbon_basis == "dry matter"
+        assert settings.soil.organic
+
+    def test_choices_of_the_pool_modules_left_out(self):
+        settings = parse_settings(GOOD)
+        wood, litter = settings.dead_wood, settings.litter
+        assert (wood.standing, wood.missing_class, wood.class_density) == (None, None, {})
+        assert (litter.carbon_basis, litter.carbon_set, litter.forest_floor) == (None, None, None)
+        assert litter.bulk_densities == {}
+        assert settings.ground_vegetation.carbon_basis is None
+        assert not settings.soil.organic
+
+    def test_class_of_trees_without_one(self):
+        for standing, missing in (("decay class", "5"), ("mangrove status", "3"), ("whole tree", "2")):
+            more = f'[pools]\ndead_wood = "measured"\n[dead_wood]\nstanding = "{standing}"\nmissing_class = "{missing}"'
+            assert parse_settings(settings_text(more=more)).dead_wood.missing_class == missing
 
     def test_coarse_fragments_are_inside_one_kind_of_bulk_density(self):
         more = SOIL + '[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n[columns.soil]\ncoarse = "stones"'

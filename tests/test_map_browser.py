@@ -173,6 +173,7 @@ def test_table_follows_the_layer(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
         page.locator("#figures summary").click()
+        page.wait_for_selector("#figures tbody tr")  # the rows come with the event after the click
         assert page.locator("#figures tbody tr").count() == 5
         assert "118.4" in page.locator("#figures tbody tr").first.inner_text()
         choose(page, 4)
@@ -186,12 +187,150 @@ def test_hostile_names_are_only_text(page_file):
         page = watched.page
         assert page.locator("h1").inner_text() == HOSTILE[0]
         page.locator("#figures summary").click()
+        page.wait_for_selector("#figures tbody tr")
         names = page.locator("#figures tbody tr td:first-child").all_inner_texts()
         assert names == [*HOSTILE, "e"]
         page.uncheck("#plots-on")
         for at, name in enumerate(HOSTILE):
             assert " ".join(name.split()) in " ".join(hover(page, PARCEL_PATHS, at).split())
         assert page.locator("img").count() == 0
+        quiet(watched, path)
+
+
+def boxes_of(page, selector: str) -> list[dict[str, float]]:
+    found = page.locator(selector)
+    return [found.nth(at).bounding_box() for at in range(found.count())]
+
+
+def apart(one: dict[str, float], other: dict[str, float]) -> bool:
+    across = one["x"] + one["width"] <= other["x"] or other["x"] + other["width"] <= one["x"]
+    return across or one["y"] + one["height"] <= other["y"] or other["y"] + other["height"] <= one["y"]
+
+
+@pytest.mark.parametrize(("width", "height"), [(1280, 800), (390, 844)])
+def test_names_of_parcels_stand_where_they_fit_and_can_be_switched_off(page_file, width, height):
+    path = page_file()
+    with open_page(path, width=width, height=height) as watched:
+        page = watched.page
+        shown = page.locator(".parcel-name").all_inner_texts()
+        assert set(shown) <= {*sample_results().parcels["parcel"]}
+        boxes = boxes_of(page, ".parcel-name")
+        assert all(apart(one, other) for at, one in enumerate(boxes) for other in boxes[:at])
+        if width > 1000:
+            assert len(shown) >= 4
+        page.uncheck("#names-on")
+        assert page.locator(".parcel-name").count() == 0
+        page.check("#names-on")
+        assert page.locator(".parcel-name").all_inner_texts() == shown
+        quiet(watched, path)
+
+
+def test_more_names_come_with_a_closer_look(page_file):
+    with open_page(page_file(), width=390, height=844) as watched:
+        page = watched.page
+        before = page.locator(".parcel-name").count()
+        for _ in range(4):
+            page.locator(".leaflet-control-zoom-in").click()
+            page.wait_for_timeout(400)
+        page.mouse.move(2, 2)
+        widest = max(box["width"] for box in boxes_of(page, PARCEL_PATHS))
+        assert widest > 390
+        assert page.locator(".parcel-name").count() >= min(before, 1)
+
+
+def test_pools_can_be_chosen(page_file):
+    with open_page(page_file()) as watched:
+        page = watched.page
+        assert page.locator("#pool option").all_inner_texts() == [
+            "all counted pools", "above-ground biomass", "below-ground biomass",
+        ]  # fmt: skip
+        whole = fills(page)
+        page.select_option("#pool", "below_ground")
+        assert page.locator("#layer-title").inner_text() == "Carbon density of below-ground biomass, survey 2014"
+        assert "t C/ha, below-ground biomass" in page.locator("#legend").inner_text()
+        page.uncheck("#plots-on")
+        # Invented figures of the sample: a fifth of 118.4 t C/ha lies below ground.
+        assert "23.7 t C/ha" in hover(page, PARCEL_PATHS, 0)
+        choose(page, 2)
+        assert page.locator("#layer-title").inner_text() == "Carbon density of below-ground biomass, survey 2024"
+        choose(page, 0)
+        page.select_option("#pool", "all")
+        assert fills(page) == whole
+
+
+def test_table_of_strata_follows_the_layer(page_file):
+    with open_page(page_file()) as watched:
+        page = watched.page
+        rows = page.locator("#strata-figures tbody tr")
+        assert rows.count() == 3
+        # Invented figures of the sample: 118.4 t C/ha on 12.5 ha and 96.0 on 7.25 ha are 2,176 t C of oak.
+        assert "2,176" in rows.first.inner_text()
+        assert "not estimable: fewer than two plots" in rows.nth(2).inner_text()
+        choose(page, 1)
+        assert "survey 2019" in page.locator("#strata-figures caption").inner_text()
+
+
+def test_plots_that_do_not_count_are_counted(page_file):
+    with open_page(page_file()) as watched:
+        legend = watched.page.locator("#legend")
+        assert "1 of 13 plots lies outside all parcels and is not counted" in legend.inner_text()
+        watched.page.uncheck("#plots-on")
+        assert "1 of 13 plots lies outside all parcels and is not counted" in legend.inner_text()
+
+
+def test_figures_without_variation_have_no_interval(page_file):
+    sample = sample_results()
+    flat = sample.stocks["unit"].eq("North bank")
+    stocks = sample.stocks.assign(density_se=sample.stocks["density_se"].mask(flat, 0.0))
+    with open_page(page_file(dataclasses.replace(sample, stocks=stocks))) as watched:
+        page = watched.page
+        page.uncheck("#plots-on")
+        text = hover(page, PARCEL_PATHS, 0)
+        assert "no variation between plots" in text
+        page.locator("#figures summary").click()
+        page.wait_for_selector("#figures tbody tr")
+        assert "no variation between plots" in page.locator("#figures tbody tr").first.inner_text()
+
+
+def test_plots_without_parcels_fill_the_view_in_spite_of_a_stray(page_file):
+    sample = sample_results()
+    points = sample.plot_points.assign(inside=True)
+    points.loc[points["plot"] == "stray", ["lon", "lat"]] = [0.0, 0.0]  # the usual slip: no position typed as zero
+    path = page_file(dataclasses.replace(sample, parcels=None, crs=None, plot_points=points))
+    with open_page(path) as watched:
+        page = watched.page
+        area = page.locator("#map_parcels").bounding_box()
+        boxes = boxes_of(page, PLOT_PATHS)[:12]
+        width = max(box["x"] + box["width"] for box in boxes) - min(box["x"] for box in boxes)
+        height = max(box["y"] + box["height"] for box in boxes) - min(box["y"] for box in boxes)
+        assert max(width / area["width"], height / area["height"]) > 0.3
+        assert "1 of 13 plots lies far from the others" in page.locator("#legend").inner_text()
+        assert "outside all parcels" not in page.locator("#legend").inner_text()
+        scale = page.locator(".leaflet-control-scale-line").first.inner_text()
+        assert re.fullmatch(r"\d+ m", scale)
+        quiet(watched, path)
+
+
+def test_one_plot_alone_has_a_sensible_scale(page_file):
+    sample = sample_results()
+    results = dataclasses.replace(sample, parcels=None, crs=None, plot_points=sample.plot_points.head(1))
+    with open_page(page_file(results)) as watched:
+        assert watched.page.locator(PLOT_PATHS).first.bounding_box()["width"] > 5
+        metres = int(watched.page.locator(".leaflet-control-scale-line").first.inner_text().split()[0])
+        assert 50 <= metres <= 500
+
+
+def test_without_any_coordinates_the_page_says_so_and_shows_the_figures(page_file):
+    sample = sample_results()
+    points = sample.plot_points.assign(lon=float("nan"), lat=float("nan"))
+    path = page_file(dataclasses.replace(sample, parcels=None, crs=None, plot_points=points))
+    with open_page(path) as watched:
+        page = watched.page
+        assert page.locator("#map_parcels").is_hidden()
+        assert "nothing to draw" in page.locator(".empty").inner_text()
+        assert page.locator("#strata-figures tbody tr").count() == 3
+        choose(page, 4)  # change of the whole inventory
+        assert "Whole inventory" in page.locator("#legend").inner_text()
         quiet(watched, path)
 
 

@@ -7,9 +7,11 @@ import json
 import re
 
 import numpy as np
+import pandas as pd
 import pytest
 from publish_sample import AREA, DENSITY, HOSTILE, PARCELS, SURVEYS, sample_results
 
+from landcarbon.publish import map_data
 from landcarbon.publish.map_data import CHANGE_FIELDS, STOCK_FIELDS, page_data
 from landcarbon.publish.map_page import NAMESPACES, map_page
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
@@ -86,19 +88,20 @@ def test_text_from_files_is_never_code(name):
 def test_figures_are_those_of_the_tables():
     results = sample_results()
     data = page_data(results)
+    whole = data["pools"][0]["parcels"]
     assert data["surveys"] == list(SURVEYS)
     assert [row[0] for row in data["parcels"]] == list(PARCELS)
     for at, survey in enumerate(SURVEYS):
-        density = [row[STOCK_FIELDS.index("density_t_c_ha")] for row in data["stocks"][at]]
+        density = [row[STOCK_FIELDS.index("density_t_c_ha")] for row in whole["stocks"][at]]
         assert density[:4] == pytest.approx(list(DENSITY[:4, at]), rel=1e-6), survey
         assert density[4] is None
-    change = [row[CHANGE_FIELDS.index("change_t_c")] for row in data["changes"][2]]
+    change = [row[CHANGE_FIELDS.index("change_t_c")] for row in whole["changes"][2]]
     assert change[:4] == pytest.approx(list((DENSITY[:4, 2] - DENSITY[:4, 0]) * AREA[:4]), rel=1e-6)
-    assert data["methods"][data["stocks"][0][4][-1]].startswith("not estimable")
+    assert data["methods"][whole["stocks"][0][4][-1]].startswith("not estimable")
 
 
 def test_one_scale_for_all_surveys_and_one_for_all_changes():
-    layers = page_data(sample_results())["layers"]
+    layers = page_data(sample_results())["pools"][0]["layers"]
     assert [layer["kind"] for layer in layers] == ["density"] * 3 + ["change"] * 3
     for kind in ("density", "change"):
         assert len({tuple(layer["edges"]) for layer in layers if layer["kind"] == kind}) == 1
@@ -123,7 +126,7 @@ def test_outlines_are_stated_once_and_stay_in_place():
 def test_parcel_without_a_row_in_the_tables_is_not_estimable():
     results = sample_results()
     stocks = results.stocks[results.stocks["unit"] != "Old coupe"]
-    assert page_data(dataclasses.replace(results, stocks=stocks))["stocks"][0][3] is None
+    assert page_data(dataclasses.replace(results, stocks=stocks))["pools"][0]["parcels"]["stocks"][0][3] is None
 
 
 def test_parcels_in_degrees_and_in_feet():
@@ -139,14 +142,56 @@ def test_parcels_in_degrees_and_in_feet():
 def test_plots_only():
     results = dataclasses.replace(sample_results(), parcels=None, crs=None)
     data = page_data(results)
+    whole = data["pools"][0]
     assert data["shapes"]["features"] == []
-    assert [layer["kind"] for layer in data["layers"]] == ["density"] * 3
-    assert len(data["plots"]) == 13
-    assert data["layers"][0]["edges"][-1] >= max(plot["density"][0] or 0 for plot in data["plots"])
-    by_name = {plot["plot"]: plot for plot in data["plots"]}
-    assert by_name["P5"]["density"][1] is None
-    assert by_name["P10"]["density"][0] == 0
-    assert by_name["stray"]["inside"] is False
+    assert [layer["kind"] for layer in whole["layers"]] == ["density"] * 3 + ["change"] * 3
+    assert len(data["plots"]) == len(whole["density"]) == 13
+    assert whole["layers"][0]["edges"][-1] >= max(density[0] or 0 for density in whole["density"])
+    density = {plot["plot"]: found for plot, found in zip(data["plots"], whole["density"], strict=True)}
+    assert density["P5"][1] is None
+    assert density["P10"][0] == 0
+    assert [plot["inside"] for plot in data["plots"] if plot["plot"] == "stray"] == [False]
+
+
+def test_every_pool_has_its_own_figures_and_scale():
+    data = page_data(sample_results())
+    assert [pool["pool"] for pool in data["pools"]] == ["all", "above_ground", "below_ground"]
+    at = STOCK_FIELDS.index("density_t_c_ha")
+    whole, above = (pool["parcels"]["stocks"][0][0][at] for pool in data["pools"][:2])
+    assert above == pytest.approx(0.8 * whole, rel=1e-6)  # identity of the sample
+    edges = [pool["layers"][0]["edges"] for pool in data["pools"]]
+    assert edges[0][-1] > edges[2][-1]
+    assert data["pools"][1]["density"][0][0] == pytest.approx(0.8 * data["pools"][0]["density"][0][0], rel=1e-6)
+
+
+def test_one_counted_pool_is_no_choice():
+    sample = sample_results()
+    stocks = sample.stocks[sample.stocks["pool"] != "below_ground"]
+    assert [pool["pool"] for pool in page_data(dataclasses.replace(sample, stocks=stocks))["pools"]] == ["all"]
+
+
+def test_a_heavy_page_keeps_to_the_sum_of_the_pools_and_says_so(monkeypatch):
+    monkeypatch.setattr(map_data, "_MOST_ROWS", 80)  # five parcels x six layers x three pools are 90
+    data = page_data(sample_results())
+    assert [pool["pool"] for pool in data["pools"]] == ["all"]
+    assert data["pools_left_out"] is True
+
+
+def test_rows_of_parts_are_not_taken_for_plots():
+    sample = sample_results()
+    parts = sample.plots.assign(part="", density_t_c_ha=sample.plots["density_t_c_ha"])
+    trees = parts[parts["pool"] == "above_ground"].assign(part="trees", density_t_c_ha=1.0)
+    plots = pd.concat([trees, parts], ignore_index=True)
+    assert page_data(dataclasses.replace(sample, plots=plots))["pools"] == page_data(sample)["pools"]
+
+
+def test_names_stand_inside_their_parcels():
+    import geopandas as gpd
+
+    results = sample_results()
+    places = [row[4] for row in page_data(results)["parcels"]]
+    points = gpd.GeoSeries.from_xy([at[1] for at in places], [at[0] for at in places], crs="EPSG:4326")
+    assert points.to_crs(results.crs).within(results.parcels.geometry, align=False).all()
 
 
 def test_nothing_to_draw_is_said():
@@ -157,8 +202,6 @@ def test_nothing_to_draw_is_said():
 
 def test_page_weight_per_parcel():
     # 200 copies of the five parcels, each outline of some tens of points: the page must grow by well under 4 kB each.
-    import pandas as pd
-
     sample = sample_results()
     base = len(map_page(sample))
     parts = [(sample.parcels, sample.stocks, sample.change)]

@@ -7,16 +7,14 @@ import io
 from pathlib import Path
 
 import numpy as np
-import pandas as pd
 import pytest
 from publish_sample import HOSTILE, sample_results
 from rich.console import Console
 
 from landcarbon.errors import UserError
 from landcarbon.publish.figures import MINUS, decimals_for, figure, interval
-from landcarbon.publish.terminal import StepStatus, print_check, print_equations, print_results, print_trace
+from landcarbon.publish.terminal import StepStatus, print_check, print_results
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
-from landcarbon.trace import Trace
 
 
 def shown(printer, *args, **options) -> str:
@@ -111,28 +109,24 @@ def test_check():
     assert "No findings" in shown(print_check, empty)
 
 
-def test_trace():
+def test_plots_that_do_not_vary_give_no_interval():
     sample = sample_results()
-    row = sample.stocks.query("by == 'parcel' and unit == 'North bank' and survey == '2024' and pool == 'all'").iloc[0]
-    plots = sample.plots.query("survey == '2024' and pool == 'all'").head(3).assign(date=pd.NaT, stratum="oak")
-    trees = pd.DataFrame(
-        {
-            "file": ["trees.csv"], "row": [7], "plot": ["P1"], "tree": ["12"], "species": ["QR"],
-            "scientific_name": ["Quercus robur"], "dbh_cm": [31.0], "equation": ["some equation"],
-            "carbon_kg": [310.5], "density_t_c_ha": [6.2],
-        }
-    )  # fmt: skip
-    aside = sample.findings[~sample.findings["used"]]
-    text = shown(print_trace, Trace(row, plots, trees, aside), 10)
-    for part in ("North bank", "131 t C/ha, SE 10", "trees.csv 7", "Quercus robur", "set aside: 2", "Trees: 1 counted"):
-        assert part in text, part
+    flat = sample.stocks["pool"].eq("below_ground")
+    zero = {name: sample.stocks[name].mask(flat, 0.0) for name in ("density_t_c_ha", "density_se", "density_low")}
+    zero |= {name: sample.stocks[name].mask(flat, 0.0) for name in ("density_high", "stock_t_c", "stock_se")}
+    text = shown(print_results, dataclasses.replace(sample, stocks=sample.stocks.assign(**zero)))
+    line = next(line for line in text.splitlines() if "2014" in line and "below-ground" in line)
+    assert "0.0 to 0.0" not in text
+    assert " \u2013 " in line
+    assert "no interval: no variation between plots" in text
+    assert "no variation" not in shown(print_results, sample)
 
 
-def test_equations():
-    columns = ["equation_id", "taxon", "component", "region", "dbh_min_cm", "dbh_max_cm", "n_trees", "known"]
-    rows = pd.DataFrame([["one", "Quercus", "agb", "europe", 5.0, np.nan, 120, "read"]] * 70, columns=columns)
-    assert "and 10 more" in shown(print_equations, rows)
-    assert "No equation matches" in shown(print_equations, rows.iloc[:0])
+def test_no_parcels_is_said():
+    sample = sample_results()
+    stocks, change = (frame[frame["by"] != "parcel"] for frame in (sample.stocks, sample.change))
+    text = shown(print_results, dataclasses.replace(sample, stocks=stocks, change=change), by="parcel")
+    assert "There are no parcels in these results" in text
 
 
 def test_status_is_silent_where_nobody_watches():

@@ -175,14 +175,32 @@ class TestCells:
     def test_blank_status_has_to_be_explained(self, tmp_path: Path):
         blank = TREES.replace("dead", "")
         assert read(tmp_path, trees_csv=blank).trees["used"].tolist() == [True, False, True]
-        text = settings_text(more='[status]\n"" = "absent"')
+        text = settings_text(more='[status]\n"" = "absent"\nlive = "live"')
         inputs = read(tmp_path, text, trees_csv=blank)
         assert inputs.trees["status"].tolist() == ["live", "absent", "live"]
 
     def test_status_codes_of_the_user(self, tmp_path: Path):
         text = settings_text(more='[status]\nG = "absent"\ng = "dead"\nL = "live"')
         trees = "plot,species,dbh,status\n0101,a,1,G\n0101,a,1,g\n0101,a,1,l\n0101,a,1,DEAD\n"
-        assert read(tmp_path, text, trees_csv=trees).trees["status"].tolist() == ["absent", "dead", "live", "dead"]
+        inputs = read(tmp_path, text, trees_csv=trees)
+        assert inputs.trees["used"].tolist() == [True, True, True, False]
+        assert inputs.trees["status"].tolist()[:3] == ["absent", "dead", "live"]
+        # a table replaces the codes understood without one
+        assert inputs.findings.set_index("rule").loc["unknown status", "value"] == "DEAD"
+        assert "status codes understood" not in rules(inputs)
+
+    def test_status_codes_without_a_table_are_told(self, tmp_path: Path):
+        trees = "plot,species,dbh,status\n0101,a,1,A\n0101,a,1,2\n0101,a,1,a\n0101,a,1,gone\n0101,a,1,?\n"
+        inputs = read(tmp_path, trees_csv=trees)
+        assert inputs.trees["status"].tolist()[:4] == ["live", "dead", "live", "absent"]
+        told = inputs.findings.set_index("rule").loc["status codes understood"]
+        assert told["severity"] == "note"
+        assert "'A' (1 rows), 'a' (1 rows) as live; '2' (1 rows) as dead; 'gone' (1 rows) as absent." in told["message"]
+        assert "'?'" not in told["message"]
+
+    def test_no_status_column_needs_no_word(self, tmp_path: Path):
+        inputs = read(tmp_path, trees_csv="plot,species,dbh\n0101,oak,5\n")
+        assert "status codes understood" not in rules(inputs)
 
     def test_no_status_column_means_live(self, tmp_path: Path):
         assert read(tmp_path, trees_csv="plot,species,dbh\n0101,oak,5\n").trees["status"].tolist() == ["live"]
@@ -228,6 +246,62 @@ class TestCells:
         assert inputs.findings.set_index("rule").loc["not readable", "message"].startswith("The cell under {dbh} holds")
 
 
+DAYS = ("2014-06-01", "2014-06-02", "2014-06-03", "2014-06-14", "2014-06-15")
+
+
+def dated(days: tuple[str, ...], head: str = "plot,species,dbh,date") -> str:
+    return head + "\n" + "".join(f"0101,oak,5,{day}\n" for day in days)
+
+
+class TestMostlyUnreadable:
+    def test_wrong_pattern_of_dates(self, tmp_path: Path):
+        text = settings_text(more='[dates]\nformat = "%d.%m.%Y"')
+        days = tuple(f"{day:02d}/06/2014" for day in range(1, 11))
+        message = (
+            r"trees\.csv: 10 of 10 cells under 'date' \(for date\) hold no date in the form expected, such as "
+            r"'01/06/2014' on line 2 and '02/06/2014' on line 3\. Dates were expected as '%d\.%m\.%Y'"
+        )
+        refused(tmp_path, message, text, trees_csv=dated(days))
+
+    def test_no_pattern_of_dates(self, tmp_path: Path):
+        days = tuple(f"{day}.6.2014" for day in range(1, 8))
+        refused(tmp_path, r"year-month-day: give format under \[dates\]", trees_csv=dated(days))
+
+    def test_day_and_month_exchanged(self, tmp_path: Path):
+        """By the calendar: of the days of June, 18 of 30 are no months."""
+        text = settings_text(more='[dates]\nformat = "%m/%d/%Y"')
+        days = tuple(f"{day}/6/2014" for day in range(1, 31))
+        refused(tmp_path, "18 of 30 cells under 'date'", text, trees_csv=dated(days))
+
+    def test_blank_cells_do_not_count(self, tmp_path: Path):
+        refused(tmp_path, "5 of 6 cells", trees_csv=dated(("", "NA", "-", "", "a", "b", "c", "d", "e", DAYS[0])))
+
+    def test_few_unreadable_cells_are_findings(self, tmp_path: Path):
+        inputs = read(tmp_path, trees_csv=dated(("a", "b", "c", "d")))
+        assert (inputs.findings["rule"] == "not readable and left blank").sum() == 4
+        inputs = read(tmp_path, trees_csv=dated((*DAYS, *DAYS, "a", "b", "c", "d", "e")))
+        assert (inputs.findings["rule"] == "not readable and left blank").sum() == 5
+
+    def test_diameters(self, tmp_path: Path):
+        trees = "plot,species,dbh\n" + "".join(f"0101,oak,{size} cm\n" for size in range(10, 16))
+        message = r"6 of 6 cells under 'dbh' \(for dbh\) hold no number, such as '10 cm' on line 2.*without units"
+        refused(tmp_path, message, trees_csv=trees)
+
+    def test_a_column_that_may_be_blank_is_not_refused(self, tmp_path: Path):
+        trees = "plot,species,dbh,height\n" + "".join(f"0101,oak,{size},tall\n" for size in range(10, 16))
+        assert read(tmp_path, trees_csv=trees).trees["used"].all()
+
+    def test_coordinates_in_degrees_and_minutes(self, tmp_path: Path):
+        text = settings_text(plots='file = "plots.csv"\ndesign = { kind = "census", area_ha = 1 }')
+        plots = "plot,lon,lat\n" + "".join(f"010{n},9.1,47 51 {n}N\n" for n in range(6))
+        refused(tmp_path, r"6 of 6 cells under 'lat'.*right column under \[columns\.plots\]", text, plots_csv=plots)
+
+    def test_yes_and_no_in_another_language(self, tmp_path: Path):
+        text = settings_text(surveys='[surveys.2014]\ntrees = "trees.csv"\nvisits = "visits.csv"')
+        visits = "plot,visited\n" + "".join(f"010{n},ja\n" for n in range(6))
+        refused(tmp_path, r"'visited' \(for visited\) hold no yes or no.*Write yes or no", text, visits_csv=visits)
+
+
 class TestPlots:
     def test_plot_twice(self, tmp_path: Path):
         plots = PLOTS + "0101,400020,5600010\n"
@@ -246,7 +320,16 @@ class TestPlots:
     def test_coordinates_missing_or_no_numbers(self, tmp_path: Path):
         inputs = read(tmp_path, plots_csv="plot,x,y\n0101,,5600010\n0102,east,5600010\n0103,400000,5600000\n")
         assert inputs.plots["lon"].notna().tolist() == [False, False, True]
-        assert inputs.findings.set_index("rule").loc["not readable and left blank", "value"] == "east"
+        found = inputs.findings.set_index("rule").loc["coordinate not readable"]
+        assert (found["value"], found["plot"], found["row"]) == ("east", "0102", 3)
+        assert found["message"].startswith("The cell under x holds no number, so the coordinate could not be read")
+        assert "not readable and left blank" not in rules(inputs)
+
+    def test_a_coordinate_that_is_not_used_may_hold_anything(self, tmp_path: Path):
+        plots = "plot,x,y,lon,lat\n" + "".join(f"010{n},40001{n},5600010,?,?\n" for n in range(8))
+        inputs = read(tmp_path, plots_csv=plots)
+        assert inputs.plots["lon"].notna().all()
+        assert set(rules(inputs, "plots")) == {"not readable and left blank"}
 
     def test_no_coordinate_system(self, tmp_path: Path):
         text = settings_text(plots='file = "plots.csv"\ndesign = { kind = "census", area_ha = 1 }')
@@ -263,7 +346,27 @@ class TestPlots:
         inputs = read(tmp_path, plots_csv="plot,x,y\n0101,5600010,400010\n0102,400110,5600010\n0103,400030,5600050\n")
         found = inputs.findings[inputs.findings["rule"] == "implausible location"]
         assert found["plot"].tolist() == ["0101"]
-        assert "swapped" in found["remedy"].iloc[0]
+        assert "exchanged" in found["remedy"].iloc[0]
+        assert (
+            "the area for which ETRS89 / UTM zone 32N (the system of its coordinates) is made"
+            in (found["message"].iloc[0])
+        )
+
+    def test_the_system_at_fault_is_named(self, tmp_path: Path):
+        """EPSG register: EPSG:32618 is for 78 to 72 degrees west; EPSG:4326 is for the whole world."""
+        text = settings_text(
+            plots='file = "plots.csv"\ndesign = { kind = "census", area_ha = 1 }',
+            head='[inventory]\nname = "Tarn Side"\ncrs = "EPSG:32618"',
+        )
+        inputs = read(tmp_path, text, plots_csv="plot,lon,lat\n0101,72.5,42.5\n0102,-72.5,42.5\n0103,42.5,-172.5\n")
+        found = inputs.findings[inputs.findings["rule"] == "implausible location"]
+        assert found["plot"].tolist() == ["0101", "0103"]
+        assert (
+            "far outside the area for which WGS 84 / UTM zone 18N (the system of the results) is made"
+            in (found["message"].iloc[0])
+        )
+        assert "nowhere on earth" in found["message"].iloc[1]
+        assert "sign of the longitude" in found["remedy"].iloc[0]
 
     def test_census_without_any_area(self, tmp_path: Path):
         plots = 'file = "plots.csv"\ncrs = "EPSG:25832"\ndesign = { kind = "census" }'

@@ -134,6 +134,19 @@ def test_sign_of_a_sheet_in_a_file_name(tmp_path: Path):
     assert read(tmp_path, text).files["file"].tolist() == ["plots.csv", "plot #1.csv"]
 
 
+def test_sheet_stands_in_a_column_of_its_own(tmp_path: Path):
+    """Independent: SHA-256 of the standard library over the workbook written here."""
+    import hashlib
+
+    data = workbook(TREES)
+    inputs = read_as(tmp_path, "trees.xlsx#Trees", data)
+    row = inputs.files.set_index("file").loc["trees.xlsx"]
+    assert (row["sheet"], row["sha256"]) == ("Trees", hashlib.sha256(data).hexdigest())
+    assert inputs.files["sheet"].tolist() == ["", "Trees"]
+    # a finding points at the sheet
+    assert set(inputs.trees["file"]) == {"trees.xlsx#Trees"}
+
+
 def test_missing_sheet(tmp_path: Path):
     with pytest.raises(InputFileError, match=r"no sheet 'Tree'.*Sheets: Notes, Trees\. Did you mean 'Trees'\?"):
         read_as(tmp_path, "trees.xlsx#Tree", workbook(TREES))

@@ -39,6 +39,8 @@ species = {{ species = "sp", scientific_name = "Latin" }}
 [units.trees]
 dbh = "mm"
 [status]
+A = "live"
+D = "dead"
 G = "absent"
 P = "absent"
 [species]

@@ -407,7 +407,11 @@ class TestSurveys:
         )
         inputs = read(tmp_path, settings_text(surveys=surveys, more=self.SHARED), trees_csv=self.TREES, stumps_csv=text)
         assert inputs.samples["stumps"]["survey"].tolist() == ["2014", "2024", "", ""]
-        assert finding(inputs, "date outside surveys")["row"].tolist() == [4, 5]
+        assert finding(inputs, "date outside surveys")["row"].tolist() == [4]
+        # a date that cannot be read is told once, as that
+        unreadable = finding(inputs, "not readable")
+        assert unreadable[["row", "value", "table"]].to_numpy().tolist() == [[5, "June", "stumps"]]
+        assert "not readable and left blank" not in rules(inputs)
         assert accounted(inputs)
 
     def test_no_way_to_tell(self, tmp_path: Path):
@@ -541,7 +545,7 @@ class TestNeeded:
             ("litter", "plot,fresh\n0101,1\n", r"frame_area_m2 under \[litter\]"),
             ("ground_vegetation", "plot,dry\n0101,1\n", r"frame_area_m2 under \[ground_vegetation\]"),
             ("saplings", "plot,species,dbh,area\n0101,oak,1,400\n", r"area_m2 under \[saplings\]"),
-            ("soil", "plot,top,bottom,bulk_density\n0101,0,1,1\n", "or give organic_matter"),
+            ("soil", "plot,top,bottom,bulk_density\n0101,0,1,1\n", "or give organic_matter or total_carbon"),
             ("soil", "plot,top,bottom,organic_matter\n0101,0,1,0.1\n", r"organic_matter_per_carbon under \[soil\]"),
         ],
     )
@@ -552,6 +556,91 @@ class TestNeeded:
             SettingsError, match=rf"inventory\.toml, columns\.{table}\..*{table}\.csv does not tell.*{told}"
         ):
             read(tmp_path, with_file(table, more), **{f"{table}_csv": text})
+
+    POOLS = (
+        '[pools]\nabove_ground = { how = "measured", parts = ["trees", "saplings", "ground_vegetation"] }\n'
+        'dead_wood = "measured"\nlitter = "measured"\nsoil = "measured"\n'
+        '[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n'
+        "[litter]\nframe_area_m2 = 1\n[ground_vegetation]\nframe_area_m2 = 1\n[saplings]\narea_m2 = 10\n"
+    )
+
+    def every_table(self, table: str, text: str, more: str = "") -> tuple[str, dict[str, str]]:
+        """Settings that count every pool, one table of which is the one to be tried."""
+        sound = {
+            "pieces": "plot,line,diameter\n0101,N,12\n",
+            "lines": "plot,line,length\n0101,N,20\n",
+            "logs": "plot,length,middle\n0101,3,20\n",
+            "stumps": "plot,diameter,height\n0101,30,0.3\n",
+            "litter": "plot,dry\n0101,1\n",
+            "ground_vegetation": "plot,dry\n0101,1\n",
+            "saplings": "plot,species,dbh\n0101,oak,2\n",
+            "soil": "plot,top,bottom,bulk_density,organic_carbon\n0101,0,30,1,0.02\n",
+        }
+        files = {**sound, table: text}
+        surveys = '[surveys.2014]\ntrees = "trees.csv"\n' + "".join(f'{name} = "{name}.csv"\n' for name in files)
+        pools = self.POOLS
+        for line in more.splitlines():
+            section, _, key = line.partition(":")
+            pools += key if section not in pools else ""
+            pools = pools.replace(f"{section}\n", f"{section}\n{key}\n") if section in pools else pools
+        return settings_text(surveys=surveys, more=pools), {f"{name}_csv": text for name, text in files.items()}
+
+    @pytest.mark.parametrize(
+        ("table", "text", "more", "told"),
+        [
+            ("lines", "plot,line\n0101,N\n", "", r"how long the lines are.*line_m under \[dead_wood\]"),
+            ("pieces", "plot,line,count\n0101,N,2\n", "", "how thick the pieces counted are.*or give size_class"),
+            ("logs", "plot,length\n0101,2\n", "", "any diameter of the logs.*or give large and small"),
+            ("litter", "plot,layer\n0101,duff\n", "", "the mass of the samples.*or give fresh with sub_fresh"),
+            ("litter", "plot,depth\n0101,5\n", "", "the mass of the samples"),
+            ("litter", "plot,fresh,sub_dry\n0101,5,1\n", "", "how much of the fresh mass is dry.*or dry_share under"),
+            ("ground_vegetation", "plot,fresh\n0101,5\n", "", r"dry_share under \[ground_vegetation\]"),
+            ("saplings", "plot,species,count\n0101,oak,5\n", "", "how large the stems are"),
+            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", "", "the bulk density.*or give pedotransfer"),
+        ],
+    )
+    def test_counted_tables_hold_what_their_pool_needs(self, tmp_path: Path, table, text, more, told):
+        text, files = self.every_table(table, text, more)
+        with pytest.raises(SettingsError, match=rf"columns\.{table}\..*{table}\.csv does not tell {told}"):
+            read(tmp_path, text, **files)
+
+    @pytest.mark.parametrize(
+        ("table", "text", "more"),
+        [
+            ("litter", "plot,depth,bulk_density\n0101,5,0.1\n", ""),
+            ("litter", "plot,depth\n0101,5\n", '[litter]:forest_floor = "pine"'),
+            ("litter", "plot,depth\n0101,5\n", "[litter]:bulk_densities = { litter = 0.1 }"),
+            ("litter", "plot,fresh\n0101,5\n", "[litter]:dry_share = 0.4"),
+            ("litter", "plot,fresh,sub_fresh,sub_dry\n0101,5,10,4\n", ""),
+            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", '[soil]:pedotransfer = "saini1966"'),
+        ],
+    )
+    def test_settings_may_stand_for_a_column(self, tmp_path: Path, table, text, more):
+        text, files = self.every_table(table, text, more)
+        assert read(tmp_path, text, **files).samples[table]["used"].all()
+
+    @pytest.mark.parametrize(
+        ("table", "text", "column"),
+        [
+            ("soil", "plot,bottom,bulk_density,organic_carbon\n0101,30,1,0.1\n", "top"),
+            ("soil", "plot,top,bulk_density,organic_carbon\n0101,0,1,0.1\n", "bottom"),
+            ("stumps", "plot,diameter\n0101,30\n", "height"),
+            ("stumps", "plot,height\n0101,0.3\n", "diameter"),
+            ("logs", "plot,middle\n0101,30\n", "length"),
+        ],
+    )
+    def test_columns_nothing_can_stand_for(self, tmp_path: Path, table, text, column):
+        match = rf"^{table}\.csv: no column '{column}'.*under \[columns\.{table}\]"
+        with pytest.raises(InputFileError, match=match):
+            read(tmp_path, with_file(table), **{f"{table}_csv": text})
+
+    def test_mostly_unreadable_figures_are_refused(self, tmp_path: Path):
+        text = "plot,diameter,height\n" + "".join(f"0101,3{n} cm,0.3\n" for n in range(6))
+        match = (
+            r"^stumps\.csv: 6 of 6 cells under 'diameter' \(for diameter\) hold no number, such as '30 cm' on line 2"
+        )
+        with pytest.raises(InputFileError, match=match):
+            read(tmp_path, with_file("stumps"), stumps_csv=text)
 
     def test_no_plot_column(self, tmp_path: Path):
         with pytest.raises(UserError, match=r"soil\.csv: no column 'plot'.*under \[columns\.soil\]"):

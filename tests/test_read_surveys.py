@@ -59,6 +59,16 @@ class TestSurveys:
             "",
         ]
 
+    def test_unreadable_date_is_told_once(self, tmp_path: Path):
+        trees = "plot,species,dbh,date\n0101,oak,10,2014-06-01\n0101,oak,10,June\n0101,oak,10,\n"
+        inputs = read(tmp_path, settings_text(surveys=WINDOWS, more=LONG_FILE), trees_csv=trees)
+        assert inputs.trees["used"].tolist() == [True, False, False]
+        found = inputs.findings[~inputs.findings["used"]]
+        assert found[["rule", "row", "value"]].to_numpy().tolist() == [
+            ["date outside surveys", 4, ""],
+            ["not readable", 3, "June"],
+        ]
+
     def test_no_way_to_tell(self, tmp_path: Path):
         trees = "plot,species,dbh,date\n0101,oak,10,2014-06-01\n"
         with pytest.raises(InputFileError, match="nothing tells which row belongs to 2024"):
@@ -247,10 +257,12 @@ class TestVisits:
         text = settings_text(
             surveys=WINDOWS, more=LONG_FILE + '\n[visits]\nfile = "visits.csv"\n[columns.trees]\nsurvey = ""'
         )
-        visits = "plot,date\n0101,2014-03-03\n0101,2024-03-03\n0101,2019-03-03\n"
+        visits = "plot,date\n0101,2014-03-03\n0101,2024-03-03\n0101,2019-03-03\n0102,March\n"
         inputs = read(tmp_path, text, trees_csv=LONG, visits_csv=visits)
         assert visit_of(inputs, "late", "0101")["date"] == pd.Timestamp("2024-03-03")
         assert inputs.findings.set_index("rule").loc["date of visit outside surveys", "value"] == "2019-03-03"
+        told = inputs.findings[inputs.findings["row"] == 5]
+        assert told[["rule", "table", "value"]].to_numpy().tolist() == [["not readable", "visits", "March"]]
 
 
 def test_species_table(tmp_path: Path):

@@ -352,8 +352,15 @@ class TestOutlines:
         assert "parcel without stratum" in rules(inputs)
 
     def test_no_parcel_at_all(self, tmp_path: Path):
-        with pytest.raises(InputFileError, match="the file holds no parcel"):
+        with pytest.raises(InputFileError, match=r"parcels\.gpkg: the file has no features, but parcels are wanted"):
             with_parcels(tmp_path, squares().iloc[:0])
+
+    def test_map_without_features(self, tmp_path: Path):
+        (tmp_path / "parcels.geojson").write_text('{"type": "FeatureCollection", "features": []}')
+        with pytest.raises(
+            InputFileError, match=r"^parcels\.geojson: the file has no features, but parcels are wanted"
+        ):
+            read(tmp_path, settings_text(more=PARCELS.format("parcels.geojson")))
 
 
 class TestPlotsInParcels:

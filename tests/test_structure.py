@@ -16,6 +16,7 @@ HEAVY = ("geopandas", "rasterio", "matplotlib", "folium", "pyogrio", "scipy", "s
 ROOMS = {
     "landcarbon.errors": 0,
     "landcarbon.constants": 0,
+    "landcarbon.columns": 0,
     "landcarbon.findings": 1,
     "landcarbon.factors": 1,
     "landcarbon.inputs": 1,
@@ -30,12 +31,13 @@ ROOMS = {
     "landcarbon.change": 8,
     "landcarbon.marks": 8,
     "landcarbon.publish": 9,
+    "landcarbon.statements": 10,
     "landcarbon.trace": 9,
-    "landcarbon.pipeline": 10,
-    "landcarbon.assemble": 11,
-    "landcarbon.api": 12,
-    "landcarbon.demo": 12,
-    "landcarbon.cli": 13,
+    "landcarbon.pipeline": 11,
+    "landcarbon.assemble": 12,
+    "landcarbon.api": 13,
+    "landcarbon.demo": 13,
+    "landcarbon.cli": 14,
 }
 
 

@@ -18,7 +18,7 @@ __all__ = ["plots_of_rows", "rows_left", "visits_of_rows"]
 
 
 def plots_of_rows(inputs: Inputs, settings: Settings) -> Outcome:
-    """Set aside rows whose plot is blank, unknown, or outside all parcels.
+    """Set aside rows whose plot is blank, unknown, outside all parcels, or in none for want of coordinates.
 
     Parameters
     ----------
@@ -38,9 +38,17 @@ def plots_of_rows(inputs: Inputs, settings: Settings) -> Outcome:
     at = positions(trees["plot"], plots["plot"])
     unknown = used & ~blank & (at < 0)
     outside = used & ~blank & (at >= 0)
+    placed = np.zeros(len(trees), dtype=bool)
     if len(plots):
         outside &= ~plots["inside"].to_numpy(dtype=bool)[at]
-    return _set_aside(trees, {"plot blank": blank, "plot unknown": unknown, "plot outside": outside})
+        placed = np.isfinite(plots[["x", "y"]].to_numpy(dtype=float)).all(axis=1)[at]
+    masks = {
+        "plot blank": blank,
+        "plot unknown": unknown,
+        "plot outside": outside & placed,
+        "plot without place": outside & ~placed,
+    }
+    return _set_aside(trees, masks)
 
 
 def visits_of_rows(inputs: Inputs, settings: Settings) -> Outcome:

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 __all__ = ["coordinates", "plot_doubles", "strata_of_plots", "too_few_plots", "unused_parcels"]
 
 _WHOLE = "(whole inventory)"
+_DEGREES = "EPSG:4326"
 
 
 def plot_doubles(inputs: Inputs, settings: Settings) -> Outcome:
@@ -56,12 +57,45 @@ def coordinates(inputs: Inputs, settings: Settings) -> Outcome:
     plots = inputs.plots
     place = plots[["x", "y"]].to_numpy(dtype=float)
     lost = ~np.isfinite(place).all(axis=1)
-    outside = ~plots["inside"].to_numpy(dtype=bool)
-    parts = [rule("plot outside parcels").found(plots[outside], value=_place_text(place[outside]))]
+    inside = plots["inside"].to_numpy(dtype=bool)
+    outside = ~inside & ~lost
+    parts = [
+        _many_outside(inputs, outside, int((~lost).sum())),
+        rule("plot outside parcels").found(plots[outside], value=_place_text(place[outside])),
+        rule("plot in no parcel").found(plots[~inside & lost]),
+    ]
     # an inventory that places no plot at all (stated strata, no map) needs no line per plot
     if not lost.all():
-        parts.append(rule("coordinates missing").found(plots[lost]))
+        parts.append(rule("coordinates missing").found(plots[inside & lost]))
     return Outcome(joined(parts))
+
+
+def _many_outside(inputs: Inputs, outside: np.ndarray, placed: int) -> pd.DataFrame:
+    """Tell once that so many plots lie outside that a slip common to all is likely."""
+    many = rule("many plots outside parcels")
+    count = int(outside.sum())
+    if count < many.limits["plots"] or count <= many.limits["share"] * placed:
+        return joined([])
+    words = {"count": count, "total": placed, "guess": _guess(inputs, outside)}
+    return many.found(fill=words, value=f"{count} of {placed} plots")
+
+
+def _guess(inputs: Inputs, outside: np.ndarray) -> str:
+    """Name the usual slip, if any, that undone brings most of the plots into the box around the parcels."""
+    if inputs.parcels is None or inputs.parcels.crs is None:
+        return ""
+    west, south, east, north = inputs.parcels.geometry.to_crs(_DEGREES).total_bounds
+    lon, lat = (inputs.plots.loc[outside, name].to_numpy(dtype=float) for name in ("lon", "lat"))
+    slips = {
+        "with the other sign of the longitude": (-lon, lat),
+        "with the other sign of the latitude": (lon, -lat),
+        "with longitude and latitude exchanged": (lat, lon),
+    }
+    for words, (x, y) in slips.items():
+        within = int(((x >= west) & (x <= east) & (y >= south) & (y <= north)).sum())
+        if 2 * within > len(lon):
+            return f" {words[0].upper()}{words[1:]} {within} of them would lie among the parcels."
+    return ""
 
 
 def strata_of_plots(inputs: Inputs, settings: Settings) -> Outcome:
@@ -103,9 +137,7 @@ def too_few_plots(inputs: Inputs, settings: Settings) -> Outcome:
     """
     few = rule("too few plots")
     counts, empty = _visited_plots(inputs, dict(getattr(settings.strata, "merge", None) or {}))
-    nobody = rule("no visit").found_each(
-        pd.DataFrame({"survey": empty}), [{"survey": survey} for survey in empty], value=np.array(empty, dtype=object)
-    )
+    nobody = joined(_no_visit(inputs, survey) for survey in empty)
     areas = inputs.strata.groupby("stratum")["area_ha"].sum(min_count=1)
     short = counts[counts["plots"] < few.limits["plots"]]
     names = short["stratum"].where(short["stratum"] != "", _WHOLE).to_numpy(dtype=object)
@@ -142,6 +174,14 @@ def unused_parcels(inputs: Inputs, settings: Settings) -> Outcome:
     words = [{"area": _area_text(area)} for area in unused["area_ha"].astype(float)]
     found = rule("parcel without plots").found_each(unused[[]], words, value=unused["parcel"].to_numpy(dtype=object))
     return Outcome(found)
+
+
+def _no_visit(inputs: Inputs, survey: str) -> pd.DataFrame:
+    """Tell a survey in which no plot was visited from one whose visited plots all lie outside."""
+    visits = inputs.visits
+    visited = visits["visited"].to_numpy(dtype=bool) & (visits["survey"] == survey).to_numpy(dtype=bool)
+    name = "no plot inside" if visited.any() else "no visit"
+    return rule(name).found(fill={"survey": survey, "count": int(visited.sum())}, survey=survey, value=survey)
 
 
 def _visited_plots(inputs: Inputs, merge: dict[str, str]) -> tuple[pd.DataFrame, list[str]]:

@@ -192,7 +192,7 @@ def _status(stems: Numbered) -> pd.DataFrame:
 
 
 def _vanished(stems: Numbered) -> pd.DataFrame:
-    """Count live trees without any row at the next visit of their plot."""
+    """Count live trees without any row at the next visit of their plot; file and row are those of the first."""
     key, order = stems.key, stems.order
     following = _next_visit(stems, step=1)
     present = np.zeros((int(key.max(initial=-1)) + 1, len(stems.inputs.surveys)), dtype=bool)
@@ -259,10 +259,17 @@ def _counted_by_plot(
             "until": until,
             "plot": rows["plot"].astype("object").to_numpy(),
             "tree": rows["tree"].astype("object").to_numpy(),
+            "file": rows["file"].astype("object").to_numpy(),
+            "row": rows["row"].to_numpy(),
         }
     )
-    groups = table.groupby(["since", "until", "plot"])["tree"].agg(["size", _some]).reset_index()
-    return rule(name).found_each(*_by_plot(inputs, groups), value=groups["_some"].to_numpy(dtype=object))
+    by_plot = table.groupby(["since", "until", "plot"])
+    groups = by_plot["tree"].agg(["size", _some]).join(by_plot[["file", "row"]].first()).reset_index()
+    found, words = _by_plot(inputs, groups)
+    words = [{**line, "some": some} for line, some in zip(words, groups["_some"], strict=True)]
+    found = found.assign(file=groups["file"].to_numpy(), row=groups["row"].to_numpy())
+    value = np.array([f"{count} tree{'s' if count > 1 else ''}" for count in groups["size"]], dtype=object)
+    return rule(name).found_each(found, words, value=value)
 
 
 def _by_plot(inputs: Inputs, groups: pd.DataFrame) -> tuple[pd.DataFrame, list[dict[str, object]]]:

@@ -107,7 +107,31 @@ def tally_limit(inputs: Inputs, settings: Settings) -> Outcome:
     limit = min(limits)
     live, dead = _standing(inputs.trees)
     below = (live | dead) & (inputs.trees["dbh_cm"].to_numpy(dtype=float) < limit)
-    return Outcome(rule("below tally limit").found(inputs.trees[below], fill={"limit": limit}), aside=below)
+    parts = [
+        rule("below tally limit").found(inputs.trees[below], fill={"limit": limit}),
+        _mostly_below(inputs, live, below, limit),
+    ]
+    return Outcome(joined(parts), aside=below)
+
+
+def _mostly_below(inputs: Inputs, live: np.ndarray, below: np.ndarray, limit: float) -> pd.DataFrame:
+    """Warn of surveys whose live trees mostly lie below the tally limit, as a wrong unit makes them."""
+    mostly = rule("mostly below tally limit")
+    table = pd.DataFrame(
+        {
+            "survey": inputs.trees["survey"].astype("object").to_numpy()[live],
+            "dbh_cm": inputs.trees["dbh_cm"].to_numpy(dtype=float)[live],
+            "below": below[live],
+        }
+    )
+    parts = []
+    for survey, rows in table.groupby("survey", sort=True):
+        count = int(rows["below"].sum())
+        if len(rows) >= mostly.limits["rows"] and count > mostly.limits["share"] * len(rows):
+            median = f"{rows['dbh_cm'].median():.3g}"
+            words = {"count": count, "total": len(rows), "survey": survey, "limit": limit, "median": median}
+            parts.append(mostly.found(fill=words, survey=str(survey), value=f"{median} cm"))
+    return joined(parts)
 
 
 def design_limits(design: Any) -> list[float]:

@@ -325,10 +325,11 @@ def _borrow(parts: _Parts, known: np.ndarray, fewest: np.ndarray, plan: Plan, me
         return _Borrowed(np.zeros_like(known), nothing, nothing, empty, empty)
     enough = fewest.max(axis=1) >= MIN_PLOTS
     share = np.zeros(len(cells.domain))
+    allowed = np.asarray(plan.allowed.any(axis=1, keepdims=True))
     for side, domain in zip(parts.sides, parts.domains, strict=True):
-        sample, some = side.sample, side.counted.any(axis=1, keepdims=True)
+        sample, some = side.sample, np.asarray(side.counted.any(axis=1, keepdims=True))
         visits = replace(sample, value=np.zeros_like(some, dtype=float), used=some)
-        seen = sample_means(visits, domain, cells, plan.area_ha, plan.allowed.any(axis=1, keepdims=True))
+        seen = sample_means(visits, domain, cells, plan.area_ha, allowed)
         size = group_sum(seen.size, seen.cell, len(cells.domain))
         share += np.nan_to_num(seen.weight * size)[:, 0] / len(parts.sides)
     weight = share[:, None] * plan.allowed[cells.stratum]

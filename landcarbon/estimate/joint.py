@@ -215,7 +215,9 @@ def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVar
     variance, df = (np.stack(arrays) for arrays in zip(*components, strict=True))
     most = np.bincount(cells.domain, weights=plots, minlength=cells.domains) - 1.0
     apart_domain = np.bincount(cells.domain, weights=apart, minlength=cells.domains) > 0
-    effective = np.where(apart_domain, _df_of_shared(variance, df, cells), _df_of_separate(variance, df, cells))
+    effective = _df_of_separate(variance, df, cells)
+    if apart_domain.any():
+        effective = np.where(apart_domain, _df_of_shared(variance, df, _overlaps(table, sets), cells), effective)
     return SumVariance(
         variance=np.bincount(cells.domain, weights=variance.sum(axis=0), minlength=cells.domains),
         df=np.minimum(effective, np.maximum(most, 1.0)),
@@ -224,24 +226,42 @@ def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVar
 
 
 def _df_of_separate(variance: np.ndarray, df: np.ndarray, cells: Cells) -> np.ndarray:
-    """Degrees of freedom by domain where the groups of a cell tell about different things; arrays by group and cell."""
+    """Degrees of freedom by domain where the groups of a cell count as independent; arrays by group and cell."""
     codes = np.tile(cells.domain, len(variance))
     return satterthwaite(variance.reshape(-1, 1), df.reshape(-1, 1), codes, cells.domains)[:, 0]
 
 
-def _df_of_shared(variance: np.ndarray, df: np.ndarray, cells: Cells) -> np.ndarray:
-    """Degrees of freedom by domain where groups of a cell know their variance from the same plots.
+def _df_of_shared(variance: np.ndarray, df: np.ndarray, overlap: np.ndarray, cells: Cells) -> np.ndarray:
+    """Degrees of freedom by domain where groups of a cell know their variance in part from the same plots.
 
-    The variances of the groups are taken as fully correlated, which is the smallest choice: in a cell
-    df = (sum V)^2 / (sum V / sqrt(df_V))^2.
+    The variances of two groups are taken to go together as far as their plots are the same: in a cell
+    df = (sum V)^2 / sum over pairs of groups (r V_1 V_2 / sqrt(df_1 df_2)), with r the plots shared by the root of the
+    product of their numbers. What is bounded goes with everything.
     """
     there = df > 0
-    total = np.where(there, variance, 0.0).sum(axis=0)
     with np.errstate(divide="ignore", invalid="ignore"):
-        spread = np.where(there, variance / total / np.sqrt(df), 0.0).sum(axis=0)
-        shared = np.where(total > 0, 1.0 / spread**2, np.where(there, df, np.inf).min(axis=0))
+        total = np.where(there, variance, 0.0).sum(axis=0)
+        share = np.where(there & (total > 0), variance / total / np.sqrt(df), 0.0)
+        told, rest = share[: len(overlap)], share[len(overlap) :].sum(axis=0)
+        square = rest * (2.0 * told.sum(axis=0) + rest)
+        for one, beside in zip(told, overlap, strict=True):
+            square += one * (beside[:, cells.stratum] * told).sum(axis=0)
+        shared = np.where(total > 0, 1.0 / square, np.where(there, df, np.inf).min(axis=0))
     shared = np.where(there.any(axis=0), shared, 0.0)
     return satterthwaite(total[:, None], shared[:, None], cells.domain, cells.domains)[:, 0]
+
+
+def _overlaps(table: Joint, sets: _Sets) -> np.ndarray:
+    """Compare sets by the plots of a stratum they share, over the root of the product of their numbers; (P, P, H)."""
+    strata = table.cells.strata
+    distinct, position = np.unique(sets.code, return_inverse=True)
+    held = np.bincount(position * strata + table.stratum, minlength=len(distinct) * strata)
+    held = held.reshape(len(distinct), strata).astype(float)
+    has = (distinct & sets.kept[:, None]) == sets.kept[:, None]
+    shared = np.stack([(one & has).astype(float) @ held for one in has]) if len(has) else np.zeros((0, 0, strata))
+    number = np.sqrt(np.einsum("pph->ph", shared))
+    product = number[:, None] * number[None]
+    return np.divide(shared, product, out=np.zeros_like(shared), where=product > 0)
 
 
 @dataclass(frozen=True)

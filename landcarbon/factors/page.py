@@ -88,9 +88,9 @@ def _roots() -> str:
     return (
         "## Roots\n\nThe model taken where `[pools] below_ground` names none, by region:\n\n"
         f"{_markdown(chosen)}\n"
-        "Models that may be named, by publication. A model for stands takes the shoot biomass of a hectare (t/ha of dry "
-        "matter) of a plot, one for trees that of a tree (kg); they are never mixed. `landcarbon equations root` lists "
-        "them, `landcarbon equations --id NAME` shows one with its coefficients and range.\n\n"
+        "Models that may be named, by publication. A model for stands takes the shoot biomass of a hectare (t/ha of "
+        "dry matter) of a plot, one for trees that of a tree (kg); they are never mixed. `landcarbon equations root` "
+        "lists them, `landcarbon equations --id NAME` shows one with its coefficients and range.\n\n"
         f"{_markdown(summed.reset_index().rename(columns={'source_key': 'publication'}))}"
     )
 
@@ -104,8 +104,8 @@ def _wood_density() -> str:
         known=("known", _distinct),
     )
     return (
-        "## Wood density\n\n`allometry/data/wood_density.csv` and the tables of the equations; g/cm3, oven-dry mass over "
-        "green volume. A name is looked up as species, genus, family, then region; a value under "
+        "## Wood density\n\n`allometry/data/wood_density.csv` and the tables of the equations; g/cm3, oven-dry mass "
+        "over green volume. A name is looked up as species, genus, family, then region; a value under "
         "`[equations.wood_density]` comes first.\n\n"
         f"{_markdown(table.reset_index().rename(columns={'source_key': 'publication'}))}"
     )

@@ -61,7 +61,8 @@ class AngleCountDesign(Section):
 
     kind: Literal["angle_count"] = Field(description="Trees counted by a fixed angle of sight")
     basal_area_factor: float = Field(gt=0, description="Basal area each counted tree stands for, per unit of land area")
-    unit: Literal["m2/ha", "ft2/ac"] = Field(default="m2/ha", description="Unit of basal_area_factor")
+    # No default: read in the wrong one of the two, every figure would be off by a factor of more than four.
+    unit: Literal["m2/ha", "ft2/ac"] = Field(description="Unit of basal_area_factor")
 
 
 class CensusDesign(Section):

@@ -10,7 +10,7 @@ from pydantic import ValidationError
 from landcarbon.errors import SettingsError
 from landcarbon.inventory.locate import Path, line_of
 from landcarbon.inventory.nearest import suggestion
-from landcarbon.inventory.reference import keys_below, places_of
+from landcarbon.inventory.reference import choices_of, keys_below, keys_of_kinds, places_of
 
 __all__ = ["Fault", "faults_of", "raise_faults"]
 
@@ -53,7 +53,7 @@ def faults_of(error: ValidationError, raw: dict[str, Any]) -> list[Fault]:
     found: dict[tuple[Path, str], Fault] = {}
     for detail in error.errors(include_url=False):
         path = _real_path(detail["loc"], raw)
-        fault = _fault(path, detail)
+        fault = _fault(path, detail, raw)
         # A choice of types gives one error for each; the first one is enough.
         found.setdefault((path, "" if detail["type"] in _WANTED else fault.what), fault)
     return list(found.values())
@@ -72,12 +72,12 @@ def _real_path(loc: tuple[str | int, ...], raw: Any) -> Path:
     return path
 
 
-def _fault(path: Path, detail: Any) -> Fault:
+def _fault(path: Path, detail: Any, raw: dict[str, Any]) -> Fault:
     kind, context, value = detail["type"], detail.get("ctx", {}), detail.get("input")
     if kind == "missing":
         return Fault(path, "this key is missing", _accepted_below(path))
     if kind == "extra_forbidden":
-        return Fault(path, "unknown key", _known_key(path))
+        return Fault(path, "unknown key", _known_key(path, raw))
     if kind == "literal_error":
         return Fault(path, f"{value!r} is not accepted", f"Accepted: {context['expected']}.")
     if kind == "union_tag_not_found":
@@ -97,7 +97,7 @@ def _shown(value: object) -> str:
 
 
 def _kinds() -> str:
-    return ", ".join(keys_below(("plots", "design"), kinds=True))
+    return ", ".join(keys_of_kinds())
 
 
 def _accepted_below(path: Path) -> str:
@@ -109,7 +109,8 @@ def _accepted_below(path: Path) -> str:
         return "Give a table [plots] with file and design."
     if path == ("surveys",):
         return "Give at least one survey, e.g. [surveys.2024] with trees = 'trees_2024.csv'."
-    return ""
+    choices = choices_of(path)
+    return f"Accepted: {choices}." if choices else ""
 
 
 def _regions() -> list[str]:
@@ -120,9 +121,17 @@ def _regions() -> list[str]:
     return list(get_args(Region))
 
 
-def _known_key(path: Path) -> str:
+def _known_key(path: Path, raw: dict[str, Any]) -> str:
     word = str(path[-1])
     known = keys_below(path[:-1])
+    if path[:-1] == ("plots", "design"):
+        kind = str(raw["plots"]["design"]["kind"])
+        of_kind = keys_of_kinds()
+        known = of_kind[kind]
+        owners = [repr(name) for name, keys in of_kind.items() if word in keys]
+        if owners:
+            takes = ", ".join(known) or "no further key"
+            return f"It belongs to kind {' or '.join(owners)}; kind {kind!r} takes {takes}."
     near = suggestion(word, known)
     if near:
         return near

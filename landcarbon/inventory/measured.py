@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from landcarbon.inventory.models import SAMPLE_TABLES, Settings
 
-__all__ = ["PART_TABLES", "chosen_parts", "measured_parts", "tables_given"]
+__all__ = ["PART_TABLES", "chosen_parts", "counted_tables", "measured_parts", "tables_given"]
 
 #: Parts a user may name for each pool, and the tables any one of which they need (none: the tree table).
 PART_TABLES: dict[str, dict[str, tuple[str, ...]]] = {
@@ -53,6 +53,15 @@ def chosen_parts(settings: Settings, pool: str) -> tuple[str, ...]:
     given = tables_given(settings)
     usual = _DEFAULTS.get(pool, tuple(known))
     return tuple(part for part in usual if not known[part] or set(known[part]) & set(given))
+
+
+def counted_tables(settings: Settings) -> set[str]:
+    """Return the sample tables whose contents enter a pool, were they given."""
+    found = {"lines"}
+    for pool, parts in PART_TABLES.items():
+        if getattr(settings.pools, pool).how == "measured":
+            found |= {table for part in chosen_parts(settings, pool) for table in parts[part]}
+    return found
 
 
 def measured_parts(settings: Settings) -> dict[str, tuple[str, ...]]:

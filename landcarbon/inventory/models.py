@@ -273,7 +273,10 @@ class Settings(Section):
         default={}, description="our column = unit of the figures in the file, per table, e.g. [units.trees]"
     )
     dates: Dates = Field(default_factory=Dates, description="How dates are written")
-    status: dict[str, StatusName] = Field(default={}, description="their code = 'live', 'dead' or 'absent'")
+    status: dict[str, StatusName] = Field(
+        default={},
+        description="their code = 'live', 'dead' or 'absent'; the table replaces the codes understood without it",
+    )
     species: Species = Field(default_factory=Species, description="Species codes")
     equations: Equations = Field(description="Choice of the biomass equations")
     heights: Heights = Field(default_factory=Heights, description="Heights not measured")

@@ -23,6 +23,8 @@ _HOW = {
 # The share of coarse fragments has to be known for these kinds of bulk density; the third has it inside.
 _WITH_COARSE = ("fine per fine volume", "whole per whole volume")
 
+_BOLE_ONLY = "3"  # status of dead mangroves beyond those with a share of the mass lost: nothing left but the bole
+
 
 def pool_faults(settings: Settings) -> list[Fault]:
     """Check how the pools are obtained against the tables and figures given.
@@ -37,6 +39,7 @@ def pool_faults(settings: Settings) -> list[Fault]:
         *_part_faults(settings),
         *_table_faults(settings),
         *_line_faults(settings),
+        *_class_faults(settings),
         *_soil_faults(settings),
     ]
 
@@ -111,6 +114,28 @@ def _line_faults(settings: Settings) -> list[Fault]:
             told = "Give a table of lines, or line_m under [dead_wood] if all lines are of one length."
             return [Fault(path, "nothing tells how long the lines are on which the pieces were found", told)]
     return []
+
+
+def _class_faults(settings: Settings) -> list[Fault]:
+    """Check that the decay class of rows without one is among the classes in use: of down wood, of standing trees."""
+    wood = settings.dead_wood
+    if wood.missing_class is None:
+        return []
+    from landcarbon.factors.dead_wood import decay_classes, status_loss
+
+    path: Path = ("dead_wood", "missing_class")
+    sets = {"class_density": list(wood.class_density)} if wood.class_density else {"down wood": decay_classes()}
+    if _measured(settings, "dead_wood") and "standing" in chosen_parts(settings, "dead_wood"):
+        statuses = [*status_loss(), _BOLE_ONLY]
+        standing = {"decay class": decay_classes(), "mangrove status": statuses}.get(wood.standing or "")
+        sets.update({"standing dead trees": standing} if standing else {})
+    faults = []
+    for name, known in sets.items():
+        if wood.missing_class not in known:
+            near = suggestion(wood.missing_class, known)
+            remedy = f"{near} Classes of {name}: {', '.join(known)}.".strip()
+            faults.append(Fault(path, f"{wood.missing_class!r} is not among the decay classes of {name}", remedy))
+    return faults[:1]
 
 
 def _soil_faults(settings: Settings) -> list[Fault]:

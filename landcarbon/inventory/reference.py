@@ -14,7 +14,7 @@ from landcarbon.inventory.base import Section
 from landcarbon.inventory.locate import Path
 from landcarbon.inventory.models import Settings
 
-__all__ = ["KeyInfo", "keys_below", "places_of", "settings_reference"]
+__all__ = ["KeyInfo", "choices_of", "keys_below", "keys_of_kinds", "places_of", "settings_reference"]
 
 
 @dataclass(frozen=True)
@@ -117,19 +117,32 @@ def _default(field: FieldInfo) -> str:
     return f'"{value}"' if isinstance(value, str) else str(value)
 
 
-def keys_below(path: Path, *, kinds: bool = False) -> list[str]:
-    """Return the keys known directly under a table of the project file, or the kinds of plot design.
+def keys_of_kinds() -> dict[str, list[str]]:
+    """Return the keys of the plot design by its kind, without ``kind`` itself."""
+    found: dict[str, list[str]] = {}
+    for row in settings_reference():
+        parts = row.key.split(".")
+        if row.only_for and parts[:-1] == ["plots", "design"]:
+            keys = found.setdefault(row.only_for, [])
+            keys += [parts[-1]] if parts[-1] != "kind" else []
+    return found
+
+
+def choices_of(path: Path) -> str:
+    """Return the words accepted for a key, as written in the file; blank if it takes no fixed words."""
+    dotted = ".".join(str(part) for part in path)
+    return next((row.kind for row in settings_reference() if row.key == dotted and row.kind.startswith('"')), "")
+
+
+def keys_below(path: Path) -> list[str]:
+    """Return the keys known directly under a table of the project file.
 
     Parameters
     ----------
     path : tuple
         Path of the table; names of the user's choice and numbers in lists may stand in it.
-    kinds : bool
-        Return the kinds of the plot design instead.
     """
     rows = settings_reference()
-    if kinds:
-        return list(dict.fromkeys(row.only_for for row in rows if row.only_for))
     names = tuple(str(part) for part in path if not isinstance(part, int))
     found = []
     for row in rows:

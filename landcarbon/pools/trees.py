@@ -14,6 +14,7 @@ import pandas as pd
 
 from allometry.catalogue import Catalogue
 from allometry.roots import tree_roots
+from landcarbon.columns import with_columns
 from landcarbon.factors.carbon import carbon_fraction
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.pools.standing_dead import StandingOptions, dead_biomass
@@ -176,18 +177,20 @@ def tree_biomass(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
         beyond = np.isfinite(dbh) & (evaluated != dbh)
     dead, absent = has_status(trees["status"], "dead"), has_status(trees["status"], "absent")
     nothing = absent | (dbh == 0.0)
-    biomass = np.where(nothing, 0.0, biomass)
-    fraction = np.where(dead, plan.dead_fraction[position], plan.live_fraction[position])
+    biomass[nothing] = 0.0
+    both = np.concatenate([plan.live_fraction, plan.dead_fraction])  # one look-up for live and dead
+    fraction = both[np.where(dead, position + len(plan.live_fraction), position)]
+    beyond[nothing] = False
     added = {
         "biomass_kg": biomass,
         "carbon_fraction": fraction,
         "carbon_kg": biomass * fraction,
-        "out_of_range": beyond & ~nothing,
+        "out_of_range": beyond,
     }
     if plan.tree_root_model:
         roots = tree_roots(plan.tree_root_model, biomass, dbh_cm=dbh, conifer=plan.conifer[position])
         added["root_kg"] = np.where(nothing | dead, 0.0, roots)
-    return trees.assign(**added)
+    return with_columns(trees, added)
 
 
 def dead_trees(trees: pd.DataFrame, plan: TreePlan, options: StandingOptions) -> tuple[pd.DataFrame, pd.DataFrame]:
@@ -227,7 +230,7 @@ def label_trees(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:
     """Add accepted name, equation, rung of the ladder and ``known`` mark: what each tree row rests on."""
     position = plan.positions(trees["species"])
     named = {"scientific_name": "accepted_name", "equation": "equation_id", "rung": "rung", "known": "known"}
-    return trees.assign(**{ours: _labels(plan.assignments[theirs], position) for ours, theirs in named.items()})
+    return with_columns(trees, {ours: _labels(plan.assignments[theirs], position) for ours, theirs in named.items()})
 
 
 def tree_findings(trees: pd.DataFrame, plan: TreePlan) -> tuple[pd.DataFrame, pd.DataFrame]:

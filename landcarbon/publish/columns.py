@@ -49,8 +49,8 @@ class Column:
 
 @cache
 def _rows() -> tuple[Column, ...]:
-    with resources.files("landcarbon.publish").joinpath("columns.csv").open(encoding="utf-8", newline="") as handle:
-        return tuple(Column(**row) for row in csv.DictReader(handle))
+    text = resources.files("landcarbon.publish").joinpath("columns.csv").read_text(encoding="utf-8")
+    return tuple(Column(**row) for row in csv.DictReader(text.splitlines()))
 
 
 def described_tables() -> list[str]:

@@ -111,16 +111,15 @@ def one_published(name: str) -> tuple[str, list[tuple[str, object]]]:
     """
     catalogue = load_catalogue()
     models, forms = root_models().set_index("model_id", drop=False), height_forms().set_index("form", drop=False)
-    known = {str(each): str(each) for each in (*catalogue.table["equation_id"], *models.index, *forms.index)}
-    name = (
-        name.strip() if name.strip() in known else {each.casefold(): each for each in known}.get(name.casefold(), name)
-    )
+    known = [str(each) for each in (*catalogue.table["equation_id"], *models.index, *forms.index)]
+    name = name.strip()
+    if name not in known:
+        name = {each.casefold(): each for each in known}.get(name.casefold(), name)
     if name in forms.index:
         return "form of height curve, fitted to the measured trees of an inventory", _facts(forms.loc[name].to_dict())
     if name in models.index:
-        return f"root model for {_level_words(str(models.loc[name, 'level']))}", _root_facts(
-            models.loc[name], catalogue
-        )
+        model = pd.Series(models.loc[name])
+        return f"root model for {_level_words(str(model['level']))}", _root_facts(model, catalogue)
     if name not in known:
         near = get_close_matches(name, known, n=3, cutoff=0.6)
         hint = f"Did you mean {' or '.join(near)}?" if near else "Search by part of a species, genus or publication."

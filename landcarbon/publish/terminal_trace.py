@@ -113,7 +113,7 @@ def _tree_table(trace: Trace, shown: pd.DataFrame) -> Table:
     rows, several = trace.trees, trace.trees["pool"].nunique() > 1
     by_stand = bool(rows["density_t_c_ha"].isna().all())
     left = len(rows) - len(shown)
-    title = f"Trees: {len(rows)} rows counted" + (f", the {len(shown)} largest shares" if left else "")
+    title = f"Trees: {len(rows)} rows counted" + (f", listed: the {len(shown)} with the largest share" if left else "")
     headings = [("file and line", "left"), ("plot", "left"), ("tree", "left"), ("species", "left")]
     headings += [("cm", "right"), ("m", "right"), ("height", "left"), ("equation", "left")]
     headings += [("pool", "left")] if several else []

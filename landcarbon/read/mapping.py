@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -16,13 +16,25 @@ from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.inventory.units import convert
 from landcarbon.read.cells import Parsed, as_category, as_date, as_flag, as_number, as_text, cell_text
+from landcarbon.read.limits import limit
 from landcarbon.read.notes import note
 from landcarbon.read.sheets import read_parquet, read_workbook
-from landcarbon.read.source import FileLog, Source
+from landcarbon.read.source import FileLog, Source, has_geometry
 from landcarbon.read.table import RawTable
 from landcarbon.read.text import read_text
 
-__all__ = ["Mapped", "class_column", "column_plan", "left_blank", "map_raw", "read_mapped", "specs_of", "wanted_in"]
+__all__ = [
+    "Mapped",
+    "class_column",
+    "column_plan",
+    "coordinates_used",
+    "left_blank",
+    "map_raw",
+    "not_readable",
+    "read_mapped",
+    "specs_of",
+    "wanted_in",
+]
 
 _REPEATING = frozenset({"survey", "plot", "subplot", "species", "status", "decay_class"})
 
@@ -196,7 +208,7 @@ def map_raw(raw: RawTable, table: str, source: Source, settings: Settings, log: 
     Raises
     ------
     InputFileError
-        If a column is missing or stands twice.
+        If a column is missing or stands twice, or one that matters is mostly unreadable.
     """
     plan = column_plan(table, raw.names, source, settings)
     twice = sorted(set(plan.values()) & raw.repeated)
@@ -215,7 +227,9 @@ def map_raw(raw: RawTable, table: str, source: Source, settings: Settings, log: 
         cells = raw.columns.get(plan.get(column, ""))
         parsed = _parse(cells, spec, settings.dates.format, comma_decimals=raw.comma_decimals, rows=len(raw))
         if isinstance(parsed, Parsed):
-            _note_bad(mapped, column, cells, parsed, raw.lines)
+            _note_bad(mapped, column, cells, parsed)
+            if _matters(spec, plan, source):
+                _refuse_unreadable(mapped, spec, parsed, settings.dates.format)
             unit = units.get("diameter" if column.startswith(class_column("")) else column, "")
             values = convert(parsed.values, unit, spec.unit) if spec.unit else parsed.values
             columns[spec.becomes] = values
@@ -276,12 +290,60 @@ def _blank(rows: int, *, category: bool) -> pd.Series:
     return pd.Series([""] * rows, dtype="str")
 
 
-def _note_bad(mapped: Mapped, column: str, cells: pa.Array | None, parsed: Parsed, lines: np.ndarray) -> None:
+def _note_bad(mapped: Mapped, column: str, cells: pa.Array | None, parsed: Parsed) -> None:
     if parsed.decimal_comma:
         mapped.findings.append(note("decimal comma", file=str(mapped.frame["file"].cat.categories[0]), column=column))
     places = np.flatnonzero(parsed.bad)
     if len(places) and cells is not None:
         mapped.bad[column] = pd.Series(cell_text(cells.take(pa.array(places))).to_pylist(), index=places, dtype="str")
+
+
+def coordinates_used(given: Collection[str], source: Source) -> tuple[str, ...]:
+    """Return the columns that place the plots: x and y go before lon and lat, and a geometry before both.
+
+    Parameters
+    ----------
+    given : collection of str
+        Which of our columns the file has.
+    source : Source
+        The file.
+    """
+    pairs = () if has_geometry(source) else (("x", "y"), ("lon", "lat"))
+    return next((pair for pair in pairs if set(pair) <= set(given)), ())
+
+
+def _matters(spec: ColumnSpec, given: Collection[str], source: Source) -> bool:
+    """Tell columns without which a table is lost: where they are mostly unreadable, the cause is not in the cells."""
+    placing = spec.table == "plots" and spec.column in coordinates_used(given, source)
+    return spec.needed or spec.essential or spec.kind in ("date", "flag") or placing
+
+
+def _refuse_unreadable(mapped: Mapped, spec: ColumnSpec, parsed: Parsed, pattern: str | None) -> None:
+    count = int(parsed.bad.sum())
+    filled = count + int((~parsed.bad & ~pd.isna(parsed.values)).sum())
+    if count < limit("unreadable", "cells") or count <= limit("unreadable", "share") * filled:
+        return
+    texts = mapped.bad[spec.column].drop_duplicates().iloc[:2]
+    lines = mapped.frame["row"].iloc[texts.index]
+    shown = " and ".join(f"{text!r} on line {line}" for text, line in zip(texts, lines, strict=True))
+    theirs = mapped.given[spec.column]
+    raise InputFileError(
+        f"{count} of {filled} cells under {theirs!r} (for {spec.column}) hold no {wanted_in(spec.column, spec.table)}, "
+        f"such as {shown}",
+        where=str(mapped.frame["file"].cat.categories[0]),
+        remedy=_way_out(spec, pattern),
+    )
+
+
+def _way_out(spec: ColumnSpec, pattern: str | None) -> str:
+    mapping = f"check that {spec.column} is the right column under [columns.{spec.table}]."
+    if spec.kind == "date" and pattern:
+        return f"Dates were expected as {pattern!r}: correct format under [dates], or {mapping}"
+    if spec.kind == "date":
+        return f"Dates were expected as year-month-day: give format under [dates], e.g. '%d.%m.%Y', or {mapping}"
+    if spec.kind == "flag":
+        return f"Write yes or no, or {mapping}"
+    return f"Write figures alone, without units or marks and with one decimal sign throughout, or {mapping}"
 
 
 def wanted_in(column: str, table: str) -> str:
@@ -291,7 +353,7 @@ def wanted_in(column: str, table: str) -> str:
     return {"date": "date in the form expected", "flag": "yes or no"}.get(kind, "number")
 
 
-def left_blank(mapped: Mapped, table: str) -> list[pd.DataFrame]:
+def left_blank(mapped: Mapped, table: str, told: Collection[str] = ()) -> list[pd.DataFrame]:
     """Tell the cells of a table that could not be read and are taken as blank.
 
     Parameters
@@ -300,15 +362,34 @@ def left_blank(mapped: Mapped, table: str) -> list[pd.DataFrame]:
         The table.
     table : str
         Its canonical name.
+    told : collection of str
+        Columns whose cells are told elsewhere.
     """
     return [
-        note(
-            "not readable and left blank",
-            mapped.frame.iloc[texts.index],
-            table=table,
-            column=column,
-            value=texts.to_numpy(dtype=object),
-            fill={"column": mapped.given[column], "wanted": wanted_in(column, table)},
-        )
-        for column, texts in mapped.bad.items()
+        not_readable("not readable and left blank", mapped, table, column)
+        for column in mapped.bad
+        if column not in told
     ]
+
+
+def not_readable(rule: str, mapped: Mapped, table: str, column: str) -> pd.DataFrame:
+    """Tell the cells of one column that could not be read.
+
+    Parameters
+    ----------
+    rule : str
+        What becomes of them.
+    mapped : Mapped
+        The table.
+    table, column : str
+        Its canonical name, and that of the column.
+    """
+    texts = mapped.bad[column]
+    return note(
+        rule,
+        mapped.frame.iloc[texts.index],
+        table=table,
+        column=column,
+        value=texts.to_numpy(dtype=object),
+        fill={"column": mapped.given[column], "wanted": wanted_in(column, table)},
+    )

@@ -6,7 +6,9 @@ from landcarbon.inventory.columns import table_columns, table_names
 from landcarbon.inventory.reference import KeyInfo, settings_reference
 from landcarbon.inventory.template import template_text
 from landcarbon.inventory.units import accepted_units
+from landcarbon.read.limits import limit
 from landcarbon.read.rules import read_rules
+from landcarbon.read.trees import STATUS_DEFAULTS
 
 __all__ = ["inventory_page"]
 
@@ -41,14 +43,18 @@ needs `crs`. Areas of parcels are worked out on the ellipsoid, never from degree
 
 ## What reading may find
 
-Findings of reading, apart from those of the checks afterwards. *used* says whether the row still counts.
+Findings of reading, apart from those of the checks afterwards. *used* says whether the row still counts. Where many
+cells of a column that matters hold something else than they should (dates, figures a row cannot do without,
+coordinates: {share:.0%} of the cells that are not blank, and at least {cells:g}), the run stops instead, as the cause
+then is the pattern of the dates, the decimal sign or the wrong column, not the cells.
 
 """
 
 
 def inventory_page() -> str:
     """Write the page ``docs/inventory-file.md``."""
-    parts = [_HEAD, "```toml\n", template_text(), "```\n", _keys(), _COLUMNS, _columns(), _FILES, _rules()]
+    files = _FILES.format(share=limit("unreadable", "share"), cells=limit("unreadable", "cells"))
+    parts = [_HEAD, "```toml\n", template_text(), "```\n", _keys(), _COLUMNS, _columns(), files, _rules()]
     return "".join(parts)
 
 
@@ -58,11 +64,25 @@ def _keys() -> str:
         groups.setdefault(row.key.split(".")[0], []).append(row)
     parts = []
     for section, rows in groups.items():
-        parts.append(f"\n## [{section}]\n\n{rows[0].meaning}.\n")
+        parts.append(f"\n## [{section}]\n\n{rows[0].meaning}.\n{_status() if section == 'status' else ''}")
         if len(rows) > 1:
             parts.append("\n| key | type | default | meaning |\n| --- | --- | --- | --- |\n")
             parts += [_key_line(row) for row in rows[1:]]
     return "".join(parts)
+
+
+def _status() -> str:
+    """Tell the codes understood without a table, and what a table does to them."""
+    known = "; ".join(
+        f"{', '.join(f'`{code}`' for code, meaning in STATUS_DEFAULTS.items() if meaning == name)} as {name}"
+        for name in dict.fromkeys(STATUS_DEFAULTS.values())
+    )
+    return (
+        f"\nWithout this table the codes understood are, upper and lower case being the same: {known}; a finding says "
+        "which of them were met. With it, only the codes it lists are known, and rows with another code are not "
+        'counted (finding "unknown status"). A blank cell is the code `""`. Without a status column every row is '
+        "live.\n"
+    )
 
 
 def _key_line(row: KeyInfo) -> str:

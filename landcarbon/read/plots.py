@@ -14,7 +14,7 @@ from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.read.crs import WGS84, is_metric, metric_crs, move_points, parse_crs, utm_for
 from landcarbon.read.limits import limit
-from landcarbon.read.mapping import Mapped, left_blank, map_raw, read_mapped
+from landcarbon.read.mapping import Mapped, coordinates_used, left_blank, map_raw, not_readable, read_mapped
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, Source, find_source, has_geometry
 
@@ -69,7 +69,11 @@ def read_plots(settings: Settings, parcels: ParcelTable | None, log: FileLog) ->
     """
     source = find_source(settings.plots.file, settings.folder, "plots", allow_outside=settings.inventory.allow_outside)
     mapped, crs = _read(source, settings, log)
-    findings = [*mapped.findings, *left_blank(mapped, "plots")]
+    placing = coordinates_used(mapped.given, source)
+    findings = [*mapped.findings, *left_blank(mapped, "plots", placing)]
+    findings += [
+        not_readable("coordinate not readable", mapped, "plots", name) for name in placing if name in mapped.bad
+    ]
     findings.append(note("ragged row of plots", mapped.frame[mapped.ragged]))
     table, repeats = _unique(mapped.frame, source.name)
     findings += repeats
@@ -178,19 +182,24 @@ def _moved(table: pd.DataFrame, crs: CRS | None, target: CRS | None) -> tuple[np
 
 
 def _far_out(table: pd.DataFrame, crs: CRS | None, target: CRS | None) -> list[pd.DataFrame]:
-    """Mark plots that lie where neither coordinate system is meant for."""
+    """Mark plots that lie where no place on earth is, or where one of the two coordinate systems is not meant for."""
     if crs is None:
         return []
     margin = limit("location", "area_of_use_margin_deg")
-    far = (table["lat"].abs() > 90) | (table["lon"].abs() > 180)
-    for system in (crs, target):
+    lon, lat = table["lon"].to_numpy(dtype="float64"), table["lat"].to_numpy(dtype="float64")
+    where = np.full(len(table), "", dtype=object)
+    where[(np.abs(lat) > 90) | (np.abs(lon) > 180)] = "nowhere on earth: latitudes end at 90, longitudes at 180 degrees"
+    systems = ((crs, "the system of its coordinates"), (target, "the system of the results"))
+    for system, role in systems:
         area = system.area_of_use if system is not None else None
-        if area is not None and area.west <= area.east:
-            far |= (table["lon"] < area.west - margin) | (table["lon"] > area.east + margin)
-            far |= (table["lat"] < area.south - margin) | (table["lat"] > area.north + margin)
-    rows = table[far]
-    value = [f"longitude {lon:.4f}, latitude {lat:.4f}" for lon, lat in zip(rows["lon"], rows["lat"], strict=True)]
-    return [note("implausible location", rows, value=value, fill={"crs": crs.name})]
+        if system is not None and area is not None and area.west <= area.east:
+            far = (lon < area.west - margin) | (lon > area.east + margin)
+            far |= (lat < area.south - margin) | (lat > area.north + margin)
+            where[far & (where == "")] = f"far outside the area for which {system.name} ({role}) is made"
+    rows = table[where != ""]
+    value = [f"longitude {x:.4f}, latitude {y:.4f}" for x, y in zip(rows["lon"], rows["lat"], strict=True)]
+    words = pd.DataFrame({"where": where[where != ""]})
+    return [note("implausible location", rows, value=value, fill=words)]
 
 
 def _place(table: pd.DataFrame, parcels: ParcelTable | None, settings: Settings) -> list[pd.DataFrame]:

@@ -8,13 +8,13 @@ from dataclasses import dataclass, field
 import numpy as np
 import pandas as pd
 
-from landcarbon.errors import SettingsError
 from landcarbon.inventory.columns import table_columns
-from landcarbon.inventory.measured import PART_TABLES, chosen_parts, tables_given
+from landcarbon.inventory.measured import PART_TABLES, counted_tables, tables_given
 from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.read.lines import LINE_KEY, derive_lines, settle_lines, untallied
-from landcarbon.read.mapping import Mapped, class_column, read_mapped, specs_of, wanted_in
+from landcarbon.read.mapping import Mapped, class_column, not_readable, read_mapped, specs_of, wanted_in
+from landcarbon.read.needs import refuse_lacking
 from landcarbon.read.notes import note
 from landcarbon.read.size_classes import long_pieces
 from landcarbon.read.source import FileLog, find_source
@@ -93,7 +93,7 @@ def read_samples(settings: Settings, plots: Sequence[str], log: FileLog) -> Samp
                 file, settings.folder, f"{table} {', '.join(served)}", allow_outside=settings.inventory.allow_outside
             )
             mapped = read_mapped(source, table, settings, log)
-            _needed_elsewhere(mapped, table, settings, source.name)
+            refuse_lacking(mapped.given, table, settings, source.name)
             reader = _FileRows(mapped, table, settings, served)
             rows = reader.rows(plots, start, source.name)
             parts.append(rows)
@@ -166,6 +166,8 @@ class _FileRows:
     def _surveys(self, file: str) -> None:
         found = assign_surveys(self.frame, self.mapped.given, self.settings, self.served, file=file, table=self.table)
         self.frame["survey"] = found.names
+        if found.rule == "date outside surveys" and "date" in self.mapped.bad:
+            self._unreadable("date", self.mapped.bad.pop("date"))  # so it is told once
         words = {"survey": self.served[0], "surveys": ", ".join(self.served), "table": self.table}
         self._aside(found.lost, found.rule, value=found.value, fill=words)
 
@@ -191,21 +193,20 @@ class _FileRows:
         """Judge the cells that could not be read, and figures of size classes below zero."""
         specs = specs_of(self.table, self.settings)
         for column, texts in self.mapped.bad.items():
-            words = {"column": self.mapped.given[column], "wanted": wanted_in(column, self.table)}
-            mask = np.zeros(len(self.frame), dtype=bool)
-            mask[texts.index] = True
-            value = texts.to_numpy(dtype=object)
             if specs[column].essential:
-                self._aside(mask, "not readable", column=column, value=value, fill=words)
+                self._unreadable(column, texts)
             else:
-                rows = self.frame[mask]
-                told = note(
-                    "not readable and left blank", rows, table=self.table, column=column, value=value, fill=words
-                )
+                told = not_readable("not readable and left blank", self.mapped, self.table, column)
                 self.findings.append(told)
         for name, mask in self.below_zero.items():
             value = self.frame.loc[mask, class_column(name)].map("{:g}".format).to_numpy(dtype=object)
             self._aside(mask, "size class below zero", column=name, value=value, fill={"size_class": name})
+
+    def _unreadable(self, column: str, texts: pd.Series) -> None:
+        mask = np.zeros(len(self.frame), dtype=bool)
+        mask[texts.index] = True
+        words = {"column": self.mapped.given[column], "wanted": wanted_in(column, self.table)}
+        self._aside(mask, "not readable", column=column, value=texts.to_numpy(dtype=object), fill=words)
 
     def _numbers(self) -> None:
         """Fill in what a blank means, and set aside rows without anything to work with."""
@@ -235,42 +236,11 @@ def _add_lines(tables: dict[str, pd.DataFrame], derived: list[pd.DataFrame], set
     tables[_LINES] = pd.concat([*parts, lines[columns]], ignore_index=True)
 
 
-def _needed_elsewhere(mapped: Mapped, table: str, settings: Settings, file: str) -> None:
-    """Refuse a table that lacks what the settings do not give either."""
-    given = set(mapped.given)
-    lacking: tuple[str, str, str] | None = None
-    if table in ("litter", "ground_vegetation"):
-        if "frame_area" not in given and getattr(settings, table).frame_area_m2 is None:
-            lacking = ("frame_area", "the area of the frames", f"frame_area_m2 under [{table}]")
-    elif table == "saplings":
-        if "area" not in given and settings.saplings.area_m2 is None:
-            lacking = ("area", "the area they were counted on", "area_m2 under [saplings]")
-    elif table == "soil":
-        lacking = _soil_lacks(given, settings)
-    if lacking:
-        column, what, otherwise = lacking
-        raise SettingsError(
-            f"{file} does not tell {what}",
-            where=f"{settings.path.name}, columns.{table}.{column}",
-            remedy=f"Map {column} under [columns.{table}], or give {otherwise}.",
-        )
-
-
-def _soil_lacks(given: set[str], settings: Settings) -> tuple[str, str, str] | None:
-    if not given & {"organic_carbon", "organic_matter", "total_carbon"}:
-        return "organic_carbon", "the carbon", "organic_matter or total_carbon there"
-    if not given & {"organic_carbon", "total_carbon"} and settings.soil.organic_matter_per_carbon is None:
-        return "organic_carbon", "the carbon, but only organic matter", "organic_matter_per_carbon under [soil]"
-    return None
-
-
 def _not_counted(settings: Settings) -> list[pd.DataFrame]:
     """Tell tables whose contents enter no pool."""
-    counted, homes = {_LINES}, {_LINES: "dead_wood"}
+    counted, homes = counted_tables(settings), {_LINES: "dead_wood"}
     for pool, parts in PART_TABLES.items():
         homes.update({table: pool for tables in parts.values() for table in tables})
-        if getattr(settings.pools, pool).how == "measured":
-            counted |= {table for part in chosen_parts(settings, pool) for table in parts[part]}
     found = []
     for table in tables_given(settings):
         if table not in counted:

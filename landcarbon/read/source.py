@@ -38,6 +38,11 @@ class Source:
     role: str
 
     @property
+    def file(self) -> str:
+        """Name without the part behind ``#``: that of the file on the disk."""
+        return self.name[: -len(self.part) - 1] if self.part else self.name
+
+    @property
     def suffix(self) -> str:
         """Ending that tells the kind of file, in lower case and without ``.gz``."""
         name = self.path.name.lower()
@@ -138,11 +143,12 @@ class FileLog:
     def add(self, source: Source, rows: int, *, columns: str = "", unused: str = "") -> None:
         """Note a file with the number of its rows, the columns used and those left aside."""
         for path in _members(source.path):
-            name = source.name if path == source.path else str(Path(source.name).with_name(path.name))
+            name = source.file if path == source.path else str(Path(source.file).with_name(path.name))
             data = path.read_bytes()
             self.rows.append(
                 {
                     "file": name,
+                    "sheet": source.part,
                     "sha256": hashlib.sha256(data).hexdigest(),
                     "bytes": len(data),
                     "rows": rows if path == source.path else 0,
@@ -154,7 +160,7 @@ class FileLog:
 
     def frame(self) -> pd.DataFrame:
         """Return the files as a table."""
-        names = ["file", "sha256", "bytes", "rows", "role", "columns", "unused"]
+        names = ["file", "sheet", "sha256", "bytes", "rows", "role", "columns", "unused"]
         frame = pd.DataFrame(self.rows, columns=names)
         return frame.astype({"bytes": "int64", "rows": "int64"})
 

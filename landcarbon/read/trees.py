@@ -20,7 +20,7 @@ __all__ = ["STATUS_DEFAULTS", "TreeRows", "read_trees"]
 
 STATUS_NAMES = ("live", "dead", "absent")
 
-# Codes understood without a [status] table (words of the trade and their initials; common practice, no source).
+# Codes understood if there is no [status] table (words of the trade and their initials; common practice, no source).
 STATUS_DEFAULTS = {
     "live": "live",
     "l": "live",
@@ -76,6 +76,7 @@ def read_trees(settings: Settings, log: FileLog) -> TreeRows:
     """
     parts: list[pd.DataFrame] = []
     findings: list[pd.DataFrame] = []
+    codes: list[dict[str, tuple[str, int]]] = []
     start = 0
     for file, served in files_of(settings, "trees").items():
         source = find_source(
@@ -85,7 +86,10 @@ def read_trees(settings: Settings, log: FileLog) -> TreeRows:
         reader = _FileRows(mapped, settings, served, start)
         parts.append(reader.rows())
         findings += [*mapped.findings, *reader.findings]
+        codes.append(reader.codes)
         start += len(mapped.frame)
+    if not settings.status:
+        findings += _understood(codes)
     return TreeRows(_joined(parts), findings)
 
 
@@ -97,6 +101,7 @@ class _FileRows:
         self.settings = settings
         self.served = served
         self.findings: list[pd.DataFrame] = []
+        self.codes: dict[str, tuple[str, int]] = {}
         self.frame = mapped.frame
         self.labels = self.frame["survey"]
         self.frame["row_id"] = np.arange(start, start + len(self.frame), dtype="int64")
@@ -169,6 +174,8 @@ class _FileRows:
         places = survey_by_date(self.frame["date"], self.settings, self.served, file)
         self._place(places)
         lost = places < 0
+        if "date" in self.mapped.bad:
+            lost[self.mapped.bad["date"].index] = False  # told once, as a date that cannot be read
         self._aside(lost, "date outside surveys", value=day_text(self.frame.loc[lost, "date"]))
 
     def _status(self) -> None:
@@ -178,6 +185,8 @@ class _FileRows:
             return
         levels = list(codes.cat.categories)
         names = [_status_name(level, dict(self.settings.status)) for level in levels]
+        counts = np.bincount(codes.cat.codes.to_numpy(), minlength=len(levels))
+        self.codes = {level: (name, int(n)) for level, name, n in zip(levels, names, counts, strict=True) if name}
         known = np.array([STATUS_NAMES.index(name) if name else -1 for name in names] + [-1], dtype="int8")
         places = known[codes.cat.codes.to_numpy()]
         unknown = places < 0
@@ -214,11 +223,26 @@ class _FileRows:
 
 
 def _status_name(code: str, given: dict[str, str]) -> str:
-    """Translate a code: as written in the settings, then case aside, then the defaults."""
+    """Translate a code: as written in the settings, then case aside; by the defaults if the settings have no table."""
     if code in given:
         return given[code]
-    folded = {key.casefold(): value for key, value in given.items()}
-    return folded.get(code.casefold()) or STATUS_DEFAULTS.get(code.casefold(), "")
+    folded = {key.casefold(): value for key, value in given.items()} if given else STATUS_DEFAULTS
+    return folded.get(code.casefold(), "")
+
+
+def _understood(codes: Sequence[dict[str, tuple[str, int]]]) -> list[pd.DataFrame]:
+    """Tell which status codes were taken for what without a word of the user's."""
+    rows: dict[tuple[str, str], int] = {}
+    for of_file in codes:
+        for code, (name, count) in of_file.items():
+            rows[name, code] = rows.get((name, code), 0) + count
+    if not rows:
+        return []
+    told = []
+    for name in STATUS_NAMES:
+        mine = [f"{code!r} ({count:,} rows)" for (meaning, code), count in sorted(rows.items()) if meaning == name]
+        told += [f"{', '.join(mine)} as {name}"] if mine else []
+    return [note("status codes understood", value=", ".join(code for _, code in rows), fill={"codes": "; ".join(told)})]
 
 
 def _status_category(places: np.ndarray) -> pd.Categorical:

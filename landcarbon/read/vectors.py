@@ -57,6 +57,10 @@ def read_vector(source: Source, *, layer: str | None = None, crs: str | None = N
     """
     _check_magic(source)
     frame = _read_parquet(source) if source.suffix in (".parquet", ".geoparquet") else _read_gdal(source, layer)
+    if not len(frame):
+        raise InputFileError(
+            f"the file has no features, but {source.role} are wanted", where=source.name, remedy="Is it the right file?"
+        )
     if not isinstance(frame, gpd.GeoDataFrame):
         raise InputFileError("the file holds no geometries", where=source.name)
     geometry = frame.geometry

@@ -10,7 +10,7 @@ import pandas as pd
 from landcarbon.errors import InputFileError
 from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
-from landcarbon.read.mapping import Mapped, left_blank, read_mapped
+from landcarbon.read.mapping import Mapped, left_blank, not_readable, read_mapped
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
 from landcarbon.read.surveys import files_of, label_year, survey_by_date, survey_by_label
@@ -64,7 +64,8 @@ def read_visits(settings: Settings, log: FileLog) -> VisitRows:
         mapped = read_mapped(source, "visits", settings, log)
         frame, more = _with_survey(mapped, settings, served, source.name)
         parts.append(frame)
-        findings += [*mapped.findings, *left_blank(mapped, "visits"), *more]
+        told = ("date",) if _by_date(mapped, served) else ()
+        findings += [*mapped.findings, *left_blank(mapped, "visits", told), *more]
         findings.append(note("ragged row of visits", mapped.frame[mapped.ragged]))
         surveys += served
     columns = ["survey", "plot", "date", "visited", "doubt", "share_inside", "slope_deg", "n_subplots", "file", "row"]
@@ -87,7 +88,7 @@ def _with_survey(
     elif len(served) == 1:
         names = pd.Series([served[0]] * len(frame), dtype="str")
         rule = "unknown survey of visit"
-    elif "date" in mapped.given:
+    elif _by_date(mapped, served):
         places = survey_by_date(frame["date"], settings, served, file)
         names = pd.Series(np.append(np.array(served, dtype=object), "")[places], dtype="str")
         rule = "date of visit outside surveys"
@@ -98,11 +99,21 @@ def _with_survey(
             remedy="Map one of them under [columns.visits].",
         )
     lost = names == ""
-    value = (frame["date"].dt.strftime("%Y-%m-%d").fillna("") if "date" in rule else frame["survey"])[lost]
-    rows = frame[lost].drop(columns="survey")
-    findings = [note(rule, rows, value=value.to_numpy(dtype=object), fill={"surveys": ", ".join(served)})]
+    findings = []
+    told = lost.copy()
+    if _by_date(mapped, served) and "date" in mapped.bad:
+        findings.append(not_readable("not readable", mapped, "visits", "date"))
+        told[mapped.bad["date"].index] = False
+    value = (frame["date"].dt.strftime("%Y-%m-%d").fillna("") if "date" in rule else frame["survey"])[told]
+    rows = frame[told].drop(columns="survey")
+    findings.append(note(rule, rows, value=value.to_numpy(dtype=object), fill={"surveys": ", ".join(served)}))
     frame["survey"] = names
     return frame[~lost], findings
+
+
+def _by_date(mapped: Mapped, served: list[str]) -> bool:
+    """Tell files whose rows belong to a survey by their date alone."""
+    return len(served) > 1 and "survey" not in mapped.given and "date" in mapped.given
 
 
 def _labels_fit(labels: pd.Series, settings: Settings) -> bool:

@@ -21,6 +21,7 @@ from million_trees import SPECIES, SURVEYS, make_tables, timed
 
 from allometry.assign import assign
 from allometry.catalogue import load_catalogue
+from landcarbon.columns import with_columns
 from landcarbon.plots import PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
 from landcarbon.pools.down_wood import DownWoodOptions, down_wood
 from landcarbon.pools.soil import soil
@@ -61,7 +62,11 @@ def make_wood(count: int) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
     lines = pieces.drop_duplicates(["survey", "plot", "line"])[["file", "row", "survey", "plot", "subplot", "line"]]
     lines = lines.assign(row_id=np.arange(len(lines)), used=True, date=pd.NaT, length_m=20.0, slope_deg=0.0)
     species = pd.DataFrame({"species": SPECIES, "scientific_name": SPECIES, "wood_density_g_cm3": 0.5})
-    return pieces, lines.reset_index(drop=True), species.assign(conifer=species["species"].str.contains("Picea|Pinus|Tsuga"))
+    return (
+        pieces,
+        lines.reset_index(drop=True),
+        species.assign(conifer=species["species"].str.contains("Picea|Pinus|Tsuga")),
+    )
 
 
 def make_soil(count: int) -> pd.DataFrame:
@@ -92,7 +97,7 @@ def trees_to_plots(tables: dict[str, pd.DataFrame]) -> pd.DataFrame:
     trees, _ = tree_findings(label_trees(tree_biomass(tables["trees"], plan), plan), plan)
     design = PlotDesign.circles([4.0, 12.6], [5.0, 20.0])
     index = visit_index(trees, tables["visits"])
-    trees = trees.assign(expansion=expansion_factors(trees, tables["visits"], index, design))
+    trees = with_columns(trees, {"expansion": expansion_factors(trees, tables["visits"], index, design)})
     conifer = plan.conifer[plan.positions(trees["species"])]
     sums = plot_sums(trees, index, len(tables["visits"]), conifer=conifer)
     table, _ = plot_parts(tables["visits"], tables["plots"], sums, parts=["above_ground.trees"], design=design)

@@ -21,9 +21,10 @@ import pyarrow.parquet as pq
 
 from allometry.assign import assign
 from allometry.catalogue import load_catalogue
-from landcarbon.estimate.stocks import estimate_stocks
+from landcarbon.columns import with_columns
 from landcarbon.plots import PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
 from landcarbon.pools.trees import make_tree_plan, tree_biomass, tree_findings
+from landcarbon.statements import state_stocks
 
 SPECIES = [
     "Acer rubrum", "Acer saccharum", "Betula alleghaniensis", "Carya glabra", "Fagus grandifolia", "Fraxinus americana",
@@ -86,21 +87,14 @@ def ours(path: Path, tables: dict[str, pd.DataFrame]) -> pd.DataFrame:
     trees, _ = tree_findings(tree_biomass(trees, plan), plan)
     design = PlotDesign.circles([4.0, 12.6], [5.0, 20.0])
     index = visit_index(trees, visits)
-    trees = trees.assign(expansion=expansion_factors(trees, visits, index, design))
+    trees = with_columns(trees, {"expansion": expansion_factors(trees, visits, index, design)})
     position = plan.positions(trees["species"])
     sums = plot_sums(trees, index, len(visits), conifer=plan.conifer[position])
     parts = ["above_ground.trees", "below_ground.roots", "dead_wood.standing"]
     table, _ = plot_parts(visits, plots, sums, parts=parts, design=design, root_model="cairns97_temperate")
-    stocks, _ = estimate_stocks(
-        table,
-        tables["strata"],
-        tables["parcels"],
-        SURVEYS,
-        pools=[part.split(".")[0] for part in parts],
-        sums={**{part.split(".")[0]: [part] for part in parts}, "all": parts},
-        confidence=0.95,
-        inventory_name="bench",
-    )
+    sums_of = {**{part.split(".")[0]: [part] for part in parts}, "all": parts}
+    options = {"strata": tables["strata"], "parcels": tables["parcels"], "confidence": 0.95, "inventory_name": "bench"}
+    stocks, _ = state_stocks(table, sums_of, SURVEYS, **options)
     return stocks
 
 

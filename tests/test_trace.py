@@ -1,0 +1,178 @@
+"""A figure can be followed back: the trees of a plot add up to what the plot shows."""
+
+from __future__ import annotations
+
+import dataclasses
+import io
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+from rich.console import Console
+
+from allometry.roots import stand_roots, tree_roots
+from landcarbon.api import open_inventory
+from landcarbon.errors import UserError
+from landcarbon.publish.results import parts_of_plots, sums_of_plots
+from landcarbon.publish.terminal_trace import print_trace
+from landcarbon.trace import trace_unit, tree_shares
+
+ROOT = Path(__file__).resolve().parent.parent
+
+
+@pytest.fixture(scope="module")
+def demo():
+    return open_inventory(ROOT / "demo_parcels" / "inventory.toml").results
+
+
+def shown(trace, trees=10, *, width=None) -> str:
+    terminal = width is not None
+    console = Console(
+        file=io.StringIO(), width=width or 110, highlight=False, force_terminal=terminal, color_system=None
+    )
+    print_trace(trace, console, trees)
+    return console.file.getvalue()
+
+
+def from_trees(trace) -> pd.Series:
+    return trace.trees.groupby(trace.trees["plot"].astype("str"))["density_t_c_ha"].sum()
+
+
+def figure_of(results, survey, pool, part):
+    """Figure of each plot: of one part where parts are told, else of the pool."""
+    rows = parts_of_plots(results.plots, pool)
+    rows = rows[rows["part"].astype("str") == part] if len(rows) else sums_of_plots(results.plots, pool)
+    rows = rows[(rows["survey"].astype("str") == survey) & rows["inside"]]
+    return rows.set_index(rows["plot"].astype("str"))["density_t_c_ha"]
+
+
+@pytest.mark.parametrize(("pool", "part"), [("above_ground", "trees"), ("dead_wood", "standing")])
+def test_trees_add_up_to_the_plot(demo, pool, part):
+    """Identity: sum over trees of mass x carbon fraction x trees per hectare = density of the plot."""
+    for survey in demo.surveys["survey"].astype("str"):
+        trace = trace_unit(demo, survey=survey, pool=pool)
+        own = trace.trees[trace.trees["part"] == part]
+        sums = own.groupby(own["plot"].astype("str"))["density_t_c_ha"].sum()
+        published = figure_of(demo, survey, pool, part).dropna()
+        assert len(published) > 50
+        np.testing.assert_allclose(sums.reindex(published.index).fillna(0), published, rtol=1e-9, atol=1e-9)
+
+
+def test_pool_all_shows_every_pool_of_a_plot(demo):
+    trace = trace_unit(demo, parcel="Owl Bank", survey="2019", pool="all")
+    pools = [name for name in trace.columns if name in set(demo.plots["pool"])]
+    assert pools[:3] == ["above_ground", "below_ground", "dead_wood"]
+    whole = trace.plots.dropna(subset="density_t_c_ha")
+    np.testing.assert_allclose(whole[pools].sum(axis=1), whole["density_t_c_ha"], rtol=1e-9)
+    assert set(trace.trees["pool"]) == {"above_ground", "dead_wood"}
+    assert any("Below-ground biomass is not a sum over trees" in note for note in trace.notes)
+
+
+def test_stand_level_roots_are_told_from_the_shoots_of_the_plot(demo):
+    """Published: cairns97_temperate as allometry.roots holds it, applied anew to the figures that are shown."""
+    trace = trace_unit(demo, parcel="Owl Bank", pool="below_ground")
+    assert demo.settings_summary["root_model"] == "cairns97_temperate"
+    assert list(trace.columns)[-2:] == ["shoot_t_ha", "carbon_fraction"]
+    roots = stand_roots("cairns97_temperate", trace.plots["shoot_t_ha"]).root_t_ha
+    np.testing.assert_allclose(roots * trace.plots["carbon_fraction"], trace.plots["density_t_c_ha"], rtol=1e-9)
+    assert trace.trees["density_t_c_ha"].isna().all()
+    text = " ".join(shown(trace).split())
+    assert "stand-level root model cairns97_temperate" in text
+    assert "shoot t/ha" in text
+
+
+def test_tree_level_roots_add_up(demo):
+    """Identity: root mass of the trees x carbon fraction of the plot's live trees."""
+    trees = demo.trees[demo.trees["used"] & demo.trees["survey"].astype("str").eq("2024")]
+    conifer = trees["conifer"].to_numpy(dtype=bool)
+    mass = tree_roots("jenkins2003_coarse_root", trees["biomass_kg"], trees["dbh_cm"], conifer)
+    shares = tree_shares(trees.assign(root_kg=mass), "below_ground", ["below_ground"], "jenkins2003_coarse_root")
+    live = shares[shares["plot"].astype("str") == "A02"]
+    fraction = (live["biomass_kg"] * live["expansion"] * 0.48).sum() / (live["biomass_kg"] * live["expansion"]).sum()
+    assert set(live["species"].astype("str")) <= {"BE", "OA", "SY"}  # broadleaves, so 0.48 (IPCC 2006 Vol 4 Table 4.3)
+    expected = (live["root_kg"] * live["expansion"]).sum() / 1000 * fraction
+    assert live["density_t_c_ha"].sum() == pytest.approx(expected, rel=1e-12)
+
+
+def test_pools_without_trees_say_so(demo):
+    plots = demo.plots.assign(pool=demo.plots["pool"].astype("str").replace("dead_wood", "litter"))
+    stocks = demo.stocks.assign(pool=demo.stocks["pool"].astype("str").replace("dead_wood", "litter"))
+    if "litter" in set(demo.plots["pool"]):
+        plots, stocks = demo.plots, demo.stocks
+    trace = trace_unit(dataclasses.replace(demo, plots=plots, stocks=stocks), survey="2014", pool="litter")
+    assert trace.trees.empty
+    assert any("No tree enters" in note for note in trace.notes)
+
+
+def test_parts_are_listed_where_there_are_any(demo):
+    if "part" not in demo.plots:
+        pytest.skip("these results have no parts")
+    trace = trace_unit(demo, pool="dead_wood", survey="2024")
+    assert "dead_wood.standing" in trace.columns
+    assert trace.plots["plot"].is_unique
+
+
+def test_printed_contributions_add_up(demo):
+    """The figures as printed, to three decimals each, against the plot as printed."""
+    trace = trace_unit(demo, parcel="chapel rise", survey="2024", plot="A02")
+    lines = [line for line in shown(trace, 100).splitlines() if "trees_2024" in line]
+    assert len(lines) == len(trace.trees)
+    printed = [float(line.replace("beyond range", "").split()[-1].replace(",", "")) for line in lines]
+    published = figure_of(demo, "2024", "above_ground", "trees")["A02"]
+    assert sum(printed) == pytest.approx(published, abs=0.0006 * len(lines))
+    assert from_trees(trace).item() == pytest.approx(published, rel=1e-9)
+    assert trace.plots["trees_t_c_ha"].item() == pytest.approx(published, rel=1e-9)
+
+
+def test_print_names_what_a_verifier_needs(demo):
+    text = shown(trace_unit(demo, parcel="Owl Bank"))
+    for part in ("curve", "measured", "trees/ha", "C fraction", "beyond range", "zianis05_093_fagus_sylvatica"):
+        assert part in text, part
+    assert "and 54 more" in text
+    unknown = demo.trees[demo.trees["species"].astype("str") == "HX"]
+    one = unknown[unknown["used"]].iloc[0]
+    text = shown(trace_unit(demo, survey=str(one["survey"]), plot=str(one["plot"])), 100)
+    assert "code HX" in text
+
+
+def test_the_simple_mean_is_said_where_it_is_one(demo):
+    flat = " ".join(shown(trace_unit(demo, parcel="Owl Bank")).split())
+    assert "The figure is their mean, weighted by relative area" in flat
+    assert "The figure is their mean" not in shown(trace_unit(demo))  # strata weigh by area
+
+
+@pytest.mark.parametrize("width", [60, 80, 200])
+def test_ids_are_never_broken(demo, width):
+    text = shown(trace_unit(demo, parcel="Owl Bank"), width=width)
+    assert "zianis05_093_fagus_sylvatica" in text
+    assert "trees_2024.xlsx 412" in text
+
+
+def test_names_match_without_regard_to_case(demo):
+    assert trace_unit(demo, parcel="owl bank", pool="Above-Ground").row["unit"] == "Owl Bank"
+    assert trace_unit(demo, stratum="BEECH").row["unit"] == "beech"
+    with pytest.raises(UserError, match=r"no parcel 'owl bak'.*Did you mean 'Owl Bank'"):
+        trace_unit(demo, parcel="owl bak")
+    with pytest.raises(UserError, match="no pool 'peat'"):
+        trace_unit(demo, pool="peat")
+    with pytest.raises(UserError, match=r"no survey '1999'.*There are: 2014, 2019, 2024"):
+        trace_unit(demo, survey="1999")
+    with pytest.raises(UserError, match=r"no plot of parcel Owl Bank, survey 2024, 'zz'"):
+        trace_unit(demo, parcel="Owl Bank", plot="zz")
+    with pytest.raises(UserError, match="a parcel and a stratum were given"):
+        trace_unit(demo, parcel="Owl Bank", stratum="beech")
+
+
+def test_ambiguous_names_must_be_written_as_they_are(demo):
+    stocks = demo.stocks.assign(unit=demo.stocks["unit"].astype("str").replace("Sawpit", "OWL BANK"))
+    twice = dataclasses.replace(demo, stocks=stocks)
+    assert trace_unit(twice, parcel="OWL BANK").row["unit"] == "OWL BANK"
+    with pytest.raises(UserError, match="no parcel 'owl bank'"):
+        trace_unit(twice, parcel="owl bank")
+
+
+def test_results_without_parcels(demo):
+    stocks = demo.stocks[demo.stocks["by"] != "parcel"]
+    with pytest.raises(UserError, match="no parcel in these results"):
+        trace_unit(dataclasses.replace(demo, stocks=stocks), parcel="Owl Bank")
