@@ -21,6 +21,7 @@ from landcarbon.pipeline import (
     root_model,
 )
 from landcarbon.publish.results import Results
+from landcarbon.statements import measured_columns
 
 if TYPE_CHECKING:
     from landcarbon.inventory import Settings
@@ -101,14 +102,19 @@ def refuse_nothing(results: Results) -> None:
 def long_plots(stage: PlotStage, settings: Settings) -> pd.DataFrame:
     """Give one row per survey, plot, pool and part; a pool as a whole, and ``all``, have a blank part.
 
-    A pool stands for a plot only where all its parts were measured there.
+    A pool stands for a plot only where all its parts were measured there that were measured at the survey at all.
     """
     table, sums = stage.plot_parts, stage.sums
     columns = sums["all"]
     keys = [name for name in table.columns if name not in columns]
+    there = measured_columns(table)
+    asked = pd.DataFrame(
+        {name: table["survey"].map({survey: name in found for survey, found in there.items()}) for name in columns}
+    )
     blocks = []
     for pool, parts in sums.items():
-        total = table[parts].sum(axis=1, skipna=False)
+        lacking = (table[parts].isna() & asked[parts]).any(axis=1) | ~asked[parts].any(axis=1)
+        total = table[parts].sum(axis=1).mask(lacking)
         blocks.append(table[keys].assign(pool=pool, part="", density_t_c_ha=total))
         if pool != "all":
             blocks += [
@@ -181,9 +187,17 @@ def _pool_ways(settings: Settings) -> dict[str, str]:
 def _marks(
     stage: PlotStage, settings: Settings, stocks: pd.DataFrame, findings: pd.DataFrame, counts: pd.DataFrame
 ) -> list[str]:
-    figures = stocks[stocks["density_t_c_ha"].notna() & (stocks["pool"] != "all")]
+    there = measured_columns(stage.plot_parts)
     surveys = [str(name) for name in stage.inputs.surveys["survey"]]
-    measured = {name: list(figures.loc[figures["survey"] == name, "pool"].unique()) for name in surveys}
+    sums = {pool: columns for pool, columns in stage.sums.items() if pool != "all"}
+    short = {}
+    for pool, columns in sums.items():
+        alike = len({tuple(column in there.get(name, ()) for name in surveys) for column in columns}) == 1
+        short.update({column: pool if alike else column for column in columns})
+    measured = {
+        name: list(dict.fromkeys(short[column] for column in short if column in there.get(name, ())))
+        for name in surveys
+    }
     whole = stage.inputs.trees.get("dead_how")
     standing = (
         "dead_wood.standing" in stage.plot_parts and whole is not None and "whole tree" in set(whole.astype("str"))

@@ -92,7 +92,9 @@ def area_marks(stocks: pd.DataFrame) -> list[str]:
     marks = _lost_strata(whole)
     for pool, rows in strata[none & ~lost].groupby("pool", sort=False):
         where = "; ".join(f"{name} at {', '.join(part['survey'])}" for name, part in rows.groupby("unit", sort=False))
-        marks.append(f"Pool {pool} could not be estimated in stratum {where}, nor could the sum of all pools there.")
+        marks.append(
+            f"Pool {pool} could not be estimated in stratum {where}: the sum of all pools there is without it."
+        )
     return marks
 
 
@@ -136,7 +138,7 @@ def pool_marks(ways: Mapping[str, str], measured: Mapping[str, list[str]]) -> li
     ways : mapping
         Pool -> how it was obtained, or "not counted: reason".
     measured : mapping
-        Survey -> pools with a figure there.
+        Survey -> pools, or parts of pools, measured there.
     """
     marks = []
     missing = [f"{pool} ({how.removeprefix('not counted: ')})" for pool, how in ways.items() if "not counted" in how]

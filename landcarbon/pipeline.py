@@ -18,6 +18,7 @@ from allometry.heights import impute, published_height
 from allometry.roots import default_model, level
 from landcarbon.check.equations import memory_findings, range_findings, species_findings
 from landcarbon.check.run import run_checks
+from landcarbon.check.stand import stand_findings
 from landcarbon.columns import with_columns
 from landcarbon.errors import UserError
 from landcarbon.findings import empty_findings, join_findings, make_findings
@@ -36,7 +37,7 @@ from landcarbon.pools.trees import (
 )
 from landcarbon.publish.results import CHANGE_COLUMNS
 from landcarbon.read.load import load_inputs
-from landcarbon.sample_pools import join_parts, pool_sums, sample_parts
+from landcarbon.sample_pools import join_parts, keep_declared, pool_sums, sample_parts
 from landcarbon.statements import state_change, state_stocks
 
 if TYPE_CHECKING:
@@ -161,13 +162,16 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
             species_findings(assignments, trees),
             memory_findings(assignments, trees),
             range_findings(trees),
+            stand_findings(trees, inputs.visits, inputs.surveys, inputs.plots),
             biomass_findings,
             dead_findings,
             plot_findings,
             part_findings,
         ]
     )
-    return PlotStage(replace(inputs, trees=trees, findings=findings), plan, join_parts(table, parts, inputs), parts)
+    joined, lost = keep_declared(join_parts(table, parts, inputs), settings, inputs)
+    inputs = replace(inputs, trees=trees, findings=join_findings([findings, lost]))
+    return PlotStage(inputs, plan, joined, parts)
 
 
 def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:

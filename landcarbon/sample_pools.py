@@ -35,9 +35,21 @@ if TYPE_CHECKING:
     from landcarbon.inputs import Inputs
     from landcarbon.inventory import Settings
 
-__all__ = ["join_parts", "pool_sums", "sample_parts"]
+__all__ = ["join_parts", "keep_declared", "pool_sums", "sample_parts"]
 
 _LINE_PARTS = ("down_coarse", "down_fine")
+
+# Parts that rows of a table can end in; the first stands for them all where no row is left.
+_FEEDS = {
+    "lines": ("dead_wood", _LINE_PARTS),
+    "pieces": ("dead_wood", _LINE_PARTS),
+    "logs": ("dead_wood", ("down_coarse",)),
+    "stumps": ("dead_wood", ("stumps",)),
+    "litter": ("litter", ("litter", "duff")),
+    "ground_vegetation": ("above_ground", ("ground_vegetation",)),
+    "saplings": ("above_ground", ("saplings",)),
+    "soil": ("soil", ("soil",)),
+}
 
 
 def sample_parts(
@@ -134,14 +146,57 @@ def join_parts(trees: pd.DataFrame, parts: pd.DataFrame, inputs: Inputs) -> pd.D
 
 
 def pool_sums(table: pd.DataFrame) -> dict[str, list[str]]:
-    """Columns that make up each pool, and ``all``, in canonical order; only parts measured somewhere."""
+    """Columns that make up each pool, and ``all``, in canonical order.
+
+    A pool of which nothing is left keeps its columns, so that it is stated as not estimable and not passed over.
+    """
     sums: dict[str, list[str]] = {}
     for pool, names in PARTS.items():
-        columns = [column_name(pool, part) for part in names]
-        present = [column for column in columns if column in table and table[column].notna().any()]
-        if present:
-            sums[pool] = present
+        columns = [name for name in (column_name(pool, part) for part in names) if name in table]
+        present = [column for column in columns if table[column].notna().any()]
+        if columns:
+            sums[pool] = present or columns
     return {**sums, "all": [column for columns in sums.values() for column in columns]}
+
+
+def keep_declared(table: pd.DataFrame, settings: Settings, inputs: Inputs) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Keep a column for every part that is declared and has rows, though all of them were set aside.
+
+    Returns
+    -------
+    table : DataFrame
+        With a column of NaN for such a part.
+    findings : DataFrame
+        One error per table and survey of which no row is left.
+    """
+    wanted = measured_parts(settings)
+    lost, findings = {}, []
+    for name, rows in inputs.samples.items():
+        pool, parts = _FEEDS[name]
+        declared = [part for part in parts if part in wanted.get(pool, ())]
+        if not declared or rows.empty:
+            continue
+        columns = [column_name(pool, part) for part in declared]
+        known = [column for column in columns if column in table]
+        for survey in rows["survey"].astype("str").unique():  # over surveys
+            at = table[(table["survey"] == survey) & table["inside"]]
+            if not any(at[column].notna().any() for column in known):
+                findings.append(_nothing_left(name, pool, survey, int((rows["survey"].astype("str") == survey).sum())))
+        if not known:
+            lost[columns[0]] = np.nan
+    return table.assign(**lost), join_findings(findings)
+
+
+def _nothing_left(name: str, pool: str, survey: str, count: int) -> pd.DataFrame:
+    return make_findings(
+        "no usable rows",
+        severity="error",
+        table=name,
+        survey=survey,
+        value=str(count),
+        message=f"None of the {count} rows of {name} gives a figure at survey {survey}: {pool} lacks them there.",
+        remedy="See the other findings of this table for why; a wrong unit of a column is the usual cause.",
+    )
 
 
 def _inside(inputs: Inputs) -> tuple[Inputs, pd.DataFrame]:

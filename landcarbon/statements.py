@@ -17,9 +17,11 @@ from landcarbon.estimate.stocks import estimate_stocks
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.publish.results import CHANGE_COLUMNS
 
-__all__ = ["state_change", "state_stocks"]
+__all__ = ["measured_columns", "state_change", "state_stocks"]
 
 _LEVELS = ("inventory", "stratum", "parcel")
+_STOCK_SPREAD = ["density_se", "density_low", "density_high", "stock_se", "stock_low", "stock_high", "df"]
+_CHANGE_SPREAD = ["change_se", "change_low", "change_high", "change_t_c_ha_yr_se"]
 
 
 def state_stocks(
@@ -42,7 +44,7 @@ def state_stocks(
     -------
     stocks, findings : DataFrame
     """
-    measured = _measured(plot_parts)
+    measured = measured_columns(plot_parts)
     groups: dict[tuple[tuple[str, tuple[str, ...]], ...], list[str]] = {}
     for survey in surveys:
         kept = _kept(sums, [measured.get(survey, set())])
@@ -51,9 +53,11 @@ def state_stocks(
     for chosen, names in groups.items():
         part = plot_parts if len(groups) == 1 else plot_parts[plot_parts["survey"].isin(names)]
         pools = [pool for pool, _ in chosen if pool != "all"]
-        part, kept = _summed(part, dict(chosen))
-        table, found = estimate_stocks(part, surveys=names, pools=pools, sums=kept, **options)
-        tables.append(_with_gaps(table, sums, dict(chosen), "not measured"))
+        part, given = _summed(part, dict(chosen))
+        table, found = estimate_stocks(part, surveys=names, pools=pools, sums=given, **options)
+        table = _with_defaults(table, dict(chosen), _STOCK_SPREAD)
+        found = _without_flat(found, dict(chosen))
+        tables.append(_with_gaps(table, sums, dict(chosen), "not measured, or no usable rows"))
         findings.append(found)
     if len(tables) == 1:
         return tables[0], join_findings(findings)
@@ -89,16 +93,17 @@ def state_change(
             message=f"No plot counts at survey {', '.join(lacking)}: change {since} to {until} cannot be stated.",
             remedy="See the other findings for why its plots do not count.",
         )
-    measured = _measured(plot_parts)
+    measured = measured_columns(plot_parts)
     kept = _kept(sums, [measured.get(survey, set()) for survey in (since, until)])
     pools = [pool for pool in kept if pool != "all"]
     part, given = _summed(plot_parts[plot_parts["survey"].isin([since, until])], kept)
     table, findings = estimate_change(part, since=since, until=until, pools=pools, sums=given, **options)
-    table = _with_gaps(table, sums, kept, "not measured at both surveys")
+    table = _with_gaps(_with_defaults(table, kept, _CHANGE_SPREAD), sums, kept, "not measured at both surveys")
+    findings = _without_flat(findings, kept)
     return table, join_findings([findings, _gap_finding(sums, kept, since, until)])
 
 
-def _measured(plot_parts: pd.DataFrame) -> dict[str, set[str]]:
+def measured_columns(plot_parts: pd.DataFrame) -> dict[str, set[str]]:
     """Columns with a figure on some plot that counts, by survey."""
     columns = [name for name in plot_parts.columns if "." in str(name)]
     there = plot_parts[columns].notna().to_numpy() & plot_parts["inside"].to_numpy(dtype=bool)[:, None]
@@ -135,6 +140,26 @@ def _gaps(sums: Mapping[str, Sequence[str]], kept: Mapping[str, Sequence[str]]) 
     gaps = {pool: [name for name in sums[pool] if name not in kept[pool]] for pool in sums if pool != "all"}
     gaps = {pool: names for pool, names in gaps.items() if names}
     return {**gaps, "all": [name for names in gaps.values() for name in names]}
+
+
+def _flat(kept: Mapping[str, Sequence[str]]) -> list[str]:
+    """Pools that are a default factor and nothing else."""
+    return [pool for pool, columns in kept.items() if pool != "all" and all(c.endswith(".default") for c in columns)]
+
+
+def _without_flat(findings: pd.DataFrame, kept: Mapping[str, Sequence[str]]) -> pd.DataFrame:
+    """Drop the warning that a default factor does not vary: it is meant not to."""
+    return findings[~((findings["rule"] == "zero variance") & findings["column"].isin(_flat(kept)))]
+
+
+def _with_defaults(table: pd.DataFrame, kept: Mapping[str, Sequence[str]], spread: list[str]) -> pd.DataFrame:
+    """Take away the error of a flat default factor: it has none from sampling, and zero would be untrue."""
+    rows = table["pool"].isin(_flat(kept))
+    if not rows.any():
+        return table
+    blank = {name: table[name].mask(rows) for name in spread}
+    told = "default factor, the same on every plot; its uncertainty is not stated"
+    return table.assign(**blank, method=table["method"].mask(rows, told))
 
 
 def _with_gaps(

@@ -95,8 +95,10 @@ dead_wood = "measured"
 litter = "measured"
 [litter]
 frame_area_m2 = 1
+dry_share = 0.345
 [ground_vegetation]
 frame_area_m2 = 1
+dry_share = 0.345
 [dead_wood.classes]
 large_solid = {{ diameter = "large_solid_diam_cm", line_m = 12 }}
 large_rotten = {{ diameter = "large_rotten_diam_cm", line_m = 12 }}

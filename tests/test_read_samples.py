@@ -438,6 +438,34 @@ class TestSurveys:
         log = inputs.files.set_index("file")
         assert log.loc["c.csv", ["rows", "role"]].tolist() == [1, "stumps 2024"]
 
+    def test_text_that_repeats_is_a_category(self, tmp_path: Path):
+        """Also where tables of several files, or lines given and lines derived, are put together."""
+        surveys = (
+            '[surveys.2014]\ntrees = "trees.csv"\npieces = ["a.csv", "b.csv"]\nlines = "lines.csv"\n'
+            '[surveys.2024]\ntrees = "trees.csv"\npieces = "c.csv"\n'
+        )
+        more = f'[dead_wood]\n{LINES}[dead_wood.classes.fine]\ncount = "n"\nmean_diameter_cm = 0.3\n'
+        files = {
+            "a_csv": "plot,line,diameter,wood,n\n0101,N,30,softwood,4\n",
+            "b_csv": "plot,line,diameter,species,n\n0102,E,9,oak,0\n",
+            "c_csv": "plot,line,diameter,decay_class,n\n0103,S,12,3,\n",
+            "lines_csv": "plot,line,length\n0102,E,20\n0101,N,20\n",
+        }
+        samples = read(tmp_path, settings_text(surveys=surveys, more=more), trees_csv=self.TREES, **files).samples
+        pieces, lines = samples["pieces"], samples["lines"]
+        for table, texts in ((pieces, ("line", "size_class", "decay_class", "wood", "species")), (lines, ("line",))):
+            for name in ("file", "survey", "plot", "subplot", *texts):
+                assert table[name].dtype == "category", name
+        assert pieces["size_class"].tolist() == ["", "fine", "", ""]
+        assert pieces["wood"].tolist() == ["softwood", "softwood", "", ""]
+        assert pieces["plot"].cat.categories.tolist() == ["0101", "0102", "0103"]
+        assert pieces["survey"].cat.categories.tolist() == ["2014", "2024"]
+        assert lines[["survey", "plot", "line", "file"]].to_numpy().tolist() == [
+            ["2014", "0102", "E", "lines.csv"],
+            ["2014", "0101", "N", "lines.csv"],
+            ["2024", "0103", "S", "c.csv"],
+        ]
+
     def test_row_of_another_survey(self, tmp_path: Path):
         surveys = '[surveys.2014]\ntrees = "trees.csv"\nstumps = "a.csv"\n[surveys.2024]\ntrees = "trees.csv"'
         text = "survey,plot,diameter,height\n2014,0101,30,0.3\n2024,0101,31,0.3\n"
@@ -514,7 +542,7 @@ class TestRows:
         surveys = '[surveys.2014]\ntrees = "trees.csv"\nlitter = "f.csv"\nground_vegetation = "f.csv"'
         more = (
             '[columns.litter]\nfresh = "dead"\n[columns.ground_vegetation]\nfresh = "green"\n'
-            "[litter]\nframe_area_m2 = 1\n[ground_vegetation]\nframe_area_m2 = 1\n"
+            "[litter]\nframe_area_m2 = 1\n[ground_vegetation]\nframe_area_m2 = 1\ndry_share = 0.4\n"
         )
         inputs = read(tmp_path, settings_text(surveys=surveys, more=more), f_csv="plot,dead,green\n0101,1,\n0102,1,0\n")
         assert inputs.samples["litter"]["used"].tolist() == [True, True]
@@ -557,16 +585,17 @@ class TestNeeded:
         ):
             read(tmp_path, with_file(table, more), **{f"{table}_csv": text})
 
-    POOLS = (
-        '[pools]\nabove_ground = { how = "measured", parts = ["trees", "saplings", "ground_vegetation"] }\n'
-        'dead_wood = "measured"\nlitter = "measured"\nsoil = "measured"\n'
-        '[soil]\nbulk_density = "fine per whole volume"\ndepth_cm = 30\n'
-        "[litter]\nframe_area_m2 = 1\n[ground_vegetation]\nframe_area_m2 = 1\n[saplings]\narea_m2 = 10\n"
-    )
-
-    def every_table(self, table: str, text: str, more: str = "") -> tuple[str, dict[str, str]]:
-        """Settings that count every pool, one table of which is the one to be tried."""
-        sound = {
+    def every_table(self, table: str, text: str, **more: str) -> tuple[str, dict[str, str]]:
+        """Settings that count every pool, with the text of one table to be tried and further keys of sections."""
+        keys = {
+            "pools": 'above_ground = "measured"\ndead_wood = "measured"\nlitter = "measured"\nsoil = "measured"\n',
+            "soil": 'bulk_density = "fine per whole volume"\ndepth_cm = 30\n',
+            "litter": "frame_area_m2 = 1\n",
+            "ground_vegetation": "frame_area_m2 = 1\n",
+            "saplings": "area_m2 = 10\n",
+        }
+        sections = "".join(f"[{name}]\n{lines}{more.get(name, '')}\n" for name, lines in keys.items())
+        files = {
             "pieces": "plot,line,diameter\n0101,N,12\n",
             "lines": "plot,line,length\n0101,N,20\n",
             "logs": "plot,length,middle\n0101,3,20\n",
@@ -575,32 +604,27 @@ class TestNeeded:
             "ground_vegetation": "plot,dry\n0101,1\n",
             "saplings": "plot,species,dbh\n0101,oak,2\n",
             "soil": "plot,top,bottom,bulk_density,organic_carbon\n0101,0,30,1,0.02\n",
+            table: text,
         }
-        files = {**sound, table: text}
         surveys = '[surveys.2014]\ntrees = "trees.csv"\n' + "".join(f'{name} = "{name}.csv"\n' for name in files)
-        pools = self.POOLS
-        for line in more.splitlines():
-            section, _, key = line.partition(":")
-            pools += key if section not in pools else ""
-            pools = pools.replace(f"{section}\n", f"{section}\n{key}\n") if section in pools else pools
-        return settings_text(surveys=surveys, more=pools), {f"{name}_csv": text for name, text in files.items()}
+        return settings_text(surveys=surveys, more=sections), {f"{name}_csv": each for name, each in files.items()}
 
     @pytest.mark.parametrize(
-        ("table", "text", "more", "told"),
+        ("table", "text", "told"),
         [
-            ("lines", "plot,line\n0101,N\n", "", r"how long the lines are.*line_m under \[dead_wood\]"),
-            ("pieces", "plot,line,count\n0101,N,2\n", "", "how thick the pieces counted are.*or give size_class"),
-            ("logs", "plot,length\n0101,2\n", "", "any diameter of the logs.*or give large and small"),
-            ("litter", "plot,layer\n0101,duff\n", "", "the mass of the samples.*or give fresh with sub_fresh"),
-            ("litter", "plot,depth\n0101,5\n", "", "the mass of the samples"),
-            ("litter", "plot,fresh,sub_dry\n0101,5,1\n", "", "how much of the fresh mass is dry.*or dry_share under"),
-            ("ground_vegetation", "plot,fresh\n0101,5\n", "", r"dry_share under \[ground_vegetation\]"),
-            ("saplings", "plot,species,count\n0101,oak,5\n", "", "how large the stems are"),
-            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", "", "the bulk density.*or give pedotransfer"),
+            ("lines", "plot,line\n0101,N\n", r"how long the lines are.*line_m under \[dead_wood\]"),
+            ("pieces", "plot,line,count\n0101,N,2\n", "how thick the pieces counted are.*or give size_class"),
+            ("logs", "plot,length\n0101,2\n", "any diameter of the logs.*or give large and small"),
+            ("litter", "plot,layer\n0101,duff\n", "the mass of the samples.*or give fresh with sub_fresh"),
+            ("litter", "plot,depth\n0101,5\n", "the mass of the samples"),
+            ("litter", "plot,fresh,sub_dry\n0101,5,1\n", "how much of the fresh mass is dry.*or dry_share under"),
+            ("ground_vegetation", "plot,fresh\n0101,5\n", r"how.*or dry_share under \[ground_vegetation\]"),
+            ("saplings", "plot,species,count\n0101,oak,5\n", "how large the stems are"),
+            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", "the bulk density.*or give pedotransfer"),
         ],
     )
-    def test_counted_tables_hold_what_their_pool_needs(self, tmp_path: Path, table, text, more, told):
-        text, files = self.every_table(table, text, more)
+    def test_counted_tables_hold_what_their_pool_needs(self, tmp_path: Path, table, text, told):
+        text, files = self.every_table(table, text)
         with pytest.raises(SettingsError, match=rf"columns\.{table}\..*{table}\.csv does not tell {told}"):
             read(tmp_path, text, **files)
 
@@ -608,15 +632,15 @@ class TestNeeded:
         ("table", "text", "more"),
         [
             ("litter", "plot,depth,bulk_density\n0101,5,0.1\n", ""),
-            ("litter", "plot,depth\n0101,5\n", '[litter]:forest_floor = "pine"'),
-            ("litter", "plot,depth\n0101,5\n", "[litter]:bulk_densities = { litter = 0.1 }"),
-            ("litter", "plot,fresh\n0101,5\n", "[litter]:dry_share = 0.4"),
+            ("litter", "plot,depth\n0101,5\n", 'forest_floor = "pine"'),
+            ("litter", "plot,depth\n0101,5\n", "bulk_densities = { litter = 0.1 }"),
+            ("litter", "plot,fresh\n0101,5\n", "dry_share = 0.4"),
             ("litter", "plot,fresh,sub_fresh,sub_dry\n0101,5,10,4\n", ""),
-            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", '[soil]:pedotransfer = "saini1966"'),
+            ("soil", "plot,top,bottom,organic_carbon\n0101,0,30,0.02\n", 'pedotransfer = "saini1966"'),
         ],
     )
     def test_settings_may_stand_for_a_column(self, tmp_path: Path, table, text, more):
-        text, files = self.every_table(table, text, more)
+        text, files = self.every_table(table, text, **{table: more})
         assert read(tmp_path, text, **files).samples[table]["used"].all()
 
     @pytest.mark.parametrize(

@@ -261,7 +261,7 @@ class TestVisits:
         inputs = read(tmp_path, text, trees_csv=LONG, visits_csv=visits)
         assert visit_of(inputs, "late", "0101")["date"] == pd.Timestamp("2024-03-03")
         assert inputs.findings.set_index("rule").loc["date of visit outside surveys", "value"] == "2019-03-03"
-        told = inputs.findings[inputs.findings["row"] == 5]
+        told = inputs.findings[(inputs.findings["row"] == 5) & (inputs.findings["table"] == "visits")]
         assert told[["rule", "table", "value"]].to_numpy().tolist() == [["not readable", "visits", "March"]]
 
 

@@ -51,8 +51,9 @@ def test_a_small_part_that_is_missing_does_not_take_the_pool_with_it():
     whole, _ = state_stocks(table(), SUMS, ["2010", "2015", "2020"], **OPTIONS)
     trees = table().query("survey == '2015'")["above_ground.trees"].mean()
     assert figure(stocks, "2015", "above_ground") == pytest.approx(trees)
-    assert "without above_ground.ground_vegetation: not measured" in figure(stocks, "2015", "above_ground", "method")
-    assert "without above_ground.ground_vegetation: not measured" in figure(stocks, "2015", "all", "method")
+    told = "without above_ground.ground_vegetation: not measured, or no usable rows"
+    assert told in figure(stocks, "2015", "above_ground", "method")
+    assert told in figure(stocks, "2015", "all", "method")
     assert figure(stocks, "2010", "above_ground") == pytest.approx(figure(whole, "2010", "above_ground"))
     assert list(stocks["survey"].unique()) == ["2010", "2015", "2020"]
 
@@ -89,3 +90,20 @@ def test_survey_without_plots_has_no_change():
     change, findings = state_change(table(), SUMS, "2010", "2030", **OPTIONS)
     assert change.empty
     assert findings["rule"].tolist() == ["survey without plots"]
+
+
+def test_default_factor_has_a_figure_and_no_error():
+    """A flat factor does not vary between plots: stating a standard error of zero would be untrue."""
+    sums = {"above_ground": ["above_ground.trees"], "litter": ["litter.default"]}
+    sums["all"] = [*sums["above_ground"], *sums["litter"]]
+    frame = table().assign(**{"litter.default": 22.0}).drop(columns=["above_ground.ground_vegetation", "soil.soil"])
+    stocks, findings = state_stocks(frame, sums, ["2010", "2015", "2020"], **OPTIONS)
+    assert figure(stocks, "2015", "litter") == 22.0
+    assert np.isnan(figure(stocks, "2015", "litter", "density_se"))
+    assert "default factor" in figure(stocks, "2015", "litter", "method")
+    assert figure(stocks, "2015", "all") == pytest.approx(figure(stocks, "2015", "above_ground") + 22.0)
+    assert "zero variance" not in set(findings["rule"])
+    change, _ = state_change(frame, sums, "2010", "2015", **OPTIONS)
+    row = change[(change["by"] == "inventory") & (change["pool"] == "litter")].iloc[0]
+    assert row["change_t_c"] == 0.0
+    assert np.isnan(row["change_se"])

@@ -127,9 +127,9 @@ def _findings(survey: str, figures: StandFigures) -> list[pd.DataFrame]:
         "survey": survey,
         "trees": f"{figures.trees:,}",
         "plots": f"{figures.plots:,}",
-        "median": f"{figures.median_cm:.3g}",
-        "basal_area": f"{figures.basal_area_m2_ha:.3g}",
-        "diameter": f"{figures.quadratic_mean_cm:.3g}",
+        "median": _shown(figures.median_cm),
+        "basal_area": _shown(figures.basal_area_m2_ha),
+        "diameter": _shown(figures.quadratic_mean_cm),
         "stems": f"{figures.stems_ha:,.0f}",
     }
     if np.isfinite(figures.basal_area_m2_ha):
@@ -146,3 +146,8 @@ def _findings(survey: str, figures: StandFigures) -> list[pd.DataFrame]:
     if figures.median_cm > thick.limits["median_cm"] and figures.trees > thick.limits["trees"]:
         parts.append(thick.found(fill=words, survey=survey, value=value))
     return parts
+
+
+def _shown(value: float) -> str:
+    """Write two figures, and every figure before the decimal point."""
+    return f"{value:,.0f}" if value >= 10 else f"{value:.2g}"

@@ -12,7 +12,7 @@ import pyarrow.compute as pc
 
 from landcarbon.errors import InputFileError
 from landcarbon.inventory.columns import ColumnSpec, table_columns
-from landcarbon.inventory.models import Settings
+from landcarbon.inventory.models import SAMPLE_TABLES, Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.inventory.units import convert
 from landcarbon.read.cells import Parsed, as_category, as_date, as_flag, as_number, as_text, cell_text
@@ -36,7 +36,11 @@ __all__ = [
     "wanted_in",
 ]
 
-_REPEATING = frozenset({"survey", "plot", "subplot", "species", "status", "decay_class"})
+# Text of field tables that repeats from row to row; carried as categories, which are lighter and faster to group.
+_REPEATING = frozenset(
+    {"survey", "plot", "subplot", "species", "status", "decay_class", "line", "size_class", "wood", "layer", "core"}
+)
+_FIELD_TABLES = frozenset({"trees", *SAMPLE_TABLES})
 
 
 @dataclass
@@ -268,7 +272,7 @@ def _without_blank_rows(raw: RawTable) -> tuple[RawTable, list[pd.DataFrame]]:
 def _parse(
     cells: pa.Array | None, spec: ColumnSpec, pattern: str | None, *, comma_decimals: bool, rows: int
 ) -> Parsed | pd.Series:
-    repeating = spec.table == "trees" and spec.column in _REPEATING
+    repeating = spec.table in _FIELD_TABLES and spec.column in _REPEATING
     if cells is None:
         if spec.kind in ("id", "text"):
             return _blank(rows, category=repeating)

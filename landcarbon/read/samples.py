@@ -18,6 +18,7 @@ from landcarbon.read.needs import refuse_lacking
 from landcarbon.read.notes import note
 from landcarbon.read.size_classes import long_pieces
 from landcarbon.read.source import FileLog, find_source
+from landcarbon.read.stack import stack_frames
 from landcarbon.read.surveys import assign_surveys, files_of
 
 __all__ = ["SampleTables", "read_samples"]
@@ -101,7 +102,7 @@ def read_samples(settings: Settings, plots: Sequence[str], log: FileLog) -> Samp
             if table == _PIECES:
                 derived.append(reader.looked_at())
             result.findings += [*reader.mapped.findings, *reader.findings]
-        result.tables[table] = pd.concat(parts, ignore_index=True)
+        result.tables[table] = stack_frames(parts)
     if _LINES in result.tables:
         result.findings += settle_lines(result.tables[_LINES], settings)
     if _PIECES in result.tables:
@@ -125,7 +126,6 @@ class _FileRows:
             mapped, self.nothing, self.below_zero = pieces.mapped, pieces.nothing, pieces.below_zero
         self.mapped = mapped
         self.frame = mapped.frame
-        self.frame["file"] = self.frame["file"].astype("str")
         self.frame["used"] = True
         self.placed = np.zeros(len(self.frame), dtype=bool)
 
@@ -165,11 +165,16 @@ class _FileRows:
 
     def _surveys(self, file: str) -> None:
         found = assign_surveys(self.frame, self.mapped.given, self.settings, self.served, file=file, table=self.table)
-        self.frame["survey"] = found.names
+        self.frame["survey"] = self._levels(found.names)
         if found.rule == "date outside surveys" and "date" in self.mapped.bad:
             self._unreadable("date", self.mapped.bad.pop("date"))  # so it is told once
         words = {"survey": self.served[0], "surveys": ", ".join(self.served), "table": self.table}
         self._aside(found.lost, found.rule, value=found.value, fill=words)
+
+    def _levels(self, names: pd.Series) -> pd.Categorical:
+        """Return the surveys as categories in the order of the settings; a blank last, where there is one."""
+        levels = [*self.settings.surveys, *([""] if (names == "").any() else [])]
+        return pd.Categorical(names, categories=pd.Index(levels, dtype="str"))
 
     def _plots(self, plots: Sequence[str]) -> None:
         named = self.frame["plot"] != ""
@@ -227,13 +232,13 @@ class _FileRows:
 def _add_lines(tables: dict[str, pd.DataFrame], derived: list[pd.DataFrame], settings: Settings) -> None:
     """Derive the lines of the surveys that have no table of lines."""
     with_table = {name for served in files_of(settings, _LINES).values() for name in served}
-    rows = pd.concat(derived, ignore_index=True)
+    rows = stack_frames(derived)
     lines = derive_lines(rows[~rows["survey"].isin(with_table)], settings)
     parts = [tables[_LINES]] if _LINES in tables else []
     start = len(parts[0]) if parts else 0
     lines["row_id"] = np.arange(start, start + len(lines), dtype="int64")
     columns = ["row_id", "file", "row", *LINE_KEY, "length_m", "slope_deg", "date", "used"]
-    tables[_LINES] = pd.concat([*parts, lines[columns]], ignore_index=True)
+    tables[_LINES] = stack_frames([*parts, lines[columns]])
 
 
 def _not_counted(settings: Settings) -> list[pd.DataFrame]:

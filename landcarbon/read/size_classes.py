@@ -132,6 +132,8 @@ def _bad_rows(mapped: Mapped, *, classes: list[str], source: np.ndarray, kind: n
 def _fill(frame: pd.DataFrame, settings: Settings, classes: list[str], kind: np.ndarray) -> dict[str, np.ndarray]:
     """Write class, figure and length of line into the rows of the classes; return the figures below zero."""
     below = {}
+    levels = frame["size_class"].cat.categories.union(pd.Index(classes, dtype="str"))
+    frame["size_class"] = frame["size_class"].cat.set_categories(levels)
     for number, name in enumerate(classes):
         rows, one = kind == number, settings.dead_wood.classes[name]
         values = frame.loc[rows, class_column(name)].to_numpy()

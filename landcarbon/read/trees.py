@@ -7,13 +7,13 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
-from pandas.api.types import union_categoricals
 
 from landcarbon.errors import InputFileError
 from landcarbon.inventory.models import Settings
 from landcarbon.read.mapping import Mapped, read_mapped, wanted_in
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
+from landcarbon.read.stack import stack_frames
 from landcarbon.read.surveys import day_text, files_of, survey_by_date, survey_by_label
 
 __all__ = ["STATUS_DEFAULTS", "TreeRows", "read_trees"]
@@ -90,7 +90,7 @@ def read_trees(settings: Settings, log: FileLog) -> TreeRows:
         start += len(mapped.frame)
     if not settings.status:
         findings += _understood(codes)
-    return TreeRows(_joined(parts), findings)
+    return TreeRows(stack_frames(parts), findings)
 
 
 class _FileRows:
@@ -247,17 +247,3 @@ def _understood(codes: Sequence[dict[str, tuple[str, int]]]) -> list[pd.DataFram
 
 def _status_category(places: np.ndarray) -> pd.Categorical:
     return pd.Categorical.from_codes(places.astype("int8"), pd.Index(STATUS_NAMES, dtype="str"))
-
-
-def _joined(parts: Sequence[pd.DataFrame]) -> pd.DataFrame:
-    """Stack the files; categories are united and sorted, those of file and survey keep their order."""
-    if len(parts) == 1:
-        return parts[0].reset_index(drop=True)
-    columns: dict[str, pd.Categorical | pd.Series] = {}
-    for name in _COLUMNS:
-        pieces = [part[name] for part in parts]
-        if isinstance(pieces[0].dtype, pd.CategoricalDtype):
-            columns[name] = union_categoricals(pieces, sort_categories=name not in ("file", "survey", "status"))
-        else:
-            columns[name] = pd.concat(pieces, ignore_index=True)
-    return pd.DataFrame(columns)
