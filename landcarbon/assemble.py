@@ -75,8 +75,19 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
         run={"inputs": inputs.files.to_dict(orient="records"), "equations": _equations_used(stage)},
         crs=inputs.crs,
         area_method=inputs.area_method,
+        samples=_samples(inputs.samples, all_findings),
         marks=_marks(stage, settings, stocks, all_findings, counts),
     )
+
+
+def _samples(samples: dict[str, pd.DataFrame], findings: pd.DataFrame) -> dict[str, pd.DataFrame]:
+    """Sample tables with ``used`` as it ended: modules of the pools set rows aside after reading."""
+    aside = findings[~findings["used"]].dropna(subset="row_id")
+    ended = {}
+    for name, rows in samples.items():
+        lost = rows["row_id"].isin(aside.loc[aside["table"] == name, "row_id"])
+        ended[name] = rows.assign(used=rows["used"].to_numpy(dtype=bool) & ~lost.to_numpy(dtype=bool))
+    return ended
 
 
 def refuse_nothing(results: Results) -> None:

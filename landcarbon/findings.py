@@ -125,20 +125,22 @@ def _as_text(values: pd.Series) -> np.ndarray:
 
 def _typed(data: dict[str, Any], count: int) -> pd.DataFrame:
     index = pd.RangeIndex(count)
-    columns: dict[str, pd.Series] = {}
+    columns: dict[str, Any] = {}
     for name in FINDING_COLUMNS:
         value = data[name]
         if name in _TEXT:
-            text = pd.Series(value, index=index, dtype="object") if isinstance(value, str) else _text(value, index)
-            columns[name] = text.astype("str")
+            text = np.full(count, value, dtype=object) if isinstance(value, str) else _text(value, index)
+            columns[name] = pd.array(text, dtype="str")
         elif name == "used":
-            columns[name] = pd.Series(value, index=index, dtype=bool)
+            columns[name] = np.broadcast_to(np.asarray(value, dtype=bool), count)
+        elif name == "carbon_kg":
+            columns[name] = np.broadcast_to(np.asarray(value, dtype="float64"), count)
         else:
-            column = pd.Series(value, index=index)
-            columns[name] = column.astype("float64") if name == "carbon_kg" else column.astype("Int64")
-    return pd.DataFrame(columns)
+            numbers = [value] * count if value is pd.NA else value
+            columns[name] = pd.Series(numbers, index=index).astype("Int64")
+    return pd.DataFrame(columns, index=index)
 
 
-def _text(value: Any, index: pd.RangeIndex) -> pd.Series:
+def _text(value: Any, index: pd.RangeIndex) -> np.ndarray:
     column = pd.Series(value if not isinstance(value, pd.Series) else value.to_numpy(), index=index, dtype="object")
-    return column.where(column.notna(), "").map(str)
+    return column.where(column.notna(), "").map(str).to_numpy(dtype=object)

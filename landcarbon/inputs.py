@@ -39,7 +39,7 @@ class Inputs:
     findings : DataFrame
         Findings of reading and checking.
     files : DataFrame
-        file, sha256, bytes, rows, role of every file read.
+        file, sheet, sha256, bytes, rows, role of every file read.
     crs : str or None
         Coordinate system of x, y and the parcels.
     area_method : str

@@ -170,12 +170,15 @@ def expansion_factors(trees: pd.DataFrame, visits: pd.DataFrame, index: np.ndarr
         if design.area_ha:
             area = np.where(np.isfinite(area), area, design.area_ha[0])
         return np.where(inside, weight * (per_visit / area)[at], np.nan)
+    factor = weight * per_visit[at]
     if len(design.area_ha) == 1:
-        by_class = np.full(len(trees), 1.0 / design.area_ha[0])
+        factor /= design.area_ha[0]
     else:
-        ring = np.searchsorted(np.asarray(design.dbh_min_cm), dbh, side="right") - 1
-        by_class = np.where(ring >= 0, 1.0 / np.asarray(design.area_ha)[np.maximum(ring, 0)], np.nan)
-    return np.where(inside, by_class * weight * per_visit[at], np.nan)
+        # Position -1, below the smallest limit, takes the last entry: none.
+        per_ring = np.append(1.0 / np.asarray(design.area_ha), np.nan)
+        factor *= per_ring[np.searchsorted(np.asarray(design.dbh_min_cm), dbh, side="right") - 1]
+    factor[~inside] = np.nan
+    return factor
 
 
 def plot_sums(trees: pd.DataFrame, index: np.ndarray, count: int, *, conifer: np.ndarray) -> PlotSums:

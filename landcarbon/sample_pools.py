@@ -204,24 +204,34 @@ def _inside(inputs: Inputs) -> tuple[Inputs, pd.DataFrame]:
     lone = set(inputs.plots.loc[~inputs.plots["inside"].to_numpy(dtype=bool), "plot"].astype("str"))
     if not lone:
         return inputs, join_findings([])
+    unplaced = inputs.plots[["x", "y"]].isna().any(axis=1)
+    lost = set(inputs.plots.loc[unplaced, "plot"].astype("str"))
     samples, findings = {}, []
     for name, rows in inputs.samples.items():
         away = rows["plot"].astype("str").isin(lone) & rows["used"]
+        nowhere = rows["plot"].astype("str").isin(lost)
         samples[name] = rows[~away].reset_index(drop=True)
-        findings.append(
-            make_findings(
-                "plot outside",
-                rows[away],
-                severity="note",
-                table=name,
-                column="plot",
-                used=False,
-                message="The plot lies outside every parcel, so it says nothing about the land of the inventory; the "
-                "row is not counted.",
-                remedy="Nothing if this is so; otherwise correct the coordinates of the plot or name its parcel.",
-            )
-        )
+        findings += [_outside(rows[away & nowhere], name, nowhere=True), _outside(rows[away & ~nowhere], name)]
     return replace(inputs, samples=samples), join_findings(findings)
+
+
+def _outside(rows: pd.DataFrame, table: str, *, nowhere: bool = False) -> pd.DataFrame:
+    if nowhere:
+        message = "The plot has no usable coordinates and names no parcel, so it lies in no known parcel; the row is "
+        remedy = "Enter the coordinates of the plot, or name its parcel in the plots table."
+    else:
+        message = "The plot lies outside every parcel, so it says nothing about the land of the inventory; the row is "
+        remedy = "Nothing if this is so; otherwise correct the coordinates of the plot or name its parcel."
+    return make_findings(
+        "plot without place" if nowhere else "plot outside",
+        rows,
+        severity="error" if nowhere else "note",
+        table=table,
+        column="plot",
+        used=False,
+        message=message + "not counted.",
+        remedy=remedy,
+    )
 
 
 def _species(assignments: pd.DataFrame) -> pd.DataFrame:

@@ -1,9 +1,9 @@
-"""Follow a published figure back to the plots and trees it was worked out from."""
+"""Follow a published figure back to the plots, trees and samples it was worked out from."""
 
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
@@ -11,6 +11,8 @@ import pandas as pd
 from allometry.roots import level
 from landcarbon.constants import KG_PER_T
 from landcarbon.errors import UserError
+from landcarbon.inventory.measured import PART_TABLES
+from landcarbon.inventory.models import SAMPLE_TABLES
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.publish.results import Results, parts_of_plots, sums_of_plots
 
@@ -19,6 +21,7 @@ __all__ = ["Trace", "trace_unit", "tree_shares"]
 _MOST_NAMES = 12
 #: Parts of pools that are worked out from trees.
 _TREE_PARTS = {"above_ground": ("trees",), "below_ground": ("roots",), "dead_wood": ("standing", "dead_roots")}
+_TREES = "trees"
 
 
 @dataclass(frozen=True)
@@ -39,9 +42,14 @@ class Trace:
         part, mass_kg (dry), mass_t_ha (of the plot) and density_t_c_ha, the row's own contribution [t C per ha of its
         plot], NaN where the pool is not worked out tree by tree.
     set_aside : DataFrame
-        Findings of rows on those plots that were set aside.
+        Findings of rows on those plots that were set aside: rows of the tables the pool rests on, and of none that
+        holds a single pool, such as visits.
     notes : tuple of str
         How the figures of the plots come about where trees alone do not explain them.
+    samples : dict of DataFrame
+        By table, the sample rows of that survey on those plots behind the parts of the pool, used or not, plot by plot.
+    one_plot : bool
+        Whether one plot was asked for.
     """
 
     row: pd.Series
@@ -50,6 +58,8 @@ class Trace:
     trees: pd.DataFrame
     set_aside: pd.DataFrame
     notes: tuple[str, ...] = ()
+    samples: dict[str, pd.DataFrame] = field(default_factory=dict)
+    one_plot: bool = False
 
 
 def trace_unit(
@@ -102,10 +112,21 @@ def trace_unit(
     model = str(results.settings_summary.get("root_model") or "")
     shares = tree_shares(trees, pool, _counted(here), model)
     findings = results.findings
+    tables = _tables(pool, here)
+    foreign = {_TREES, *SAMPLE_TABLES} - set(tables)
     aside = findings[~findings["used"] & (findings["survey"] == when) & findings["plot"].isin(names)]
+    aside = aside[~aside["table"].astype("str").isin(foreign)]
     table, columns = _with_figures(plots.reset_index(drop=True), here, pool, shares)
-    notes = _notes(pool, here, model)
-    return Trace(row, table, columns, shares, aside.reset_index(drop=True), notes)
+    return Trace(
+        row,
+        table,
+        columns,
+        shares,
+        aside.reset_index(drop=True),
+        _notes(pool, here, model),
+        samples=_samples(results, tables, when, names),
+        one_plot=plot is not None,
+    )
 
 
 def tree_shares(trees: pd.DataFrame, pool: str, counted: Iterable[str], root_model: str = "") -> pd.DataFrame:
@@ -175,6 +196,36 @@ def _plot_fraction(live: pd.DataFrame) -> pd.Series:
     return (mass * live["carbon_fraction"]).groupby(plot).transform("sum") / mass.groupby(plot).transform("sum")
 
 
+def _tables(pool: str, here: pd.DataFrame) -> list[str]:
+    """Tables of rows that the parts of a pool rest on: trees, then samples in canonical order."""
+    found: set[str] = set()
+    for name in _counted(here) if pool == "all" else [pool]:
+        parts = set(parts_of_plots(here, name)["part"].astype("str"))
+        own = _TREE_PARTS.get(name, ())
+        if own and (not parts or parts & set(own)):
+            found.add(_TREES)
+        found.update(table for part in parts for table in PART_TABLES.get(name, {}).get(part, ()))
+    if "pieces" in found:
+        found.add("lines")
+    return [table for table in (_TREES, *SAMPLE_TABLES) if table in found]
+
+
+def _samples(results: Results, tables: list[str], when: str, names: pd.Series) -> dict[str, pd.DataFrame]:
+    """Sample rows of the plots, in the order of the plots and then of the file."""
+    place = {name: number for number, name in enumerate(names)}
+    found = {}
+    for table in tables:
+        rows = results.samples.get(table)
+        if rows is None:
+            continue
+        here = rows["plot"].astype("str").map(place).astype("float64")
+        keep = here.notna() & rows["survey"].astype("str").eq(when)
+        order = here[keep].sort_values(kind="stable").index
+        if len(order):
+            found[table] = rows.loc[order].reset_index(drop=True)
+    return found
+
+
 def _counted(plots: pd.DataFrame) -> list[str]:
     return [name for name in plots["pool"].astype("str").drop_duplicates() if name != "all"]
 
@@ -231,6 +282,7 @@ def _notes(pool: str, here: pd.DataFrame, model: str) -> tuple[str, ...]:
     others = [text for text in (_without_trees(name, here) for name in wanted) if text]
     if others:
         notes.append(f"No tree enters {'; '.join(others)}: worked out per plot from samples or a default factor.")
+    notes += [text for name in wanted for text in _methods(name, here)]
     if sums_of_plots(here, pool)["density_t_c_ha"].isna().any():
         notes.append(
             "A plot without a figure was not measured for every part of it; each part is estimated from the plots it "
@@ -246,6 +298,19 @@ def _without_trees(pool: str, here: pd.DataFrame) -> str:
     if pool not in _TREE_PARTS:
         return pool
     return f"{pool} ({', '.join(others)})" if others else ""
+
+
+def _methods(pool: str, here: pd.DataFrame) -> list[str]:
+    """Say how the parts that do not come from trees were worked out."""
+    parts = parts_of_plots(here, pool)
+    if "method" not in parts:
+        return []
+    told = parts[["part", "method", "known"]].astype("object")
+    told = told[told["method"].notna() & ~told["part"].isin(_TREE_PARTS.get(pool, ()))].drop_duplicates()
+    return [
+        f"{pool} ({row.part}): {row.method}{'; a factor from memory' if row.known == 'memory' else ''}."
+        for row in told.itertuples(index=False)
+    ]
 
 
 def _published(results: Results, parcel: str | None, stratum: str | None, survey: str | None, pool: str) -> pd.Series:

@@ -8,6 +8,8 @@ import pandas as pd
 from shapely.geometry import Polygon
 
 from landcarbon.findings import join_findings, make_findings
+from landcarbon.inventory.columns import table_columns
+from landcarbon.inventory.models import SAMPLE_TABLES
 from landcarbon.publish.results import CHANGE_COLUMNS, STOCK_COLUMNS, Results
 
 SURVEYS = ("2014", "2019", "2024")
@@ -55,6 +57,7 @@ def sample_results(name: str = "Harrow Fell", parcels: tuple[str, ...] = PARCELS
             "12 % of the biomass stands in trees beyond the diameter range of their equation.",
             "Survey 2014: stratum alder could not be estimated; 3.75 ha not in the total of the inventory.",
         ],
+        samples={table: _samples(table) for table in SAMPLE_TABLES},
     )
 
 
@@ -146,6 +149,25 @@ def _trees() -> pd.DataFrame:
             "used": [True, True, False, True, False, True],
         }
     )
+
+
+def _samples(table: str) -> pd.DataFrame:
+    """Return three rows of a table with all its columns; the last was set aside."""
+    count = 3
+    columns: dict[str, object] = {
+        "row_id": np.arange(count),
+        "file": pd.Categorical([f"{table}.csv"] * count),
+        "row": np.array([2, 3, 4], dtype="int32"),
+    }
+    for place, spec in enumerate(table_columns(table).values()):
+        if spec.kind == "number":
+            columns[spec.becomes] = np.array([0.25, 0.5, np.nan]) + place
+        elif spec.kind == "date":
+            columns[spec.becomes] = pd.to_datetime(["2014-06-02", None, "2014-06-03"])
+        else:
+            columns[spec.becomes] = pd.Categorical(["a", "", "b"])
+    columns |= {"survey": pd.Categorical(["2014"] * count), "plot": pd.Categorical(["P1", "P2", "P1"])}
+    return pd.DataFrame(columns | {"used": [True, True, False]})
 
 
 def _plots() -> pd.DataFrame:

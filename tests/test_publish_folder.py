@@ -17,6 +17,7 @@ from publish_sample import sample_results
 from landcarbon.errors import ResultsError
 from landcarbon.publish import folder as folder_module
 from landcarbon.publish.folder import RESULT_FILES, check_target, open_results, write_results
+from landcarbon.publish.results import SAMPLE_FILES
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
 
 TABLES = ("stocks.csv", "change.csv", "findings.csv", "reconciliation.csv", "trees.parquet", "plots.parquet")
@@ -33,14 +34,14 @@ def beside(out: Path) -> list[str]:
 def test_folder_is_complete_and_alone(tmp_path):
     out = write_results(sample_results(), tmp_path / "results")
     assert out == (tmp_path / "results").resolve()
-    assert sorted(contents(out)) == sorted(RESULT_FILES)
+    assert sorted(contents(out)) == sorted([*RESULT_FILES, *SAMPLE_FILES.values()])
     assert beside(out) == ["results"]
 
 
 def test_rerun_gives_the_same_bytes(tmp_path):
     first = contents(write_results(sample_results(), tmp_path / "one"))
     second = contents(write_results(sample_results(), tmp_path / "two"))
-    for name in (*TABLES, "README.txt", "map.html"):
+    for name in (*TABLES, *SAMPLE_FILES.values(), "README.txt", "map.html"):
         assert first[name] == second[name], name
 
 
@@ -49,6 +50,9 @@ def test_read_back(tmp_path):
     back = open_results(write_results(written, tmp_path / "results"))
     for name in ("stocks", "change", "findings", "reconciliation", "trees", "plots", "plot_points", "surveys"):
         assert_frame_equal(getattr(back, name), getattr(written, name), check_dtype=False, check_categorical=False)
+    assert list(back.samples) == list(written.samples) == list(SAMPLE_FILES)
+    for name, table in written.samples.items():
+        assert_frame_equal(back.samples[name], table)
     assert back.settings_summary == written.settings_summary
     assert (back.name, back.confidence, back.crs) == (written.name, written.confidence, written.crs)
     assert back.marks == written.marks
@@ -83,12 +87,42 @@ def test_provenance(tmp_path):
 def test_readme_names_every_file_and_column(tmp_path):
     out = write_results(sample_results(), tmp_path / "results")
     text = (out / "README.txt").read_text(encoding="utf-8")
-    for name in set(RESULT_FILES) - {"README.txt"}:
+    for name in {*RESULT_FILES, *SAMPLE_FILES.values()} - {"README.txt"}:
         assert name in text, name
     flat = " ".join(text.split())
     for sentence in (CAUTIONS, SIGN_RULE, *sample_results().marks):
         assert " ".join(sentence.split()) in flat
     assert "90 % interval" in flat
+
+
+def test_only_the_samples_there_are_get_a_file(tmp_path):
+    sample = sample_results()
+    few = dataclasses.replace(sample, samples={"soil": sample.samples["soil"]})
+    out = write_results(sample, tmp_path / "results")
+    write_results(few, out)  # those of the run before do not stay
+    assert sorted(contents(out)) == sorted([*RESULT_FILES, "samples_soil.parquet"])
+    assert list(open_results(out).samples) == ["soil"]
+    text = (out / "README.txt").read_text(encoding="utf-8")
+    assert "COLUMNS of samples_soil.parquet" in text
+    assert "samples_litter.parquet" not in text
+    write_results(dataclasses.replace(sample, samples={}), out)
+    assert sorted(contents(out)) == sorted(RESULT_FILES)
+    assert open_results(out).samples == {}
+
+
+def test_samples_that_went_missing_are_told(tmp_path):
+    out = write_results(sample_results(), tmp_path / "results")
+    (out / "samples_soil.parquet").unlink()
+    with pytest.raises(ResultsError, match=r"incomplete: samples_soil\.parquet missing.*Run the inventory again"):
+        open_results(out)
+
+
+def test_results_from_before_samples_were_published_still_open(tmp_path):
+    out = write_results(dataclasses.replace(sample_results(), samples={}), tmp_path / "results")
+    record = json.loads((out / "run.json").read_text(encoding="utf-8"))
+    del record["samples"]
+    (out / "run.json").write_text(json.dumps(record), encoding="utf-8")
+    assert open_results(out).samples == {}
 
 
 def test_interrupted_run_leaves_the_old_results_whole(tmp_path, monkeypatch):

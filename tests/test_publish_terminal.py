@@ -7,12 +7,15 @@ import io
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 from publish_sample import HOSTILE, sample_results
 from rich.console import Console
 
 from landcarbon.errors import UserError
+from landcarbon.findings import join_findings, make_findings
 from landcarbon.publish.figures import MINUS, decimals_for, figure, interval
+from landcarbon.publish.provenance import count_findings
 from landcarbon.publish.terminal import StepStatus, print_check, print_results
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
 
@@ -100,6 +103,83 @@ def test_no_total_shows_the_strata_instead():
     text = shown(print_results, dataclasses.replace(sample, stocks=stocks, change=change))
     assert "Stocks by stratum" in text
     assert "Change of" not in text
+
+
+def no_total(**figures):
+    """Results of strata without a total, with two more pools; figures replace those of the strata."""
+    sample = sample_results()
+    strata = sample.stocks[sample.stocks["by"] == "stratum"].assign(**figures)
+    pools = [strata.assign(pool=pool) for pool in ("dead_wood", "soil", "all")]
+    stocks = pd.concat([*pools, sample.stocks[sample.stocks["by"] == "parcel"]], ignore_index=True)
+    return dataclasses.replace(sample, stocks=stocks, change=sample.change.iloc[:0])
+
+
+def test_no_total_shows_every_counted_pool_of_the_strata():
+    text = shown(print_results, no_total())
+    assert "every counted pool (there is no total)" in text
+    lines = text.splitlines()
+    first = next(place for place, line in enumerate(lines) if line.strip().startswith("oak"))
+    block = lines[first : first + 9]
+    for place, pool in enumerate(("dead wood", "soil", "all")):
+        assert all(f" {pool} " in line for line in block[place::3]), pool
+    assert sum("oak" in line for line in block) == 1
+    assert " ha " in text
+    assert max(map(len, lines)) <= 100
+    large = no_total(stock_t_c=1.2e8, stock_se=1.0, stock_low=1e8, stock_high=1.3e8, area_ha=1e6)
+    assert max(map(len, shown(print_results, large).splitlines())) <= 100
+
+
+def test_no_total_and_no_areas_shows_densities_alone():
+    text = shown(print_results, no_total(area_ha=np.nan, stock_t_c=np.nan, stock_se=np.nan))
+    head = next(line for line in text.splitlines() if line.split()[:1] == ["stratum"])
+    assert head.split() == ["stratum", "survey", "pool", "plots", "t", "C/ha", "SE", "90", "%", "interval"]
+
+
+def test_land_that_was_not_estimated_has_no_area_of_zero():
+    sample = sample_results()
+    here = sample.stocks["by"].eq("inventory") & sample.stocks["pool"].eq("below_ground")
+    here &= sample.stocks["survey"].eq("2019")
+    figures = [name for name in sample.stocks if name.startswith(("density", "stock")) or name == "df"]
+    stocks = sample.stocks.copy()
+    stocks.loc[here, figures] = np.nan
+    stocks.loc[here, ["area_ha", "plots"]] = 0
+    text = shown(print_results, dataclasses.replace(sample, stocks=stocks))
+    line = next(line for line in text.splitlines() if "not estimable" in line and "below-ground" in line)
+    assert line.split()[3:5] == ["\u2013", "0"]
+    assert "0.0" not in line
+
+
+def many_findings():
+    parts = [
+        make_findings(f"{severity} {number:02d}", None, severity=severity, table="trees", message="x", carbon_kg=carbon)
+        for severity, carbon in (("note", 9e6), ("warning", np.nan), ("error", np.nan))
+        for number in range(8)
+    ]
+    two = pd.DataFrame({"row": [2, 3]})
+    parts += [
+        make_findings("often", two, severity="warning", table="trees", message="x"),
+        make_findings("light", None, severity="warning", table="trees", message="x", carbon_kg=40.0),
+        make_findings("heavy", two, severity="warning", table="trees", message="x", carbon_kg=30.0),
+    ]
+    return dataclasses.replace(sample_results(), findings=join_findings(parts))
+
+
+def test_findings_errors_first_then_by_carbon_then_by_count():
+    """Identity: two rows of 30 kg outweigh one of 40 kg; what has no carbon stands by its count."""
+    counts = count_findings(many_findings().findings)
+    assert list(counts["severity"].drop_duplicates()) == ["error", "warning", "note"]
+    assert list(counts.loc[counts["severity"] == "warning", "rule"])[:4] == ["heavy", "light", "often", "warning 00"]
+    assert counts.set_index("rule")["carbon_kg"][["heavy", "light"]].tolist() == [60.0, 40.0]
+    assert counts.set_index("rule")["carbon_kg"].isna()["often"]
+
+
+def test_twenty_rules_are_shown_and_the_rest_counted():
+    text = shown(print_results, many_findings())
+    section = text.split("Findings (", 1)[1]
+    assert section.startswith("7 more rules in findings.csv)")
+    lines = [line.split()[0] for line in section.splitlines() if line.strip().startswith(("error", "warning", "note"))]
+    assert lines == ["error"] * 8 + ["warning"] * 11 + ["note"]
+    assert max(map(len, text.splitlines())) <= 100
 
 
 def test_check():

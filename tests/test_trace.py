@@ -14,7 +14,10 @@ from rich.console import Console
 from allometry.roots import stand_roots, tree_roots
 from landcarbon.api import open_inventory
 from landcarbon.errors import UserError
-from landcarbon.publish.results import parts_of_plots, sums_of_plots
+from landcarbon.inventory import load_settings
+from landcarbon.pipeline import read_and_check
+from landcarbon.publish.folder import open_results, write_results
+from landcarbon.publish.results import SAMPLE_FILES, parts_of_plots, sums_of_plots
 from landcarbon.publish.terminal_trace import print_trace
 from landcarbon.trace import trace_unit, tree_shares
 
@@ -162,6 +165,110 @@ def test_names_match_without_regard_to_case(demo):
         trace_unit(demo, parcel="Owl Bank", plot="zz")
     with pytest.raises(UserError, match="a parcel and a stratum were given"):
         trace_unit(demo, parcel="Owl Bank", stratum="beech")
+
+
+@pytest.fixture(scope="module")
+def sampled(demo):
+    """Results with the sample tables, marked as used where no finding set the row aside."""
+    tables = demo.samples or read_and_check(load_settings(ROOT / "demo_parcels" / "inventory.toml")).samples
+    aside = demo.findings[~demo.findings["used"]]
+    marked = {}
+    for name, rows in tables.items():
+        gone = aside.loc[aside["table"] == name, "row_id"].dropna()
+        marked[name] = rows.assign(used=rows["used"] & ~rows["row_id"].isin(gone))
+    return dataclasses.replace(demo, samples=marked)
+
+
+@pytest.mark.parametrize(
+    ("pool", "tables"),
+    [
+        ("above_ground", {"saplings", "ground_vegetation"}),
+        ("below_ground", set()),
+        ("dead_wood", {"pieces", "lines", "stumps"}),
+        ("litter", {"litter"}),
+        ("soil", {"soil"}),
+        ("all", {"saplings", "ground_vegetation", "pieces", "lines", "stumps", "litter", "soil"}),
+    ],
+)
+def test_samples_behind_the_parts_of_a_pool(sampled, pool, tables):
+    trace = trace_unit(sampled, pool=pool, survey="2014")
+    assert set(trace.samples) == tables
+    plots = set(trace.plots["plot"].astype("str"))
+    for name, rows in trace.samples.items():
+        assert set(rows["survey"].astype("str")) == {"2014"}
+        every = sampled.samples[name]
+        here = every["survey"].astype("str").eq("2014") & every["plot"].astype("str").isin(plots)
+        assert sorted(rows["row_id"]) == sorted(every.loc[here, "row_id"])
+    allowed = tables | {"trees"} if pool not in ("litter", "soil") else tables
+    rows = {"trees", *SAMPLE_FILES}
+    assert set(trace.set_aside["table"]) & rows <= allowed
+
+
+def test_litter_of_a_frame_can_be_worked_out_from_what_is_shown(sampled):
+    """Identity: mean over frames of fresh x dry share x 0.37 (IPCC 2006 Vol 4 Ch 2) / 0.0625 m2, in t/ha."""
+    trace = trace_unit(sampled, parcel="Owl Bank", survey="2024", pool="litter", plot="D01")
+    rows = trace.samples["litter"]
+    rows = rows[rows["used"] & (rows["layer"].astype("str") == "L")]
+    frames = rows["fresh_kg"] * rows["sub_dry_g"] / rows["sub_fresh_g"] * 0.37 / 0.0625 * 10
+    assert frames.mean() == pytest.approx(trace.plots["litter.litter"].item(), rel=1e-9)
+
+
+def test_faults_of_soil_do_not_show_under_litter(sampled):
+    soil = sampled.findings[~sampled.findings["used"] & sampled.findings["table"].eq("soil")]
+    one = soil[soil["rule"] != "plot outside"].iloc[0]
+    litter = trace_unit(sampled, survey=one["survey"], pool="litter", plot=one["plot"])
+    assert "soil" not in set(litter.set_aside["table"])
+    shows = trace_unit(sampled, survey=one["survey"], pool="soil", plot=one["plot"])
+    assert one["row_id"] in set(shows.set_aside["row_id"])
+    assert not shows.samples["soil"].set_index("row_id")["used"][one["row_id"]]
+    text = shown(shows, 0)
+    assert f"{one['file']} {one['row']}" in text
+    assert "set aside" in text.split("Samples, soil", 1)[1].splitlines()[0]
+    line = next(line for line in text.splitlines() if line.strip().startswith(f"{one['file']} {one['row']} "))
+    assert line.split()[-1] == "no"
+
+
+def test_samples_are_limited_as_trees_are(sampled):
+    trace = trace_unit(sampled, parcel="Owl Bank", survey="2024", pool="soil")
+    count = len(trace.samples["soil"])
+    text = shown(trace, 2)
+    assert f"Samples, soil: {count} rows, listed: the first 2" in text
+    assert f"... and {count - 2} more; --trees {count} lists all, --plot NAME those of one plot." in text
+    assert sum(line.strip().startswith("soil.csv") for line in text.splitlines()) == 2
+    for heading in ("bulk density g/cm3", "organic carbon share", "top cm"):
+        assert heading in text, heading
+    whole = shown(trace_unit(sampled, parcel="Owl Bank", survey="2024", pool="soil", plot="E01"), 0)
+    assert sum(line.strip().startswith("soil.csv") for line in whole.splitlines()) == count
+    assert "more; --trees" not in whole
+    assert "soil (soil): fixed depth 30 cm." in whole
+
+
+@pytest.mark.parametrize("width", [60, 200])
+def test_samples_on_a_narrow_terminal_keep_file_and_line(sampled, width):
+    text = shown(trace_unit(sampled, parcel="Owl Bank", survey="2024", pool="dead_wood"), width=width)
+    assert "wood_2024.xlsx#wood 194" in text
+
+
+def test_samples_read_back_are_traced_alike(sampled, tmp_path):
+    back = open_results(write_results(sampled, tmp_path / "results"))
+    for pool in ("soil", "dead_wood"):
+        written, read = (shown(trace_unit(one, parcel="Owl Bank", pool=pool), 5) for one in (sampled, back))
+        assert read == written
+
+
+def test_text_of_samples_is_no_markup(sampled):
+    rows = sampled.samples["litter"]
+    layers = rows["layer"].astype("str").where(rows["layer"].astype("str") != "L", "[red]x[/red]\x1b[31m")
+    hostile = dataclasses.replace(sampled, samples={"litter": rows.assign(layer=layers)})
+    text = shown(trace_unit(hostile, pool="litter", survey="2014"))
+    assert "[red]x[/red]" in text
+    assert "\x1b" not in text
+
+
+def test_results_without_samples_are_traced_as_before(sampled):
+    trace = trace_unit(dataclasses.replace(sampled, samples={}), pool="soil", survey="2014")
+    assert trace.samples == {}
+    assert "Samples" not in shown(trace)
 
 
 def test_ambiguous_names_must_be_written_as_they_are(demo):

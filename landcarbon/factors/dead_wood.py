@@ -162,6 +162,7 @@ def world_carbon_fraction() -> float:
     return float(table.loc[table["choice"] == "world", "value"].iloc[0])
 
 
+@cache
 def fresh_density(group: str, domain: str) -> float:
     """Density of sound wood where only the group is known [g/cm3].
 
@@ -182,6 +183,7 @@ def fresh_density(group: str, domain: str) -> float:
     return float((rows if own.empty else own)["value"].iloc[0])
 
 
+@cache
 def rule(name: str) -> float:
     """Value of a limit or default of the project; its reason stands in ``dead_wood_rules.csv``."""
     rows = _table("rules")

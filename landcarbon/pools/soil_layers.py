@@ -374,7 +374,10 @@ def _codes(samples: pd.DataFrame, name: str) -> np.ndarray:
     """Rank of each label among the labels of its column; blank ranks first."""
     if name not in samples:
         return np.zeros(len(samples), dtype=np.int64)
-    codes, labels = pd.factorize(samples[name], use_na_sentinel=True)
+    if isinstance(samples[name].dtype, pd.CategoricalDtype):
+        codes, labels = samples[name].cat.codes.to_numpy(), samples[name].cat.categories
+    else:
+        codes, labels = pd.factorize(samples[name], use_na_sentinel=True)
     rank = np.empty(len(labels) + 1, dtype=np.int64)
     text = np.asarray(pd.Index(labels).astype("str"), dtype=object)
     rank[np.argsort(text, kind="stable")] = np.arange(1, len(labels) + 1)

@@ -215,7 +215,15 @@ def dead_trees(trees: pd.DataFrame, plan: TreePlan, options: StandingOptions) ->
     position = plan.positions(trees["species"])
     component = plan.catalogue.table.set_index("equation_id")["component"]
     of_species = component.reindex(plan.assignments["equation_id"])
-    told = trees.assign(conifer=plan.conifer[position], component=_labels(of_species, position))
+    told = with_columns(
+        trees,
+        {
+            "conifer": plan.conifer[position],
+            "component": _labels(of_species, position),
+            "wood_density_g_cm3": plan.wood_density[position],
+            "live_height_m": trees["height_m"].to_numpy(),
+        },
+    )
     told, findings = dead_biomass(told, options)
     counted = has_status(trees["status"], "dead") & told["used"].to_numpy()
     fraction = trees["carbon_fraction"].to_numpy()
@@ -223,7 +231,7 @@ def dead_trees(trees: pd.DataFrame, plan: TreePlan, options: StandingOptions) ->
     told = told.assign(carbon_kg=carbon)
     if options.roots == "dead_wood":
         told = told.assign(dead_root_carbon_kg=np.where(counted, told["dead_root_kg"].to_numpy() * fraction, 0.0))
-    return told.drop(columns=["component", "dead_root_kg"]), findings
+    return told.drop(columns=["component", "dead_root_kg", "wood_density_g_cm3", "live_height_m"]), findings
 
 
 def label_trees(trees: pd.DataFrame, plan: TreePlan) -> pd.DataFrame:

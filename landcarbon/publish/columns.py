@@ -5,13 +5,19 @@ from __future__ import annotations
 import csv
 import re
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from importlib import resources
+
+from landcarbon.inventory.columns import table_columns
+from landcarbon.inventory.models import SAMPLE_TABLES
 
 __all__ = ["Column", "columns_of", "describe", "described_tables"]
 
 _PLACE = re.compile(r"\{(survey|pair)\}")
+# Rows of columns.csv that hold for every file of samples; what else these hold is described as it is for reading.
+_SAMPLES = "samples_{table}.parquet"
+_FIRST = ("row_id", "file", "row")
 _SHOWN = {"survey": "SURVEY", "pair": "SINCE_UNTIL"}
 
 
@@ -50,7 +56,22 @@ class Column:
 @cache
 def _rows() -> tuple[Column, ...]:
     text = resources.files("landcarbon.publish").joinpath("columns.csv").read_text(encoding="utf-8")
-    return tuple(Column(**row) for row in csv.DictReader(text.splitlines()))
+    rows = [Column(**row) for row in csv.DictReader(text.splitlines())]
+    common = {row.column: row for row in rows if row.table == _SAMPLES}
+    plain = [row for row in rows if row.table != _SAMPLES]
+    samples = [row for table in SAMPLE_TABLES for row in _sample_rows(table, common)]
+    return (*plain, *samples)
+
+
+def _sample_rows(table: str, common: dict[str, Column]) -> list[Column]:
+    """Describe one file of samples: numbers are in the units the canonical tables carry them in."""
+    file = _SAMPLES.format(table=table)
+    own = {}
+    for spec in table_columns(table).values():
+        unit = "" if spec.unit == "1" else spec.unit
+        own[spec.becomes] = Column(file, spec.becomes, unit, spec.meaning[:1].lower() + spec.meaning[1:])
+    names = dict.fromkeys([*_FIRST, *own, *common])
+    return [replace(common[name], table=file) if name in common else own[name] for name in names]
 
 
 def described_tables() -> list[str]:

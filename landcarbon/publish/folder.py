@@ -23,7 +23,7 @@ from landcarbon.errors import ResultsError
 from landcarbon.publish.geopackage import read_parcels, read_plot_points, write_geopackage
 from landcarbon.publish.provenance import is_ours, read_provenance, write_provenance
 from landcarbon.publish.readme import write_readme
-from landcarbon.publish.results import Results
+from landcarbon.publish.results import SAMPLE_FILES, Results
 from landcarbon.publish.tables import read_table, write_table
 
 __all__ = ["RESULT_FILES", "check_target", "open_results", "write_results"]
@@ -118,7 +118,7 @@ def write_results(results: Results, out: Path, *, base_tiles: bool = False) -> P
         unfinished = target.with_name(f".{target.name}.unfinished-{uuid.uuid4().hex}")
         unfinished.mkdir()
         try:
-            for name, writer in _writers(base_tiles).items():
+            for name, writer in _writers(results, base_tiles).items():
                 writer(results, unfinished / name)
             _put_in_place(unfinished, target)
         finally:
@@ -155,7 +155,8 @@ def open_results(folder: Path) -> Results:
             where=str(folder),
             remedy="Name the folder that a run wrote",
         )
-    missing = [name for name in RESULT_FILES if not (place / name).is_file()]
+    samples = [SAMPLE_FILES[name] for name in _sample_names(record)]
+    missing = [name for name in (*RESULT_FILES, *samples) if not (place / name).is_file()]
     if missing:
         raise ResultsError(
             f"the results are incomplete: {', '.join(missing)} missing",
@@ -172,8 +173,9 @@ def open_results(folder: Path) -> Results:
         ) from error
 
 
-def _writers(base_tiles: bool) -> dict[str, Callable[[Results, Path], None]]:
+def _writers(results: Results, base_tiles: bool) -> dict[str, Callable[[Results, Path], None]]:
     return {
+        **{SAMPLE_FILES[name]: _sample_writer(name) for name in results.samples},
         "stocks.csv": lambda results, path: write_table(results.stocks, path),
         "change.csv": lambda results, path: write_table(results.change, path),
         "findings.csv": lambda results, path: write_table(results.findings, path),
@@ -189,6 +191,15 @@ def _writers(base_tiles: bool) -> dict[str, Callable[[Results, Path], None]]:
 
 def _write_parquet(frame: pd.DataFrame, path: Path) -> None:
     frame.to_parquet(path, engine="pyarrow", index=False, compression="zstd")
+
+
+def _sample_writer(name: str) -> Callable[[Results, Path], None]:
+    return lambda results, path: _write_parquet(results.samples[name], path)
+
+
+def _sample_names(record: dict[str, Any]) -> list[str]:
+    """Sample tables that a run wrote; those of runs before samples were published are none."""
+    return [name for name in record.get("samples", []) if name in SAMPLE_FILES]
 
 
 def _write_map(results: Results, path: Path, *, base_tiles: bool) -> None:
@@ -218,6 +229,7 @@ def _read(place: Path, record: dict[str, Any]) -> Results:
         crs=record["crs"],
         area_method=record["area_method"],
         marks=record["marks"],
+        samples={name: pd.read_parquet(place / SAMPLE_FILES[name]) for name in _sample_names(record)},
     )
 
 
@@ -259,7 +271,7 @@ def _recover(target: Path) -> None:
 
 def _retire(old: Path, target: Path) -> None:
     """Remove results that have been replaced, but carry over what the user had put beside them."""
-    ours = {*RESULT_FILES, *_SIDE_FILES}
+    ours = {*RESULT_FILES, *SAMPLE_FILES.values(), *_SIDE_FILES}
     for item in old.iterdir():
         if item.name not in ours and not (target / item.name).exists():
             os.replace(item, target / item.name)

@@ -45,6 +45,7 @@ def write_provenance(results: Results, path: Path) -> None:
         "crs": results.crs,
         "area_method": results.area_method,
         "has_parcels": results.parcels is not None,
+        "samples": list(results.samples),
         "findings": count_findings(results.findings).to_dict(orient="records"),
         "marks": list(results.marks),
         "cautions": CAUTIONS,
@@ -66,16 +67,20 @@ def count_findings(findings: pd.DataFrame) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        severity, rule, table, count, used, set_aside; errors first, then by falling count.
+        severity, rule, table, count, used, set_aside, carbon_kg [kg C at stake where it is known, else NaN]; errors
+        first, then warnings, then notes, each by falling carbon at stake and then by falling count.
     """
     if findings.empty:
-        return pd.DataFrame(columns=["severity", "rule", "table", "count", "used", "set_aside"])
+        return pd.DataFrame(columns=["severity", "rule", "table", "count", "used", "set_aside", "carbon_kg"])
     groups = findings.groupby(["severity", "rule", "table"], sort=True, observed=True)
     table = groups["used"].agg(count="size", used="sum").reset_index()
     table["set_aside"] = table["count"] - table["used"]
+    table["carbon_kg"] = groups["carbon_kg"].sum(min_count=1).to_numpy()
     table["rank"] = table["severity"].map({"error": 0, "warning": 1, "note": 2})
-    table = table.sort_values(["rank", "count", "rule"], ascending=[True, False, True], kind="stable")
-    return table.drop(columns="rank").reset_index(drop=True)
+    table["stake"] = table["carbon_kg"].fillna(0)
+    order = {"rank": True, "stake": False, "count": False, "rule": True}
+    table = table.sort_values(list(order), ascending=list(order.values()), kind="stable")
+    return table.drop(columns=["rank", "stake"]).reset_index(drop=True)
 
 
 def read_provenance(path: Path) -> dict[str, Any] | None:

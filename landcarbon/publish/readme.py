@@ -10,7 +10,7 @@ import jinja2
 
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.publish.columns import columns_of, describe
-from landcarbon.publish.results import CHANGE_COLUMNS, STOCK_COLUMNS, Results
+from landcarbon.publish.results import CHANGE_COLUMNS, SAMPLE_FILES, STOCK_COLUMNS, Results
 from landcarbon.publish.words import CAUTIONS, POOL_NAMES, SIGN_RULE
 
 __all__ = ["readme_text", "write_readme"]
@@ -48,6 +48,7 @@ def readme_text(results: Results) -> str:
         ],
         pools=[(pool, name) for pool, name in POOL_NAMES.items() if pool in present],
         tables=[(table, _table_lines(table, names, results)) for table, names in _written(results).items()],
+        samples=[(SAMPLE_FILES[name], name.replace("_", " ")) for name in results.samples],
         sign_rule=SIGN_RULE,
         area_method=results.area_method or "No areas were given.",
         marks=results.marks,
@@ -85,6 +86,7 @@ def _written(results: Results) -> dict[str, Iterable[str]]:
         "reconciliation.csv": map(str, results.reconciliation.columns),
         "trees.parquet": map(str, results.trees.columns),
         "plots.parquet": map(str, results.plots.columns),
+        **{SAMPLE_FILES[name]: map(str, frame.columns) for name, frame in results.samples.items()},
         **layers,
     }
     return {table: names for table, names in tables.items() if names}

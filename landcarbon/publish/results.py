@@ -7,10 +7,12 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
+from landcarbon.inventory.models import SAMPLE_TABLES
+
 if TYPE_CHECKING:
     import geopandas as gpd
 
-__all__ = ["CHANGE_COLUMNS", "STOCK_COLUMNS", "Results", "parts_of_plots", "sums_of_plots"]
+__all__ = ["CHANGE_COLUMNS", "SAMPLE_FILES", "STOCK_COLUMNS", "Results", "parts_of_plots", "sums_of_plots"]
 
 STOCK_COLUMNS = [
     "by",
@@ -53,6 +55,9 @@ CHANGE_COLUMNS = [
     "method",
 ]
 
+#: Files of the sample tables by the name of the table; a results folder holds those it has samples for.
+SAMPLE_FILES = {table: f"samples_{table}.parquet" for table in SAMPLE_TABLES}
+
 
 @dataclass(frozen=True)
 class Results:
@@ -90,6 +95,9 @@ class Results:
         One sentence on where the areas come from.
     marks : list of str
         Sentences that must stand on every output, such as the share of biomass beyond the diameter ranges.
+    samples : dict of DataFrame
+        Rows of the sample tables (pieces, lines, logs, stumps, litter, ground_vegetation, saplings, soil) by the name
+        of the table, as far as there are any, with ``used`` as it ended.
     """
 
     settings_summary: dict[str, Any]
@@ -106,6 +114,7 @@ class Results:
     crs: str | None = None
     area_method: str = ""
     marks: list[str] = field(default_factory=list)
+    samples: dict[str, pd.DataFrame] = field(default_factory=dict)
 
     @property
     def name(self) -> str:

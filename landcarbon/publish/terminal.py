@@ -18,6 +18,7 @@ from landcarbon.publish.terminal_tables import (
     reconciliation_table,
     rows_of,
     stocks_table,
+    strata_table,
 )
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
 
@@ -119,8 +120,9 @@ def print_check(results: Results, console: Console) -> None:
 def _overview(results: Results) -> Iterable[Table]:
     yield stocks_table(results, "inventory")
     yield change_table(results, "inventory")
-    strata = rows_of(results.stocks, "stratum")["unit"].nunique()
-    if strata > 1 or rows_of(results.stocks, "inventory").empty:
+    if rows_of(results.stocks, "inventory")["density_t_c_ha"].isna().all():
+        yield strata_table(results)
+    elif rows_of(results.stocks, "stratum")["unit"].nunique() > 1:
         yield stocks_table(results, "stratum")
     yield reconciliation_table(results)
     yield findings_table(results)

@@ -29,12 +29,13 @@ __all__ = [
     "reconciliation_table",
     "rows_of",
     "stocks_table",
+    "strata_table",
     "table_of",
     "table_width",
 ]
 
 _SEVERITY_STYLE = {"error": "red", "warning": "yellow", "note": ""}
-_TOP_FINDINGS = 12
+_TOP_FINDINGS = 20
 _UNLIMITED = 10_000
 _DASH = "\u2013"
 
@@ -66,6 +67,36 @@ def stocks_table(results: Results, by: str) -> Table:
         first = (row.survey, POOL_NAMES.get(str(row.pool), row.pool)) if whole else (row.unit, row.survey)
         table.add_row(
             *map(plain_text, first), *_stock_cells(row), style="bold" if whole and row.pool == "all" else None
+        )
+    _remark_on_spread(table, rows["density_se"])
+    return table
+
+
+def strata_table(results: Results) -> Table:
+    """Tabulate every counted pool of every stratum, for an inventory whose total is not known.
+
+    Areas and stocks are left out where none is known.
+    """
+    rows = rows_of(results.stocks, "stratum")
+    areas = bool(rows["stock_t_c"].notna().any())
+    columns = [("stratum", "left"), ("survey", "left"), ("pool", "left"), *([("ha", "right")] if areas else [])]
+    columns += [("plots", "right"), ("t C/ha", "right"), ("SE", "right"), (results.interval_name, "right")]
+    columns += [("t C", "right")] if areas else []
+    title = "Stocks by stratum, every counted pool (there is no total)"
+    table = table_of(title, columns, whole=("survey", "pool"))
+    keys = rows[["unit", "survey"]].astype("str")
+    order = {name: place for place, name in enumerate(results.surveys["survey"].astype("str"))}
+    rows = rows.assign(place=keys["survey"].map(order), first=keys["unit"].map(_places(keys["unit"])))
+    before = ("", "")
+    for row in rows.sort_values(["first", "place"], kind="stable").itertuples(index=False):
+        here = (str(row.unit), str(row.survey))
+        shown = [here[0] if here[0] != before[0] else "", here[1] if here != before else ""]
+        before = here
+        cells = _stock_cells(row)
+        table.add_row(
+            *map(plain_text, [*shown, str(row.pool).replace("_", " ")]),
+            *(cells[:-1] if areas else cells[1:5]),
+            style="bold" if row.pool == "all" else None,
         )
     _remark_on_spread(table, rows["density_se"])
     return table
@@ -118,7 +149,7 @@ def reconciliation_table(results: Results) -> Table:
 
 
 def findings_table(results: Results, top: int = _TOP_FINDINGS) -> Table:
-    """Tabulate findings by rule, the gravest and most frequent first.
+    """Tabulate findings by rule: errors, warnings, notes, each by the carbon at stake and then by frequency.
 
     Parameters
     ----------
@@ -135,7 +166,7 @@ def findings_table(results: Results, top: int = _TOP_FINDINGS) -> Table:
     left = len(counts) - top
     more = f" ({left} more rules in findings.csv)" if left > 0 else ""
     columns = [("severity", "left"), ("finding", "left"), ("table", "left"), ("count", "right"), ("used", "right")]
-    table = table_of(f"Findings{more}", [*columns, ("set aside", "right")])
+    table = table_of(f"Findings{more}", [*columns, ("set aside", "right"), ("kg C at stake", "right")])
     style = {"error": "red", "warning": "yellow"}
     for row in counts.head(top).itertuples(index=False):
         cells = [number_of(row, name) for name in ("found", "used", "set_aside")]
@@ -144,6 +175,7 @@ def findings_table(results: Results, top: int = _TOP_FINDINGS) -> Table:
             plain_text(row.rule),
             plain_text(row.table),
             *(figure(cell, 0) for cell in cells),
+            figure(number_of(row, "carbon_kg"), 0),
         )
     return table
 
@@ -215,6 +247,11 @@ def _remark_on_spread(table: Table, errors: pd.Series) -> None:
         table.caption_justify = "left"
 
 
+def _places(names: pd.Series) -> dict[str, int]:
+    """Place of each name in the order of first occurrence."""
+    return {str(name): place for place, name in enumerate(names.unique())}
+
+
 def _spread(value: float, decimals: int) -> str:
     return figure(float("nan") if value == 0 else value, decimals)
 
@@ -223,6 +260,8 @@ def _stock_cells(row: Any) -> list[str]:
     area, plots = number_of(row, "area_ha"), number_of(row, "plots")
     density, density_se = number_of(row, "density_t_c_ha"), number_of(row, "density_se")
     stock, stock_se = number_of(row, "stock_t_c"), number_of(row, "stock_se")
+    if pd.isna(density) and area == 0:
+        area = float("nan")  # no part of the land could be estimated; that it has no area would be untrue
     first, second = decimals_for(density_se, density), decimals_for(stock_se, stock)
     return [
         figure(area, decimals_for(float("nan"), area)),

@@ -1,4 +1,4 @@
-"""What the command ``trace`` prints: the figure, its plots, and the trees that make them up."""
+"""What the command ``trace`` prints: the figure, its plots, and the trees and samples that make them up."""
 
 from __future__ import annotations
 
@@ -9,6 +9,7 @@ import pandas as pd
 from rich.text import Text
 
 from landcarbon.publish.figures import decimals_for, figure
+from landcarbon.publish.terminal_samples import print_samples
 from landcarbon.publish.terminal_tables import (
     column_of,
     finding_line,
@@ -38,11 +39,12 @@ def print_trace(trace: Trace, console: Console, trees: int) -> None:
     Parameters
     ----------
     trace : Trace
-        The figure with its plots and trees.
+        The figure with its plots, trees and samples.
     console : rich.console.Console
         Where to print.
     trees : int
-        How many of the trees with the largest contribution to list.
+        How many of the trees with the largest contribution to list, and how many rows of each table of samples; of one
+        plot all samples are listed.
     """
     row = trace.row
     density, se, stock = (float(row[name]) for name in ("density_t_c_ha", "density_se", "stock_t_c"))
@@ -58,6 +60,8 @@ def print_trace(trace: Trace, console: Console, trees: int) -> None:
     for note in trace.notes:
         console.print(plain_text(note))
     _print_trees(trace, console, trees)
+    for table, rows in trace.samples.items():
+        print_samples(table, rows, console, len(rows) if trace.one_plot else trees)
     if len(trace.set_aside):
         console.print(f"Rows on these plots that were set aside: {len(trace.set_aside)}")
         for finding in trace.set_aside.head(_MOST_FINDINGS).itertuples(index=False):

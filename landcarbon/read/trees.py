@@ -39,7 +39,7 @@ STATUS_DEFAULTS = {
 
 _COLUMNS = [
     "row_id", "file", "row", "survey", "plot", "subplot", "tree", "stem", "species", "status", "dbh_cm", "height_m",
-    "expansion_per_ha", "weight", "decay_class", "date", "used",
+    "expansion_per_ha", "weight", "decay_class", "break_height_m", "top_cm", "date", "used",
 ]  # fmt: skip
 
 
