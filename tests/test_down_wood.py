@@ -282,7 +282,7 @@ def test_a_length_stated_again_with_the_pieces_changes_nothing():
 
 
 def test_slope_is_taken_off_once_and_only_where_lines_lie_along_it():
-    """Published: AWF forest inventory wiki, Slope correction: a slope of 30 % raises the value per hectare by 1.044."""
+    """Identity: a slope of 30 % raises the value per hectare by 1 / cos(atan 0.3) = 1.044."""
     along = DownWoodOptions(class_density=UNIT_DENSITY, line_slope="along the slope")
     steep = [{"slope_deg": float(np.degrees(np.arctan(0.30)))}]
     assert mass([{}], steep, along) / mass([{}], [{}], along) == pytest.approx(1.044, abs=5e-4)
