@@ -19,6 +19,7 @@ IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 PLOT_KEYS = ("survey", "plot")
+_DENSE = 2**23  # as many combinations of labels fit a plain table of moderate size
 
 
 def filled(values: pd.Series) -> FloatArray:
@@ -43,6 +44,7 @@ def match_rows(
     """
     row_key = np.zeros(len(rows), dtype=np.int64)
     place_key = np.zeros(len(places), dtype=np.int64)
+    span = 1
     missing = np.zeros(len(places), dtype=bool)
     for name in keys:
         codes, labels = encode(rows[name])
@@ -50,6 +52,7 @@ def match_rows(
         same = np.array([known[label] for label in labels], dtype=np.int64)
         place_codes, place_labels = encode(places[name])
         other = np.array([known.get(label, -1) for label in place_labels] or [-1], dtype=np.int64)[place_codes]
+        span *= len(labels) + 1
         row_key = row_key * (len(labels) + 1) + (same[codes] if len(labels) else codes)
         place_key = place_key * (len(labels) + 1) + other
         missing |= other < 0
@@ -59,6 +62,11 @@ def match_rows(
     first = order[~pd.Series(place_key[order]).duplicated().to_numpy()]
     if not len(first):
         return np.full(len(rows), -1, dtype=np.int64)
+    if span <= _DENSE:
+        table = np.full(span, -1, dtype=np.int64)
+        met = first[place_key[first] >= 0]
+        table[place_key[met]] = met
+        return table[row_key]
     found = pd.Index(place_key[first]).get_indexer(pd.Index(row_key))
     return np.where(found >= 0, first[found], -1)
 
