@@ -6,6 +6,8 @@ and ``known`` say where it comes from (``none`` where the rule needs no figure, 
 
 from __future__ import annotations
 
+import csv
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cache
@@ -208,7 +210,29 @@ def rules_page() -> str:
             f"| {item.name} | {item.severity} | {item.table}, {item.column} | {'yes' if item.used else 'no'} "
             f"| {limit} | {source} | {message} | {remedy} |"
         )
+    lines += ["", "## Findings of dead wood", "", *_table_of("dead_wood_findings.csv", "rule")]
+    lines += ["", "## Findings of soil", "", *_table_of("soil_limits.csv", "name")]
+    lines += [
+        "",
+        "Frames (litter, ground vegetation) and saplings are checked for masses, areas, shares and counts that cannot be",
+        "(negative, missing, dry above fresh, a share above one): such a row is set aside, and its finding says why.",
+    ]
     return "\n".join(lines) + "\n"
+
+
+def _table_of(name: str, key: str) -> list[str]:
+    """Rows of a table of the pools that are findings, as Markdown."""
+    with files("landcarbon.factors").joinpath(name).open(encoding="utf-8") as handle:
+        rows = [row for row in csv.DictReader(handle) if row["severity"]]
+    head = ["| rule | severity | column | what it means | what to do |", "| --- | --- | --- | --- | --- |"]
+    return head + [
+        f"| {row[key]} | {row['severity']} | {row['column']} | {_blanked(row['message'])} | {_blanked(row['remedy'])} |"
+        for row in rows
+    ]
+
+
+def _blanked(text: str) -> str:
+    return re.sub(r"\{[^}]*\}", "…", text).replace("|", "\\|")
 
 
 def _figures(values: pd.Series) -> np.ndarray:
