@@ -214,8 +214,8 @@ def rules_page() -> str:
     lines += ["", "## Findings of soil", "", *_table_of("soil_limits.csv", "name")]
     lines += [
         "",
-        "Frames (litter, ground vegetation) and saplings are checked for masses, areas, shares and counts that cannot be",
-        "(negative, missing, dry above fresh, a share above one): such a row is set aside, and its finding says why.",
+        "Frames (litter, ground vegetation) and saplings are checked for masses, areas, shares and counts that cannot",
+        "be (negative, missing, dry above fresh, a share above one): such a row is set aside, its finding says why.",
     ]
     return "\n".join(lines) + "\n"
 
