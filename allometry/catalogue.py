@@ -85,7 +85,7 @@ class Catalogue:
         code = self._code.get(equation_id)
         if code is None:
             near = get_close_matches(str(equation_id), self._code, n=3, cutoff=0.6)
-            hint = f"; did you mean {' or '.join(near)}?" if near else "; search by a part of species, genus or source"
+            hint = f"; did you mean {' or '.join(near)}?" if near else "; search by part of a species, genus or source"
             raise UnknownEquationError(f"no equation {equation_id!r} in the catalogue{hint}")
         return code
 
