@@ -200,7 +200,7 @@ def plot_sums(trees: pd.DataFrame, index: np.ndarray, count: int, *, conifer: np
     dead = counts & has_status(trees["status"], "dead")
     per_ha = trees["expansion"].to_numpy() / KG_PER_T
     at = np.where(counts, index, 0)
-    mass = np.where(live, trees["biomass_kg"].to_numpy() * per_ha, 0.0)
+    mass = np.multiply(trees["biomass_kg"].to_numpy(), per_ha, out=np.zeros(len(trees)), where=live)
     carbon = trees["carbon_kg"].to_numpy() * per_ha
 
     def total(values: np.ndarray, where: np.ndarray) -> np.ndarray:
@@ -213,13 +213,18 @@ def plot_sums(trees: pd.DataFrame, index: np.ndarray, count: int, *, conifer: np
 
     return PlotSums(
         biomass=np.bincount(at, weights=mass, minlength=count),
-        carbon=np.bincount(at, weights=np.where(live, carbon, 0.0), minlength=count),
+        carbon=np.bincount(at, weights=_where(carbon, live), minlength=count),
         conifer=total(mass, live & conifer),
         roots=rooted("root_kg", live),
         dead_carbon=total(carbon, dead),
         dead_root_carbon=rooted("dead_root_carbon_kg", dead),
         trees=np.bincount(at, weights=live | dead, minlength=count),
     )
+
+
+def _where(values: np.ndarray, mask: np.ndarray) -> np.ndarray:
+    """Values where the mask holds, else zero."""
+    return values if mask.all() else np.where(mask, values, 0.0)
 
 
 def plot_parts(
@@ -270,7 +275,9 @@ def plot_parts(
         "dead_wood.standing": sums.dead_carbon,
         "dead_wood.dead_roots": sums.dead_root_carbon,
     }
-    where = plots.set_index("plot").reindex(visits["plot"].astype("str"))
+    # Kept as columns of text: turning them into arrays of objects and back costs more than the arithmetic.
+    names = visits[["survey", "plot"]].astype("str").reset_index(drop=True)
+    where = plots.set_index("plot").reindex(names["plot"]).reset_index(drop=True)
     subplots = visits["n_subplots"].to_numpy(dtype=float)
     size = visits["share_inside"].to_numpy(dtype=float) * subplots / design.subplots
     if design.kind == "census":
@@ -279,10 +286,10 @@ def plot_parts(
         size = size * np.where(np.isfinite(area), area / known.mean() if len(known) else 1.0, 1.0)
     table = pd.DataFrame(
         {
-            "survey": visits["survey"].astype("str").to_numpy(),
-            "plot": visits["plot"].astype("str").to_numpy(),
-            "parcel": where["parcel"].to_numpy(),
-            "stratum": where["stratum"].to_numpy(),
+            "survey": names["survey"],
+            "plot": names["plot"],
+            "parcel": where["parcel"],
+            "stratum": where["stratum"],
             "inside": where["inside"].to_numpy(dtype=bool),
             "date": visits["date"].to_numpy(),
             "size": size,

@@ -229,16 +229,21 @@ def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd
         "stock_high": (density + half) * area,
         "df": estimate.df,
     }
+    rows = units * len(pools)
+    text = {
+        "by": np.full(rows, level.by, dtype=object),
+        "unit": np.repeat(np.array(level.labels, dtype=object), len(pools)),
+        "survey": np.full(rows, survey, dtype=object),
+        "pool": np.tile(np.array(pools, dtype=object), units),
+    }
+    # Made as text at once: converting columns of a finished frame copies all of it.
     return pd.DataFrame(
         {
-            "by": level.by,
-            "unit": np.repeat(np.array(level.labels, dtype=object), len(pools)),
-            "survey": survey,
-            "pool": np.tile(np.array(pools, dtype=object), units),
+            **{name: pd.array(values, dtype="str") for name, values in text.items()},
             **{name: values.ravel() for name, values in columns.items()},
-            "method": level.method.ravel(),
+            "method": pd.array(level.method.ravel(), dtype="str"),
         }
-    ).astype({name: "str" for name in ("by", "unit", "survey", "pool", "method")})
+    )
 
 
 def _findings(

@@ -123,7 +123,7 @@ def main() -> None:
         wood = DownWoodOptions(line_m=20.0)
 
         def read(name: str) -> pd.DataFrame:
-            return pq.read_table(files[name]).to_pandas()
+            return pq.read_table(files[name]).to_pandas(split_blocks=True)
 
         steps = {
             "trees": lambda: ours(files["trees"], tables),
