@@ -20,7 +20,6 @@ from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.pools.standing_dead import StandingOptions, dead_biomass
 
 __all__ = [
-    "OUT_OF_RANGE_POLICIES",
     "TreePlan",
     "combine_stems",
     "dead_trees",
@@ -30,8 +29,6 @@ __all__ = [
     "tree_biomass",
     "tree_findings",
 ]
-
-OUT_OF_RANGE_POLICIES = ("flag", "cap", "stop")
 
 
 @dataclass(frozen=True)

@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
+from landcarbon.change import CHANGE_COLUMNS
+from landcarbon.estimate.stocks import STOCK_COLUMNS
 from landcarbon.inventory.models import SAMPLE_TABLES
 
 if TYPE_CHECKING:
@@ -14,46 +16,6 @@ if TYPE_CHECKING:
 
 __all__ = ["CHANGE_COLUMNS", "SAMPLE_FILES", "STOCK_COLUMNS", "Results", "parts_of_plots", "sums_of_plots"]
 
-STOCK_COLUMNS = [
-    "by",
-    "unit",
-    "survey",
-    "pool",
-    "area_ha",
-    "plots",
-    "density_t_c_ha",
-    "density_se",
-    "density_low",
-    "density_high",
-    "stock_t_c",
-    "stock_se",
-    "stock_low",
-    "stock_high",
-    "df",
-    "method",
-]
-
-CHANGE_COLUMNS = [
-    "by",
-    "unit",
-    "since",
-    "until",
-    "pool",
-    "area_ha",
-    "plots_paired",
-    "plots_since",
-    "plots_until",
-    "years",
-    "change_t_c",
-    "change_se",
-    "change_low",
-    "change_high",
-    "change_t_c_yr",
-    "change_t_c_ha_yr",
-    "change_t_c_ha_yr_se",
-    "co2_t_yr",
-    "method",
-]
 
 #: Files of the sample tables by the name of the table; a results folder holds those it has samples for.
 SAMPLE_FILES = {table: f"samples_{table}.parquet" for table in SAMPLE_TABLES}
