@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 
 import numpy as np
 import pandas as pd
@@ -118,6 +119,12 @@ class _Crossings:
     length_m: FloatArray
     findings: pd.DataFrame
 
+    @cached_property
+    def cell(self) -> IntArray:
+        """Plot and size class, as one number, of each piece in use."""
+        cell: IntArray = self.plot * self.length_m.shape[1] + self.size
+        return cell if self.used.all() else cell[self.used]
+
 
 def down_wood(
     pieces: pd.DataFrame, lines: pd.DataFrame, options: DownWoodOptions, species: pd.DataFrame
@@ -209,10 +216,9 @@ def _line_part(crossings: _Crossings, per_class: dict[str, FloatArray], part: st
 
 def _sums(crossings: _Crossings, values: FloatArray) -> FloatArray:
     """Sum of values by plot and size class."""
-    used = crossings.used
     plots, classes = crossings.length_m.shape
-    cell = crossings.plot[used] * classes + crossings.size[used]
-    sums: FloatArray = np.bincount(cell, weights=values[used], minlength=plots * classes).astype(float)
+    weights = values if crossings.used.all() else values[crossings.used]
+    sums: FloatArray = np.bincount(crossings.cell, weights=weights, minlength=plots * classes).astype(float)
     return sums.reshape(plots, classes)
 
 

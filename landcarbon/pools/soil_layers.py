@@ -154,7 +154,7 @@ def make_layers(samples: pd.DataFrame, options: SoilOptions) -> tuple[Layers, pd
     cores = _core_counts(sieve)
     kept = np.flatnonzero(sieve.sound)
     plot_key, core_key = _keys(samples.iloc[kept] if len(kept) < len(samples) else samples)
-    order = _order(core_key, np.zeros(len(kept), dtype=np.int64) if window is None else window[kept], top[kept])
+    order = _order(core_key, None if window is None else window[kept], top[kept])
     kept = kept[order]
     core, plot = _dense(core_key[order]), _dense(plot_key[order])
     top, bottom = top[kept], bottom[kept]
@@ -394,13 +394,15 @@ def _joined(left: np.ndarray, right: np.ndarray) -> np.ndarray:
     return left * span + right
 
 
-def _order(core: np.ndarray, window: np.ndarray, top: np.ndarray) -> np.ndarray:
-    same_core = core[1:] == core[:-1]
-    same_window = window[1:] == window[:-1]
-    rising = (window[1:] > window[:-1]) | (same_window & (top[1:] >= top[:-1]))
-    if ((core[1:] > core[:-1]) | (same_core & rising)).all():
+def _order(core: np.ndarray, window: np.ndarray | None, top: np.ndarray) -> np.ndarray:
+    """Order by core, window and depth; files mostly come in that order, which a few passes tell."""
+    step = np.diff(core)
+    falls = top[1:] < top[:-1]
+    if window is not None:
+        falls = (window[1:] < window[:-1]) | ((window[1:] == window[:-1]) & falls)
+    if not ((step < 0) | ((step == 0) & falls)).any():
         return np.arange(len(core))
-    return np.lexsort((top, window, core))
+    return np.lexsort((top, core) if window is None else (top, window, core))
 
 
 def _dense(sorted_key: np.ndarray) -> np.ndarray:

@@ -285,8 +285,12 @@ def _kind_of(
     lowered = [word.lower() for word in words]
     typed = np.array([GROUPS.index(word) if word in GROUPS[:2] else -1 for word in lowered], dtype=np.int64)
     strange = np.array([word not in ("", *GROUPS) for word in lowered], dtype=bool)
-    by_species, by_wood = found[codes], typed[wood_codes]
+    by_species = found[codes]
     fallback = n_species + GROUPS.index(options.group)
+    if not any(lowered):  # most crews note the species or the type of wood, not both
+        nothing = np.zeros(len(rows), dtype=bool)
+        return np.where(by_species >= 0, by_species, fallback), (named & (found < 0))[codes], nothing, nothing
+    by_wood = typed[wood_codes]
     kind = np.where(by_species >= 0, by_species, np.where(by_wood >= 0, n_species + by_wood, fallback))
     group_code = np.array([GROUPS.index(str(name)) for name in kinds.group], dtype=np.int64)
     disagree = (by_species >= 0) & (by_wood >= 0) & (group_code[kind] != by_wood)
