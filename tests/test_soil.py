@@ -132,6 +132,27 @@ def test_a_factor_beyond_the_published_range_is_doubted(factor, rule):
     assert findings["rule"].tolist() == [rule]
 
 
+@pytest.mark.parametrize(
+    ("reference", "rule"),
+    [
+        ({"depth_cm": 0.3}, "reference shallow"),
+        ({"depth_cm": 3000.0}, "reference deep"),
+        ({"mass_t_ha": 3.0}, "reference light"),
+        ({"mass_t_ha": 300000.0}, "reference heavy"),
+    ],
+)
+def test_a_reference_in_another_unit_is_doubted(reference, rule):
+    """Common practice, no source: nobody states the soil of three millimetres or of thirty metres."""
+    _, findings = soil(table((0, 10, 1, 0.01)), SoilOptions(FINE, **reference))
+    assert rule in set(findings["rule"])
+
+
+@pytest.mark.parametrize("reference", [{"depth_cm": 5.0}, {"depth_cm": 100.0}, {"mass_t_ha": 3000.0}])
+def test_a_usual_reference_is_not_doubted(reference):
+    _, findings = soil(table((0, 10, 1, 0.01)), SoilOptions(FINE, **reference))
+    assert not set(findings["rule"]) & {"reference shallow", "reference deep", "reference light", "reference heavy"}
+
+
 def test_order_of_carbon_columns():
     """Organic carbon wins; then total less inorganic; then organic matter."""
     frame = table(

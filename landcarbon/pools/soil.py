@@ -93,7 +93,7 @@ def soil(samples: pd.DataFrame, options: SoilOptions) -> tuple[pd.DataFrame, pd.
     check_options(options)
     samples = samples.reset_index(drop=True)
     layers, findings = make_layers(samples, options)
-    parts = [_told_factor(options), findings]
+    parts = [_told_factor(options), _told_reference(options), findings]
     if not len(layers.row):
         return empty_parts(), join_findings(parts)
     overlap, gap = _breaks(layers)
@@ -153,6 +153,17 @@ def _told_factor(options: SoilOptions) -> pd.DataFrame:
     if factor is None or limit("factor low") <= factor <= limit("factor high"):
         return join_findings([])
     return soil_finding("factor low" if factor < limit("factor low") else "factor high", factor=factor)
+
+
+def _told_reference(options: SoilOptions) -> pd.DataFrame:
+    """Doubt a reference that looks like another unit."""
+    if options.depth_cm is not None:
+        value, low, high = options.depth_cm, "reference shallow", "reference deep"
+    else:
+        value, low, high = float(options.mass_t_ha or 0.0), "reference light", "reference heavy"
+    if limit(low) <= value <= limit(high):
+        return join_findings([])
+    return soil_finding(low if value < limit(low) else high, depth=value, mass=value)
 
 
 def _breaks(layers: Layers) -> tuple[np.ndarray, np.ndarray]:
