@@ -20,6 +20,7 @@ from landcarbon.pipeline import (
     read_and_check,
     root_model,
 )
+from landcarbon.pools.parts import RowShares
 from landcarbon.publish.results import Results
 from landcarbon.statements import measured_columns
 
@@ -75,18 +76,21 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
         run={"inputs": inputs.files.to_dict(orient="records"), "equations": _equations_used(stage)},
         crs=inputs.crs,
         area_method=inputs.area_method,
-        samples=_samples(inputs.samples, all_findings),
+        samples=_samples(inputs.samples, all_findings, stage.shares),
         marks=_marks(stage, settings, stocks, all_findings, counts),
     )
 
 
-def _samples(samples: dict[str, pd.DataFrame], findings: pd.DataFrame) -> dict[str, pd.DataFrame]:
-    """Sample tables with ``used`` as it ended: modules of the pools set rows aside after reading."""
+def _samples(
+    samples: dict[str, pd.DataFrame], findings: pd.DataFrame, shares: RowShares
+) -> dict[str, pd.DataFrame]:
+    """Sample tables with ``used`` as it ended (modules of the pools set rows aside) and what each row brings in."""
     aside = findings[~findings["used"]].dropna(subset="row_id")
     ended = {}
     for name, rows in samples.items():
         lost = rows["row_id"].isin(aside.loc[aside["table"] == name, "row_id"])
-        ended[name] = rows.assign(used=rows["used"].to_numpy(dtype=bool) & ~lost.to_numpy(dtype=bool))
+        used = rows["used"].to_numpy(dtype=bool) & ~lost.to_numpy(dtype=bool)
+        ended[name] = rows.assign(used=used, density_t_c_ha=shares.of(name, rows))
     return ended
 
 

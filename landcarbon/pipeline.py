@@ -21,11 +21,12 @@ from landcarbon.check.run import run_checks
 from landcarbon.check.stand import stand_findings
 from landcarbon.columns import with_columns
 from landcarbon.errors import UserError
+from landcarbon.estimate.area_effect import place_by_survey
 from landcarbon.findings import empty_findings, join_findings, make_findings
-from landcarbon.inventory.measured import measured_parts
+from landcarbon.inventory.measured import measured_parts, surveys_with_trees
 from landcarbon.plots import TREE_PARTS, PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
 from landcarbon.pool_options import standing_options
-from landcarbon.pools.parts import column_name
+from landcarbon.pools.parts import RowShares, column_name
 from landcarbon.pools.trees import (
     TreePlan,
     combine_stems,
@@ -72,12 +73,15 @@ class PlotStage:
         One row per plot and survey with a column per part of a pool; NaN where the part was not measured.
     sample_parts : DataFrame
         The parts that are not from trees, with mass, number of samples, method and known mark.
+    shares : RowShares
+        What each row of the sample tables brings into the figure of its plot.
     """
 
     inputs: Inputs
     plan: TreePlan
     plot_parts: pd.DataFrame
     sample_parts: pd.DataFrame
+    shares: RowShares
 
     @property
     def sums(self) -> dict[str, list[str]]:
@@ -152,8 +156,10 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
         design=design,
         root_model=root if root and level(root) == "stand" else "",
     )
+    shares = RowShares()
+    table = _without_tally(table, settings)
     parts, part_findings = sample_parts(
-        inputs, settings, assignments, catalogue, domain=carbon_domain(settings), design=design
+        inputs, settings, assignments, catalogue, domain=carbon_domain(settings), design=design, shares=shares
     )
     findings = join_findings(
         [
@@ -169,9 +175,21 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
             part_findings,
         ]
     )
-    joined, lost = keep_declared(join_parts(table, parts, inputs), settings, inputs)
+    joined = join_parts(table, parts, inputs)
+    if inputs.parcel_of is not None:
+        joined = place_by_survey(joined, inputs.parcel_of)
+    joined, lost = keep_declared(joined, settings, inputs)
     inputs = replace(inputs, trees=trees, findings=join_findings([findings, lost]))
-    return PlotStage(inputs, plan, joined, parts)
+    return PlotStage(inputs, plan, joined, parts, shares)
+
+
+def _without_tally(table: pd.DataFrame, settings: Settings) -> pd.DataFrame:
+    """Take away the zeros of tree parts at surveys without a tree table: nothing was looked for there."""
+    untallied = ~table["survey"].isin(list(surveys_with_trees(settings)))
+    if not untallied.any():
+        return table
+    columns = [name for name in (*TREE_PARTS, "trees", "biomass_t_ha") if name in table]
+    return table.assign(**{name: table[name].mask(untallied) for name in columns})
 
 
 def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:

@@ -16,9 +16,20 @@ from landcarbon.errors import SettingsError
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.pools.trees import has_status
 
-__all__ = ["TREE_PARTS", "PlotDesign", "PlotSums", "expansion_factors", "plot_parts", "plot_sums", "visit_index"]
+__all__ = [
+    "DESIGN_COLUMNS",
+    "TREE_PARTS",
+    "PlotDesign",
+    "PlotSums",
+    "expansion_factors",
+    "plot_parts",
+    "plot_sums",
+    "visit_index",
+]
 
 TREE_PARTS = ("above_ground.trees", "below_ground.roots", "dead_wood.standing", "dead_wood.dead_roots")
+#: Columns of the plots that say how they were drawn; handed on where there are any.
+DESIGN_COLUMNS = ("x", "y", "cluster", "weight", "post_stratum")
 _CM_PER_M = 100.0
 
 
@@ -254,7 +265,8 @@ def plot_parts(
     Returns
     -------
     table : DataFrame
-        survey, plot, parcel, stratum, inside, date, size, the parts [t C/ha], and trees, biomass_t_ha.
+        survey, plot, parcel, stratum, inside, date, size, those of ``DESIGN_COLUMNS`` that the plots have, the parts
+        [t C/ha], and trees, biomass_t_ha.
     findings : DataFrame
         Plots whose biomass lies outside the range of the root model.
 
@@ -293,6 +305,7 @@ def plot_parts(
             "inside": where["inside"].to_numpy(dtype=bool),
             "date": visits["date"].to_numpy(),
             "size": size,
+            **{name: where[name] for name in DESIGN_COLUMNS if name in where},
             **{part: values[part] for part in parts},
         }
     )

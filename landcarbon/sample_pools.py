@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -26,7 +26,7 @@ from landcarbon.pool_options import (
 from landcarbon.pools.defaults import default_rows
 from landcarbon.pools.down_wood import down_wood, logs
 from landcarbon.pools.frames import ground_vegetation, litter
-from landcarbon.pools.parts import PARTS, column_name, empty_parts, wide_parts
+from landcarbon.pools.parts import PARTS, RowShares, column_name, empty_parts, wide_parts
 from landcarbon.pools.saplings import saplings
 from landcarbon.pools.soil import soil
 from landcarbon.pools.stumps import stumps
@@ -52,6 +52,15 @@ _FEEDS = {
 }
 
 
+@dataclass(frozen=True)
+class _Place:
+    """Climate domain and plot design, and where the shares of the rows go."""
+
+    domain: str
+    design: PlotDesign
+    shares: RowShares
+
+
 def sample_parts(
     inputs: Inputs,
     settings: Settings,
@@ -60,6 +69,7 @@ def sample_parts(
     *,
     domain: str,
     design: PlotDesign,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Work out every part that is measured on samples, or given by a default factor.
 
@@ -77,22 +87,26 @@ def sample_parts(
         Climate domain of the carbon fractions.
     design : PlotDesign
         Gives the area for logs and stumps where the file states none.
+    shares : RowShares, optional
+        Takes what each row brings into the figure of its plot.
 
     Returns
     -------
     parts, findings : DataFrame
     """
+    shares = RowShares() if shares is None else shares
+    place = _Place(domain, design, shares)
     inputs, outside = _inside(inputs)
     wanted = measured_parts(settings)
     dead = wanted.get("dead_wood", ())
-    on_lines, line_findings = _wood_on_lines(inputs, settings, assignments, dead, domain=domain, design=design)
+    on_lines, line_findings = _wood_on_lines(inputs, settings, assignments, dead, place)
     coarse = empty_parts() if on_lines is None else on_lines[on_lines["part"] == "down_coarse"]
     steps = [
         (on_lines, line_findings),
-        _wood_on_area(inputs, settings, assignments, dead, coarse[["survey", "plot"]], domain=domain, design=design),
-        _frames(inputs, settings, wanted),
-        _saplings(inputs, settings, assignments, catalogue, wanted=wanted, domain=domain),
-        _soil(inputs, settings, wanted),
+        _wood_on_area(inputs, settings, assignments, dead, coarse[["survey", "plot"]], place),
+        _frames(inputs, settings, wanted, shares),
+        _saplings(inputs, settings, assignments, catalogue, wanted, place),
+        _soil(inputs, settings, wanted, shares),
         (_defaults(inputs, settings), None),
         (None, outside),
     ]
@@ -202,17 +216,29 @@ def _nothing_left(name: str, pool: str, survey: str, count: int) -> pd.DataFrame
 def _inside(inputs: Inputs) -> tuple[Inputs, pd.DataFrame]:
     """Set aside samples of plots outside all parcels, as is done with their trees."""
     lone = set(inputs.plots.loc[~inputs.plots["inside"].to_numpy(dtype=bool), "plot"].astype("str"))
-    if not lone:
+    out_then = _out_at_survey(inputs)
+    if not lone and not out_then:
         return inputs, join_findings([])
     unplaced = inputs.plots[["x", "y"]].isna().any(axis=1)
     lost = set(inputs.plots.loc[unplaced, "plot"].astype("str"))
     samples, findings = {}, []
     for name, rows in inputs.samples.items():
-        away = rows["plot"].astype("str").isin(lone) & rows["used"]
+        away = rows["plot"].astype("str").isin(lone)
+        if out_then:
+            away |= pd.MultiIndex.from_frame(rows[["survey", "plot"]].astype("str")).isin(out_then)
+        away &= rows["used"]
         nowhere = rows["plot"].astype("str").isin(lost)
         samples[name] = rows[~away].reset_index(drop=True)
         findings += [_outside(rows[away & nowhere], name, nowhere=True), _outside(rows[away & ~nowhere], name)]
     return replace(inputs, samples=samples), join_findings(findings)
+
+
+def _out_at_survey(inputs: Inputs) -> list[tuple[str, str]]:
+    """Surveys and plots that were out of the inventory then, where boundaries change."""
+    if inputs.parcel_of is None:
+        return []
+    out = inputs.parcel_of[~inputs.parcel_of["inside"].to_numpy(dtype=bool)]
+    return list(zip(out["survey"].astype("str"), out["plot"].astype("str"), strict=True))
 
 
 def _outside(rows: pd.DataFrame, table: str, *, nowhere: bool = False) -> pd.DataFrame:
@@ -258,14 +284,13 @@ def _wood_on_lines(
     settings: Settings,
     assignments: pd.DataFrame,
     wanted: tuple[str, ...],
-    *,
-    domain: str,
-    design: PlotDesign,
+    place: _Place,
 ) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
     if not set(wanted) & set(_LINE_PARTS) or "lines" not in inputs.samples:
         return None, None
-    options = down_wood_options(settings, area_m2=_area_m2(design), domain=domain)
-    return down_wood(inputs.samples["pieces"], inputs.samples["lines"], options, _species(assignments))
+    options = down_wood_options(settings, area_m2=_area_m2(place.design), domain=place.domain)
+    listed, pieces, lines = _species(assignments), inputs.samples["pieces"], inputs.samples["lines"]
+    return down_wood(pieces, lines, options, listed, shares=place.shares)
 
 
 def _wood_on_area(
@@ -274,38 +299,37 @@ def _wood_on_area(
     assignments: pd.DataFrame,
     wanted: tuple[str, ...],
     on_lines: pd.DataFrame,
-    *,
-    domain: str,
-    design: PlotDesign,
+    place: _Place,
 ) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
     parts, findings = [], []
-    area = _area_m2(design)
+    area, domain, listed = _area_m2(place.design), place.domain, _species(assignments)
     if "down_coarse" in wanted and "logs" in inputs.samples:
         options = down_wood_options(settings, area_m2=area, domain=domain)
         visited = _visited(inputs, "logs", options.log_area_m2)
-        table, found = logs(inputs.samples["logs"], visited, options, _species(assignments), on_lines=on_lines)
+        rows = inputs.samples["logs"]
+        table, found = logs(rows, visited, options, listed, on_lines=on_lines, shares=place.shares)
         parts.append(table)
         findings.append(found)
     if "stumps" in wanted and "stumps" in inputs.samples:
         stump = stump_options(settings, area_m2=area, domain=domain)
-        table, found = stumps(
-            inputs.samples["stumps"], _visited(inputs, "stumps", stump.log_area_m2), stump, _species(assignments)
-        )
+        visited = _visited(inputs, "stumps", stump.log_area_m2)
+        table, found = stumps(inputs.samples["stumps"], visited, stump, listed, shares=place.shares)
         parts.append(table)
         findings.append(found)
     return (pd.concat(parts, ignore_index=True) if parts else None), join_findings(findings)
 
 
 def _frames(
-    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]]
+    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]], shares: RowShares
 ) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
     parts, findings = [], []
     if wanted.get("litter") and "litter" in inputs.samples:
-        table, found = litter(inputs.samples["litter"], litter_options(settings))
+        table, found = litter(inputs.samples["litter"], litter_options(settings), shares=shares)
         parts.append(table)
         findings.append(found)
     if "ground_vegetation" in wanted.get("above_ground", ()) and "ground_vegetation" in inputs.samples:
-        table, found = ground_vegetation(inputs.samples["ground_vegetation"], vegetation_options(settings))
+        rows = inputs.samples["ground_vegetation"]
+        table, found = ground_vegetation(rows, vegetation_options(settings), shares=shares)
         parts.append(table)
         findings.append(found)
     return (pd.concat(parts, ignore_index=True) if parts else None), join_findings(findings)
@@ -316,9 +340,8 @@ def _saplings(
     settings: Settings,
     assignments: pd.DataFrame,
     catalogue: Catalogue,
-    *,
     wanted: dict[str, tuple[str, ...]],
-    domain: str,
+    place: _Place,
 ) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
     if "saplings" not in wanted.get("above_ground", ()) or "saplings" not in inputs.samples:
         return None, None
@@ -347,10 +370,10 @@ def _saplings(
         code, rows["dbh_cm"].to_numpy(dtype=float), rows["height_m"].to_numpy(dtype=float), density, stress
     )
     group = np.where(chosen["conifer"].to_numpy(dtype=bool), "conifer", "broadleaf").astype(object)
-    fraction = carbon_fraction(group, domain=domain)[position]
+    fraction = carbon_fraction(group, domain=place.domain)[position]
     marks = [str(mark) for mark in chosen["known"]]
     known = next((mark for mark in ("memory", "secondary") if mark in marks), "read")
-    parts, findings = saplings(rows, mass, fraction, sapling_options(settings, known=known))
+    parts, findings = saplings(rows, mass, fraction, sapling_options(settings, known=known), shares=place.shares)
     return parts, join_findings([findings, _beyond(rows[beyond], chosen["equation_id"].to_numpy()[position[beyond]])])
 
 
@@ -372,11 +395,11 @@ def _beyond(rows: pd.DataFrame, equations: np.ndarray) -> pd.DataFrame:
 
 
 def _soil(
-    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]]
+    inputs: Inputs, settings: Settings, wanted: dict[str, tuple[str, ...]], shares: RowShares
 ) -> tuple[pd.DataFrame | None, pd.DataFrame | None]:
     if not wanted.get("soil") or "soil" not in inputs.samples:
         return None, None
-    return soil(inputs.samples["soil"], soil_options(settings))
+    return soil(inputs.samples["soil"], soil_options(settings), shares=shares)
 
 
 def _defaults(inputs: Inputs, settings: Settings) -> pd.DataFrame | None:

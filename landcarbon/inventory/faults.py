@@ -132,10 +132,9 @@ def _known_key(path: Path, raw: dict[str, Any]) -> str:
         if owners:
             takes = ", ".join(known) or "no further key"
             return f"It belongs to kind {' or '.join(owners)}; kind {kind!r} takes {takes}."
-    near = suggestion(word, known)
-    if near:
+    near, elsewhere = suggestion(word, known), places_of(word)
+    if near and len(elsewhere) != 1:  # a key that exists in one other table only was meant for that table
         return near
-    elsewhere = places_of(word)
     if elsewhere:
         return f"The key {word} belongs under [{'] or ['.join(elsewhere)}]."
     return f"Known here: {', '.join(known)}." if known else ""

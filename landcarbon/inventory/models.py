@@ -10,6 +10,7 @@ from pydantic import BeforeValidator, Field, PrivateAttr, field_validator, model
 
 from landcarbon.inventory.base import Section
 from landcarbon.inventory.design import Design
+from landcarbon.inventory.estimate_models import Estimation, PostStrata, Raster
 from landcarbon.inventory.pool_models import (
     POOL_NAMES,
     SAMPLE_TABLES,
@@ -36,6 +37,8 @@ __all__ = [
     "Plots",
     "Pool",
     "Pools",
+    "PostStrata",
+    "Raster",
     "Samples",
     "Settings",
     "Species",
@@ -95,6 +98,24 @@ class Strata(Section):
     file: str | None = Field(default=None, description="Table with the columns stratum and area, instead of areas")
     unit: str = Field(default="ha", description="Unit of the areas")
     merge: dict[str, str] = Field(default={}, description="small = 'large' folds stratum small into large")
+    first_phase: dict[str, Annotated[int, Field(ge=0)]] = Field(
+        default={},
+        description="Points of a first phase (e.g. on air photos) found in each stratum; the areas are then shares of "
+        "first_phase_area",
+    )
+    first_phase_area: float | None = Field(
+        default=None, gt=0, description="Area the points of the first phase stand for, in unit"
+    )
+
+    @model_validator(mode="after")
+    def _first_phase_whole(self) -> Strata:
+        if bool(self.first_phase) != (self.first_phase_area is not None):
+            raise ValueError("first_phase and first_phase_area go together")
+        if self.first_phase and (self.areas or self.file):
+            raise ValueError("areas are known or estimated by a first phase, not both")
+        if self.first_phase and not sum(self.first_phase.values()):
+            raise ValueError("first_phase holds no point")
+        return self
 
 
 class Plots(Section):
@@ -237,12 +258,6 @@ class Carbon(Section):
     )
 
 
-class Estimation(Section):
-    """Estimates."""
-
-    design: Literal["stratified"] = Field(default="stratified", description="stratified: ratio of means by stratum")
-
-
 class Settings(Section):
     """A whole project file.
 
@@ -289,6 +304,12 @@ class Settings(Section):
     saplings: Saplings = Field(default_factory=Saplings, description="Stems too small for the tree table")
     soil: Soil = Field(default_factory=Soil, description="Soil organic carbon from cores and pits")
     carbon: Carbon = Field(default_factory=Carbon, description="Carbon in dry matter")
+    rasters: dict[str, Raster] = Field(
+        default={}, description="Rasters that cover the parcels, one table each, e.g. [rasters.canopy_height]"
+    )
+    post_strata: PostStrata = Field(
+        default_factory=PostStrata, description="Classes of known area, told after the survey"
+    )
     estimation: Estimation = Field(default_factory=Estimation, description="Estimates")
 
     _path: Path = PrivateAttr(default=Path("inventory.toml"))

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from landcarbon.constants import M2_PER_HECTARE
 from landcarbon.errors import UserError
 from landcarbon.factors.dead_wood import rule
-from landcarbon.pools.parts import make_parts
+from landcarbon.pools.parts import RowShares, make_parts
 from landcarbon.pools.wood import KNOWN, RowCheck, Wood, encode
 
 __all__ = ["PLOT_KEYS", "area_parts", "check_hidden", "check_large", "filled", "match_rows", "weakest"]
@@ -112,6 +112,7 @@ def area_parts(
     area_m2: float,
     part: str,
     method: str,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Carbon per plot of pieces measured on an area.
 
@@ -130,6 +131,8 @@ def area_parts(
         Area the rows were found on [m2], where the plot has none of its own.
     part, method : str
         Labels of the outcome.
+    shares : RowShares, optional
+        Takes what each row brings in.
 
     Raises
     ------
@@ -150,9 +153,12 @@ def area_parts(
     used = check.used
     group = row[used]
     mass = (volume_m3 * wood.density_g_cm3)[used] * M2_PER_HECTARE / area[group]
+    carbon = mass * wood.carbon_fraction[used]
+    if shares is not None:
+        shares.add(check.table, check.rows.loc[used], carbon)
     measured = places[list(PLOT_KEYS)].assign(
         mass_t_ha=np.bincount(group, weights=mass, minlength=len(places)),
-        density_t_c_ha=np.bincount(group, weights=mass * wood.carbon_fraction[used], minlength=len(places)),
+        density_t_c_ha=np.bincount(group, weights=carbon, minlength=len(places)),
         samples=np.bincount(group, minlength=len(places)),
     )
     parts = make_parts(measured, pool="dead_wood", part=part, method=method)

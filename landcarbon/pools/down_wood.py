@@ -21,7 +21,7 @@ from landcarbon.factors.dead_wood import collapse_known, collapse_left, rule
 from landcarbon.findings import join_findings
 from landcarbon.pools._lines import LINE_KEYS, LaidLines, check_lines, class_lengths
 from landcarbon.pools._pieces import PLOT_KEYS, area_parts, check_hidden, check_large, filled, match_rows, weakest
-from landcarbon.pools.parts import empty_parts, make_parts
+from landcarbon.pools.parts import RowShares, empty_parts, make_parts
 from landcarbon.pools.piece_volume import FORMULAS, line_volume, piece_volume, section_m2
 from landcarbon.pools.wood import RowCheck, Wood, WoodOptions, default_class, encode, wood_of
 
@@ -127,7 +127,12 @@ class _Crossings:
 
 
 def down_wood(
-    pieces: pd.DataFrame, lines: pd.DataFrame, options: DownWoodOptions, species: pd.DataFrame
+    pieces: pd.DataFrame,
+    lines: pd.DataFrame,
+    options: DownWoodOptions,
+    species: pd.DataFrame,
+    *,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Carbon of down wood per plot from pieces crossed by lines.
 
@@ -142,6 +147,8 @@ def down_wood(
         Classes, defaults and choices.
     species : DataFrame
         species, scientific_name, conifer, wood_density_g_cm3.
+    shares : RowShares, optional
+        Takes what each piece brings in.
 
     Returns
     -------
@@ -163,6 +170,10 @@ def down_wood(
     crossings = _crossings(pieces, lines, options, species)
     mass = crossings.squares_cm2 * crossings.wood.density_g_cm3
     carbon = mass * crossings.wood.carbon_fraction
+    if shares is not None and len(crossings.laid.plots):
+        used = crossings.used
+        length = crossings.length_m[crossings.plot[used], crossings.size[used]]
+        shares.add("pieces", pieces.loc[used], line_volume(carbon[used], length))
     per_class = {
         "mass_t_ha": line_volume(_sums(crossings, mass), crossings.length_m),
         "density_t_c_ha": line_volume(_sums(crossings, carbon), crossings.length_m),
@@ -353,6 +364,7 @@ def logs(
     species: pd.DataFrame,
     *,
     on_lines: pd.DataFrame | None = None,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Carbon of logs measured on the area of each plot.
 
@@ -369,6 +381,8 @@ def logs(
         species, scientific_name, conifer, wood_density_g_cm3.
     on_lines : DataFrame, optional
         survey, plot where coarse wood was measured on lines; logs there are set aside, so that no wood counts twice.
+    shares : RowShares, optional
+        Takes what each log brings in.
 
     Returns
     -------
@@ -398,7 +412,8 @@ def logs(
     check.apply("cavity larger than log", net < 0.0)
     formulas = sorted({name for name in volume["formula"][check.used] if name})
     method = f"logs on the plot, volume by {', '.join(formulas)}" if formulas else "logs on the plot"
-    return area_parts(check, net, wood, visited, area_m2=options.log_area_m2, part=_COARSE, method=method)
+    told = {"part": _COARSE, "method": method, "shares": shares}
+    return area_parts(check, net, wood, visited, area_m2=options.log_area_m2, **told)
 
 
 def _log_volume(check: RowCheck, length: FloatArray, ends: list[FloatArray], options: DownWoodOptions) -> pd.DataFrame:

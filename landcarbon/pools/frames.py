@@ -28,7 +28,7 @@ from landcarbon.pools.frame_mass import (
     frame_rows,
     row_faults,
 )
-from landcarbon.pools.parts import empty_parts, make_parts
+from landcarbon.pools.parts import RowShares, empty_parts, make_parts
 
 __all__ = ["CARBON_BASES", "FrameOptions", "ground_vegetation", "litter"]
 
@@ -74,7 +74,9 @@ class FrameOptions:
     forest_floor: str = ""
 
 
-def litter(samples: pd.DataFrame, options: FrameOptions) -> tuple[pd.DataFrame, pd.DataFrame]:
+def litter(
+    samples: pd.DataFrame, options: FrameOptions, *, shares: RowShares | None = None
+) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Work out litter and duff per plot from frame samples.
 
     Parameters
@@ -116,19 +118,23 @@ def litter(samples: pd.DataFrame, options: FrameOptions) -> tuple[pd.DataFrame, 
 
     Common practice, no source; the unit bridge of 10 is exact.
     """
-    return _frames(samples, options, "litter")
+    return _frames(samples, options, "litter", shares)
 
 
-def ground_vegetation(samples: pd.DataFrame, options: FrameOptions) -> tuple[pd.DataFrame, pd.DataFrame]:
+def ground_vegetation(
+    samples: pd.DataFrame, options: FrameOptions, *, shares: RowShares | None = None
+) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Work out herbs, shrubs and other ground vegetation per plot from clipped frames.
 
     Parameters and results are those of :func:`litter`; the part is ``ground_vegetation`` of the pool above_ground, and
     all layers (herbs, shrubs, ...) are added into it.
     """
-    return _frames(samples, options, "ground_vegetation")
+    return _frames(samples, options, "ground_vegetation", shares)
 
 
-def _frames(samples: pd.DataFrame, options: FrameOptions, table: str) -> tuple[pd.DataFrame, pd.DataFrame]:
+def _frames(
+    samples: pd.DataFrame, options: FrameOptions, table: str, shares: RowShares | None
+) -> tuple[pd.DataFrame, pd.DataFrame]:
     _check_options(options, table)
     if samples.empty:
         return empty_parts(), empty_findings()
@@ -136,7 +142,9 @@ def _frames(samples: pd.DataFrame, options: FrameOptions, table: str) -> tuple[p
     rows = frame_rows(samples, keys, options, table)
     used, findings = _set_aside(samples, rows, table)
     counted, incomplete = _complete_frames(samples, keys, rows, used, table)
-    parts, totals = _parts(samples, keys, rows, counted, options, table)
+    parts, totals, share = _parts(samples, keys, rows, counted, options, table)
+    if shares is not None:
+        shares.add(table, samples.loc[counted], share[counted])
     notes = [
         incomplete,
         _doubtful_rows(samples, keys, rows, counted, table),
@@ -224,28 +232,30 @@ def _parts(
     counted: np.ndarray,
     options: FrameOptions,
     table: str,
-) -> tuple[pd.DataFrame, dict[str, np.ndarray]]:
+) -> tuple[pd.DataFrame, dict[str, np.ndarray], np.ndarray]:
+    """Parts of the plots, plots each was taken on, and what each row brings in [t C/ha]."""
     pool, names = FRAME_PARTS[table]
     visits = samples.iloc[keys.first_row]
-    tables, taken = [], {}
+    tables, taken, share = [], {}, np.zeros(len(samples))
     for code, name in enumerate(names):
         here = counted & (rows.part == code)
         if not here.any():
             continue
-        carbon, mass, frames = _densities(keys, rows, counted, code)
+        carbon, mass, frames, weight = _densities(keys, rows, counted, code)
+        share[here] = (rows.dry_kg_m2 * rows.share * rows.fraction)[here] * weight[keys.frame[here]]
         taken[name] = frames > 0
         measured = visits.loc[:, ["survey", "plot"]].astype("str")
         measured = measured.assign(density_t_c_ha=carbon, mass_t_ha=mass, samples=frames)[frames > 0]
         measured = measured.sort_values(["survey", "plot"], kind="stable")
         method, known = _method(rows, here, options, pool, name)
         tables.append(make_parts(measured, pool=pool, part=name, method=method, known=known))
-    return (pd.concat(tables, ignore_index=True) if tables else empty_parts()), taken
+    return (pd.concat(tables, ignore_index=True) if tables else empty_parts()), taken, share
 
 
 def _densities(
     keys: FrameKeys, rows: FrameRows, counted: np.ndarray, code: int
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Carbon and mass [t/ha] and number of frames of one part, per visit."""
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Carbon and mass [t/ha] and number of frames of one part, per visit; weight of a kg per m2 of each frame."""
     frames = int(keys.frame.max()) + 1
     visits = len(keys.first_row)
     visit = np.zeros(frames, dtype=np.int64)
@@ -271,8 +281,9 @@ def _densities(
         area = area * (1.0 + summed(frame_area * without) / summed(frame_area * with_part))
         to_t_ha = M2_PER_HECTARE / KG_PER_T
         per_visit = [summed(values * part_area) / area * to_t_ha for values in (carbon, mass)]
+        weight = part_area / area[visit] * to_t_ha
     number = np.where(summed(part_area) > 0, summed((with_part | without).astype(float)), 0)
-    return per_visit[0], per_visit[1], number.astype(np.int64)
+    return per_visit[0], per_visit[1], number.astype(np.int64), weight
 
 
 def _largest(code: np.ndarray, values: np.ndarray, count: int) -> np.ndarray:

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass, field
+
+import numpy as np
 import pandas as pd
 
-__all__ = ["PARTS", "PART_COLUMNS", "column_name", "empty_parts", "make_parts", "pool_of", "wide_parts"]
+__all__ = ["PARTS", "PART_COLUMNS", "RowShares", "column_name", "empty_parts", "make_parts", "pool_of", "wide_parts"]
 
 #: Parts of each pool, in canonical order. A part is measured on its own set of plots.
 PARTS: dict[str, tuple[str, ...]] = {
@@ -26,6 +29,42 @@ PART_COLUMNS = [
     "method",
     "known",  # weakest of the factors used: read, secondary, memory
 ]
+
+
+@dataclass
+class RowShares:
+    """What each row of a sample table brings into the figure of its plot; the modules of the pools add to it.
+
+    Attributes
+    ----------
+    tables : dict
+        By sample table: frames with row_id and density_t_c_ha [t C per ha of the plot].
+    """
+
+    tables: dict[str, list[pd.DataFrame]] = field(default_factory=dict)
+
+    def add(self, table: str, rows: pd.DataFrame, density_t_c_ha: np.ndarray) -> None:
+        """Add the shares of some rows.
+
+        Parameters
+        ----------
+        table : str
+            Canonical name of the table.
+        rows : DataFrame
+            The rows, with row_id.
+        density_t_c_ha : ndarray
+            Share of each; those of a plot and part sum to its figure.
+        """
+        told = pd.DataFrame({"row_id": rows["row_id"].to_numpy(), "density_t_c_ha": density_t_c_ha})
+        self.tables.setdefault(table, []).append(told)
+
+    def of(self, table: str, rows: pd.DataFrame) -> np.ndarray:
+        """Share of each row of a table; NaN for rows that bring in nothing of their own."""
+        parts = self.tables.get(table)
+        if not parts:
+            return np.full(len(rows), np.nan)
+        told = pd.concat(parts, ignore_index=True).set_index("row_id")["density_t_c_ha"]
+        return told.reindex(rows["row_id"].to_numpy()).to_numpy(dtype=float)
 
 
 def column_name(pool: str, part: str) -> str:

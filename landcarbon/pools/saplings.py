@@ -11,7 +11,7 @@ import pandas as pd
 from landcarbon.constants import KG_PER_T, M2_PER_HECTARE
 from landcarbon.errors import SettingsError
 from landcarbon.findings import join_findings, make_findings
-from landcarbon.pools.parts import empty_parts, make_parts
+from landcarbon.pools.parts import RowShares, empty_parts, make_parts
 
 __all__ = ["SaplingOptions", "saplings"]
 
@@ -38,7 +38,12 @@ class SaplingOptions:
 
 
 def saplings(
-    samples: pd.DataFrame, plan_biomass_kg: np.ndarray, carbon_fraction: np.ndarray, options: SaplingOptions
+    samples: pd.DataFrame,
+    plan_biomass_kg: np.ndarray,
+    carbon_fraction: np.ndarray,
+    options: SaplingOptions,
+    *,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Work out the carbon of small stems tallied on small plots.
 
@@ -53,6 +58,8 @@ def saplings(
         t C per t dry matter, per row.
     options : SaplingOptions
         Area where the rows give none; marks of the equations.
+    shares : RowShares, optional
+        Takes what each row brings in.
 
     Returns
     -------
@@ -102,7 +109,9 @@ def saplings(
     carbon = np.where(empty[used], 0.0, mass * fraction[used])
     rows = samples.loc[used, ["survey", "plot", "subplot"]].astype("str")
     rows = rows.assign(count=count[used], area=area[used], mass=mass, carbon=carbon)
-    measured, mixed = _by_plot(rows)
+    measured, mixed, weight = _by_plot(rows)
+    if shares is not None:
+        shares.add(TABLE, samples.loc[used], carbon * weight)
     findings.append(_mixed_areas(mixed))
     method = f"tally plots: stems x mass per stem ({options.equations}) over the area tallied"
     parts = make_parts(measured, pool="above_ground", part="saplings", method=method, known=options.known)
@@ -192,7 +201,8 @@ def _faults(
     )
 
 
-def _by_plot(rows: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
+def _by_plot(rows: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame, np.ndarray]:
+    """Figures of plots, tally plots with several areas, and what a kg per m2 of each row weighs in its plot."""
     keys = ["survey", "plot", "subplot"]
     tally = rows.groupby(keys, as_index=False, sort=False).agg(
         count=("count", "sum"),
@@ -210,7 +220,9 @@ def _by_plot(rows: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
         mass_t_ha=totals["mass"] / totals["area"] * to_t_ha,
         samples=np.rint(totals["count"]).astype("int64"),
     )
-    return measured, mixed
+    whole = rows[["survey", "plot"]].merge(totals[["survey", "plot", "area"]], how="left", on=["survey", "plot"])
+    own = rows[keys].merge(tally[[*keys, "area"]], how="left", on=keys)
+    return measured, mixed, own["area"].to_numpy() / whole["area"].to_numpy() * to_t_ha
 
 
 def _mixed_areas(mixed: pd.DataFrame) -> pd.DataFrame:

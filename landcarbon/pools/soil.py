@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 
 from landcarbon.findings import join_findings
-from landcarbon.pools.parts import empty_parts, make_parts
+from landcarbon.pools.parts import RowShares, empty_parts, make_parts
 from landcarbon.pools.soil_factors import (
     SoilOptions,
     SoilWindow,
@@ -47,15 +47,18 @@ _KNOWN = ("read", "secondary", "memory")
 
 @dataclass(frozen=True)
 class _Profiles:
-    """Outcome per core."""
+    """Outcome per core; ``layer_carbon`` is that of each layer down to a reference depth [t C/ha]."""
 
     carbon_t_ha: np.ndarray
     mass_t_ha: np.ndarray
     used: np.ndarray
     flags: np.ndarray
+    layer_carbon: np.ndarray
 
 
-def soil(samples: pd.DataFrame, options: SoilOptions) -> tuple[pd.DataFrame, pd.DataFrame]:
+def soil(
+    samples: pd.DataFrame, options: SoilOptions, *, shares: RowShares | None = None
+) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Carbon density of the soil of every plot and survey that has a sound core.
 
     Parameters
@@ -66,6 +69,9 @@ def soil(samples: pd.DataFrame, options: SoilOptions) -> tuple[pd.DataFrame, pd.
         inorganic_carbon_share [g/g], cores (number of cores mixed), used.
     options : SoilOptions
         What the numbers mean, and the reference depth or mass.
+    shares : RowShares, optional
+        Takes what each layer brings in; with a reference mass no layer has a share of its own, as the carbon is read
+        off a curve through all of them.
 
     Returns
     -------
@@ -101,7 +107,11 @@ def soil(samples: pd.DataFrame, options: SoilOptions) -> tuple[pd.DataFrame, pd.
         profiles, more = _to_depth(samples, layers, options, overlap, gap)
     else:
         profiles, more = _to_mass(samples, layers, options, overlap, gap)
-    rows, unequal = _plot_rows(samples, layers, profiles, options)
+    rows, unequal, weight = _plot_rows(samples, layers, profiles, options)
+    if shares is not None and len(profiles.layer_carbon):
+        kept = profiles.used[layers.core]
+        told = (profiles.layer_carbon * weight[layers.core])[kept]
+        shares.add("soil", samples.iloc[layers.row[kept]], told)
     return rows, join_findings([*parts, more, unequal])
 
 
@@ -210,7 +220,8 @@ def _to_depth(
     else:
         used = used & ~short
     mass = layers.fine_t_ha_cm * thickness
-    carbon = np.add.reduceat(mass * layers.carbon, starts)
+    layer_carbon = mass * layers.carbon
+    carbon = np.add.reduceat(layer_carbon, starts)
     at_end = np.zeros(len(layers.row), dtype=bool)
     at_end[last[short]] = True
     findings = [
@@ -225,7 +236,7 @@ def _to_depth(
     below = int(np.count_nonzero(layers.top_cm >= depth - tolerance))
     if below:
         findings.append(soil_finding("below reference", count=below, depth=depth))
-    profiles = _Profiles(carbon, np.add.reduceat(mass, starts), used, flags)
+    profiles = _Profiles(carbon, np.add.reduceat(mass, starts), used, flags, layer_carbon)
     return profiles, join_findings(findings)
 
 
@@ -256,7 +267,7 @@ def _to_mass(
     if bent:
         findings.append(soil_finding("not monotone", count=bent))
     flags = np.bitwise_or.reduceat(np.where(sound, layers.flags, 0), starts) | curve
-    return _Profiles(carbon, np.full(len(starts), reference), used, flags), join_findings(findings)
+    return _Profiles(carbon, np.full(len(starts), reference), used, flags, np.zeros(0)), join_findings(findings)
 
 
 def _core_findings(
@@ -311,8 +322,8 @@ def _tell_high(
 
 def _plot_rows(
     samples: pd.DataFrame, layers: Layers, profiles: _Profiles, options: SoilOptions
-) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Average the sound cores of each plot, by the number of cores mixed in each."""
+) -> tuple[pd.DataFrame, pd.DataFrame, np.ndarray]:
+    """Average the sound cores of each plot, by the number of cores mixed in each; also the weight of every core."""
     starts = layers.starts
     weight = np.minimum.reduceat(layers.cores, starts)
     differ = profiles.used & (np.maximum.reduceat(layers.cores, starts) != weight)
@@ -321,7 +332,7 @@ def _plot_rows(
         told = soil_finding("cores differ", samples.iloc[layers.row[starts[differ]]])
     plot = layers.plot[starts][profiles.used]
     if not len(plot):
-        return empty_parts(), told
+        return empty_parts(), told, np.zeros(len(starts))
     number = len(layers.plots)
     weight = weight[profiles.used]
     total = np.bincount(plot, weights=weight, minlength=number)
@@ -342,7 +353,9 @@ def _plot_rows(
     methods = np.array([_method(int(kind), options) for kind in kinds], dtype=object)
     known = np.array([_weakest(int(kind), options) for kind in kinds], dtype=object)
     rows = rows.assign(method=pd.Series(methods[which], dtype="str"), known=pd.Series(known[which], dtype="str"))
-    return rows, told
+    in_plot = np.zeros(len(starts))
+    in_plot[profiles.used] = weight / total[plot]
+    return rows, told, in_plot
 
 
 def _method(flags: int, options: SoilOptions) -> str:

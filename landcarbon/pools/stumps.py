@@ -11,6 +11,7 @@ from numpy.typing import ArrayLike, NDArray
 from landcarbon.constants import BREAST_HEIGHT_M
 from landcarbon.factors.dead_wood import rule
 from landcarbon.pools._pieces import area_parts, check_large
+from landcarbon.pools.parts import RowShares
 from landcarbon.pools.piece_volume import cylinder, section_m2
 from landcarbon.pools.wood import RowCheck, WoodOptions, default_class, wood_of
 
@@ -71,7 +72,12 @@ def stump_volume(height_m: ArrayLike, diameter_cm: ArrayLike, *, taper: float = 
 
 
 def stumps(
-    stumps: pd.DataFrame, visited: pd.DataFrame, options: StumpOptions, species: pd.DataFrame
+    stumps: pd.DataFrame,
+    visited: pd.DataFrame,
+    options: StumpOptions,
+    species: pd.DataFrame,
+    *,
+    shares: RowShares | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Carbon of stumps per plot.
 
@@ -85,6 +91,8 @@ def stumps(
         Area, shape and defaults.
     species : DataFrame
         species, scientific_name, conifer, wood_density_g_cm3.
+    shares : RowShares, optional
+        Takes what each stump brings in.
 
     Returns
     -------
@@ -107,4 +115,5 @@ def stumps(
     check.wood(wood, default_class(options))
     volume = stump_volume(height, diameter, taper=options.taper)
     method = "stumps as cylinders" if np.isnan(options.taper) else f"stumps with taper B = {options.taper:g}"
-    return area_parts(check, volume, wood, visited, area_m2=options.log_area_m2, part="stumps", method=method)
+    told = {"part": "stumps", "method": method, "shares": shares}
+    return area_parts(check, volume, wood, visited, area_m2=options.log_area_m2, **told)

@@ -23,7 +23,7 @@ from landcarbon.errors import ResultsError
 from landcarbon.publish.geopackage import read_parcels, read_plot_points, write_geopackage
 from landcarbon.publish.provenance import is_ours, read_provenance, write_provenance
 from landcarbon.publish.readme import write_readme
-from landcarbon.publish.results import SAMPLE_FILES, Results
+from landcarbon.publish.results import FURTHER_FILES, SAMPLE_FILES, Results
 from landcarbon.publish.tables import read_table, write_table
 
 __all__ = ["RESULT_FILES", "check_target", "open_results", "write_results"]
@@ -156,7 +156,8 @@ def open_results(folder: Path) -> Results:
             remedy="Name the folder that a run wrote",
         )
     samples = [SAMPLE_FILES[name] for name in _sample_names(record)]
-    missing = [name for name in (*RESULT_FILES, *samples) if not (place / name).is_file()]
+    further = [FURTHER_FILES[name] for name in _further_names(record)]
+    missing = [name for name in (*RESULT_FILES, *samples, *further) if not (place / name).is_file()]
     if missing:
         raise ResultsError(
             f"the results are incomplete: {', '.join(missing)} missing",
@@ -176,6 +177,8 @@ def open_results(folder: Path) -> Results:
 def _writers(results: Results, base_tiles: bool) -> dict[str, Callable[[Results, Path], None]]:
     return {
         **{SAMPLE_FILES[name]: _sample_writer(name) for name in results.samples},
+        **{FURTHER_FILES[name]: _further_writer(name) for name in results.further},
+        **{name: _raster_writer(name) for name in results.rasters},
         "stocks.csv": lambda results, path: write_table(results.stocks, path),
         "change.csv": lambda results, path: write_table(results.change, path),
         "findings.csv": lambda results, path: write_table(results.findings, path),
@@ -195,6 +198,19 @@ def _write_parquet(frame: pd.DataFrame, path: Path) -> None:
 
 def _sample_writer(name: str) -> Callable[[Results, Path], None]:
     return lambda results, path: _write_parquet(results.samples[name], path)
+
+
+def _further_writer(name: str) -> Callable[[Results, Path], None]:
+    return lambda results, path: write_table(results.further[name], path)
+
+
+def _raster_writer(name: str) -> Callable[[Results, Path], None]:
+    return lambda results, path: results.rasters[name](path)
+
+
+def _further_names(record: dict[str, Any]) -> list[str]:
+    """Further tables that a run wrote."""
+    return [name for name in record.get("further", []) if name in FURTHER_FILES]
 
 
 def _sample_names(record: dict[str, Any]) -> list[str]:
@@ -230,6 +246,7 @@ def _read(place: Path, record: dict[str, Any]) -> Results:
         area_method=record["area_method"],
         marks=record["marks"],
         samples={name: pd.read_parquet(place / SAMPLE_FILES[name]) for name in _sample_names(record)},
+        further={name: read_table(place / FURTHER_FILES[name]) for name in _further_names(record)},
     )
 
 
@@ -271,7 +288,8 @@ def _recover(target: Path) -> None:
 
 def _retire(old: Path, target: Path) -> None:
     """Remove results that have been replaced, but carry over what the user had put beside them."""
-    ours = {*RESULT_FILES, *SAMPLE_FILES.values(), *_SIDE_FILES}
+    rasters = (read_provenance(old / _RUN_FILE) or {}).get("rasters", [])
+    ours = {*RESULT_FILES, *SAMPLE_FILES.values(), *FURTHER_FILES.values(), *_SIDE_FILES, *map(str, rasters)}
     for item in old.iterdir():
         if item.name not in ours and not (target / item.name).exists():
             os.replace(item, target / item.name)

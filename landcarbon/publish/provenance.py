@@ -20,7 +20,18 @@ __all__ = ["MADE_BY", "count_findings", "is_ours", "plain", "read_provenance", "
 
 MADE_BY = "landcarbon results folder"
 _FORM = 1
-_PACKAGES = ("landcarbon", "numpy", "pandas", "geopandas", "shapely", "pyogrio", "pyarrow", "folium")
+_PACKAGES = (
+    "landcarbon",
+    "numpy",
+    "pandas",
+    "geopandas",
+    "shapely",
+    "pyogrio",
+    "pyarrow",
+    "folium",
+    "rasterio",
+    "exactextract",
+)
 
 
 def write_provenance(results: Results, path: Path) -> None:
@@ -46,6 +57,8 @@ def write_provenance(results: Results, path: Path) -> None:
         "area_method": results.area_method,
         "has_parcels": results.parcels is not None,
         "samples": list(results.samples),
+        "further": list(results.further),
+        "rasters": list(results.rasters),
         "findings": count_findings(results.findings).to_dict(orient="records"),
         "marks": list(results.marks),
         "cautions": CAUTIONS,

@@ -10,8 +10,15 @@ import jinja2
 
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.publish.columns import columns_of, describe
-from landcarbon.publish.results import CHANGE_COLUMNS, SAMPLE_FILES, STOCK_COLUMNS, Results
-from landcarbon.publish.words import CAUTIONS, POOL_NAMES, SIGN_RULE
+from landcarbon.publish.results import (
+    CHANGE_COLUMNS,
+    FURTHER_FILES,
+    OPTIONAL_COLUMNS,
+    SAMPLE_FILES,
+    STOCK_COLUMNS,
+    Results,
+)
+from landcarbon.publish.words import CAUTIONS, FURTHER_WORDS, POOL_NAMES, SIGN_RULE, raster_words
 
 __all__ = ["readme_text", "write_readme"]
 
@@ -49,6 +56,8 @@ def readme_text(results: Results) -> str:
         pools=[(pool, name) for pool, name in POOL_NAMES.items() if pool in present],
         tables=[(table, _table_lines(table, names, results)) for table, names in _written(results).items()],
         samples=[(SAMPLE_FILES[name], name.replace("_", " ")) for name in results.samples],
+        further=[(FURTHER_FILES[name], FURTHER_WORDS[name]) for name in results.further],
+        rasters=[(name, raster_words(name)) for name in results.rasters],
         sign_rule=SIGN_RULE,
         area_method=results.area_method or "No areas were given.",
         marks=results.marks,
@@ -80,8 +89,9 @@ def _written(results: Results) -> dict[str, Iterable[str]]:
         paired = not results.change.empty
         layers["parcels.gpkg parcels"] = [*own, *(name for name in figures if paired or "{pair}" not in name)]
     tables = {
-        "stocks.csv": STOCK_COLUMNS,
-        "change.csv": CHANGE_COLUMNS,
+        "stocks.csv": [*STOCK_COLUMNS, *(name for name in OPTIONAL_COLUMNS if name in results.stocks)],
+        "change.csv": [*CHANGE_COLUMNS, *(name for name in OPTIONAL_COLUMNS if name in results.change)],
+        **{FURTHER_FILES[name]: map(str, frame.columns) for name, frame in results.further.items()},
         "findings.csv": FINDING_COLUMNS,
         "reconciliation.csv": map(str, results.reconciliation.columns),
         "trees.parquet": map(str, results.trees.columns),

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -14,11 +16,26 @@ from landcarbon.inventory.models import SAMPLE_TABLES
 if TYPE_CHECKING:
     import geopandas as gpd
 
-__all__ = ["CHANGE_COLUMNS", "SAMPLE_FILES", "STOCK_COLUMNS", "Results", "parts_of_plots", "sums_of_plots"]
+__all__ = [
+    "CHANGE_COLUMNS",
+    "FURTHER_FILES",
+    "OPTIONAL_COLUMNS",
+    "SAMPLE_FILES",
+    "STOCK_COLUMNS",
+    "Results",
+    "parts_of_plots",
+    "sums_of_plots",
+]
 
 
 #: Files of the sample tables by the name of the table; a results folder holds those it has samples for.
 SAMPLE_FILES = {table: f"samples_{table}.parquet" for table in SAMPLE_TABLES}
+#: Files of what not every inventory has, by the name in ``Results.further``.
+FURTHER_FILES = {
+    name: f"{name}.csv" for name in ("trend", "area_effect", "parcel_detail", "parcel_models", "raster_models")
+}
+#: Columns that stocks and change have if the project file asks for lower bounds.
+OPTIONAL_COLUMNS = ("density_at_least", "stock_at_least", "change_at_least")
 
 
 @dataclass(frozen=True)
@@ -60,6 +77,11 @@ class Results:
     samples : dict of DataFrame
         Rows of the sample tables (pieces, lines, logs, stumps, litter, ground_vegetation, saplings, soil) by the name
         of the table, as far as there are any, with ``used`` as it ended.
+    further : dict of DataFrame
+        Further tables by the names of ``FURTHER_FILES``, as far as there are any: trend lines, what a change of area
+        brings, how the figures of parcels are composed, and the models behind them.
+    rasters : dict
+        Writers of the rasters of the run by file name; empty in results read back.
     """
 
     settings_summary: dict[str, Any]
@@ -77,6 +99,8 @@ class Results:
     area_method: str = ""
     marks: list[str] = field(default_factory=list)
     samples: dict[str, pd.DataFrame] = field(default_factory=dict)
+    further: dict[str, pd.DataFrame] = field(default_factory=dict)
+    rasters: dict[str, Callable[[Path], None]] = field(default_factory=dict)
 
     @property
     def name(self) -> str:

@@ -10,18 +10,20 @@ import pandas as pd
 
 from landcarbon.errors import ResultsError
 from landcarbon.findings import FINDING_COLUMNS
-from landcarbon.publish.results import CHANGE_COLUMNS, STOCK_COLUMNS
+from landcarbon.publish.results import CHANGE_COLUMNS, OPTIONAL_COLUMNS, STOCK_COLUMNS
 
 __all__ = ["TEXT_COLUMNS", "read_table", "restore_text", "safe_text", "table_columns", "write_table"]
 
 #: Columns of the published tables that hold text; all others are numbers, except where named below.
 TEXT_COLUMNS = frozenset(
     {"by", "unit", "survey", "since", "until", "pool", "method", "severity", "rule", "table", "file", "column", "value"}
-    | {"plot", "tree", "message", "remedy", "step"}
+    | {"plot", "tree", "message", "remedy", "step", "parcel", "stratum"}
 )
 _TRUTH_COLUMNS = frozenset({"used"})
 _WHOLE_COLUMNS = frozenset({"row", "row_id"})
-_NUMBER_COLUMNS = frozenset([*STOCK_COLUMNS, *CHANGE_COLUMNS, *FINDING_COLUMNS]) - TEXT_COLUMNS - _TRUTH_COLUMNS
+_NUMBER_COLUMNS = (
+    frozenset([*OPTIONAL_COLUMNS, *STOCK_COLUMNS, *CHANGE_COLUMNS, *FINDING_COLUMNS]) - TEXT_COLUMNS - _TRUTH_COLUMNS
+)
 
 # Ten significant digits: far beyond what a sample can tell, short enough to hide the last-bit noise of summation.
 _FLOAT_FORMAT = "%.10g"
@@ -70,6 +72,8 @@ def write_table(frame: pd.DataFrame, path: Path) -> None:
         File to write; its name decides the columns (:func:`table_columns`).
     """
     columns = table_columns(path.name)
+    if columns is not None:
+        columns = columns + [name for name in OPTIONAL_COLUMNS if name in frame]
     shown = frame if columns is None else frame[columns]
     written = {str(name): _written(shown[name]) for name in shown.columns}
     table = pd.DataFrame(written, columns=[str(name) for name in shown.columns])

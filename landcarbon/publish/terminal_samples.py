@@ -64,6 +64,9 @@ def samples_table(table: str, rows: pd.DataFrame, most: int) -> Table:
     cells = [_text(spec, shown[spec.becomes]) for spec in _measured(table, shown)]
     headings = [("file and line", "left"), ("plot", "left")]
     headings += [(_heading(spec), "right" if spec.kind == "number" else "left") for spec in _measured(table, shown)]
+    if "density_t_c_ha" in shown and shown["density_t_c_ha"].notna().any():
+        headings.append(("t C/ha", "right"))
+        cells.append(["" if pd.isna(value) else f"{value:.4f}" for value in shown["density_t_c_ha"]])
     made = table_of(title, [*headings, ("used", "left")], whole=("file and line", "plot"))
     places = shown["file"].astype("str") + " " + shown["row"].astype("str")
     used = shown["used"].map({True: "yes", False: "no"})

@@ -19,7 +19,7 @@ from landcarbon.read.source import FileLog, find_source
 if TYPE_CHECKING:
     from landcarbon.read.parcels import ParcelTable
 
-__all__ = ["make_strata", "read_species", "read_stated_areas"]
+__all__ = ["first_phase_points", "make_strata", "read_species", "read_stated_areas"]
 
 
 def read_stated_areas(settings: Settings, log: FileLog) -> tuple[pd.Series, list[pd.DataFrame]]:
@@ -46,6 +46,10 @@ def read_stated_areas(settings: Settings, log: FileLog) -> tuple[pd.Series, list
     findings: list[pd.DataFrame] = []
     areas = pd.Series(dict(strata.areas), dtype="float64")
     areas = pd.Series(convert(areas.to_numpy(), strata.unit, "ha"), index=areas.index, dtype="float64")
+    if strata.first_phase_area is not None:
+        points = pd.Series(dict(strata.first_phase), dtype="float64")
+        whole = convert(np.array([strata.first_phase_area]), strata.unit, "ha")[0]
+        areas = whole * points / points.sum()
     if strata.file:
         source = find_source(strata.file, settings.folder, "strata", allow_outside=settings.inventory.allow_outside)
         mapped = read_mapped(source, "strata", settings, log)
@@ -66,8 +70,17 @@ def read_stated_areas(settings: Settings, log: FileLog) -> tuple[pd.Series, list
     return merged, findings
 
 
+def first_phase_points(settings: Settings) -> pd.Series | None:
+    """Points of the first phase by stratum, folded strata added up; None without a first phase."""
+    if not settings.strata.first_phase:
+        return None
+    points = pd.Series(dict(settings.strata.first_phase), dtype="float64")
+    folded: pd.Series = points.groupby(points.index.to_series().replace(dict(settings.strata.merge)).to_numpy()).sum()
+    return folded
+
+
 def make_strata(
-    stated: pd.Series, plots: pd.DataFrame, parcels: ParcelTable | None
+    stated: pd.Series, plots: pd.DataFrame, parcels: ParcelTable | None, first_phase: pd.Series | None = None
 ) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
     """Settle the area of every stratum: stated before measured.
 
@@ -79,6 +92,8 @@ def make_strata(
         ``Inputs.plots``.
     parcels : ParcelTable or None
         Parcels.
+    first_phase : Series, optional
+        Points of a first phase by stratum.
 
     Returns
     -------
@@ -96,6 +111,8 @@ def make_strata(
     frame["area_ha"] = said.fillna(drawn)
     source = np.where(said.notna(), "stated", np.where(drawn.notna(), "polygons", "unknown"))
     frame["area_source"] = pd.Series(source, dtype="str")
+    if first_phase is not None:
+        frame["first_phase"] = frame["stratum"].map(first_phase).astype("float64")
     off = (said / drawn - 1).abs() > limit("area", "stated_difference")
     words = pd.DataFrame({"stated": said[off].map("{:.4f}".format), "measured": drawn[off].map("{:.4f}".format)})
     unknown = frame[frame["area_source"] == "unknown"]
