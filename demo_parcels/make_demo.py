@@ -14,6 +14,7 @@ import pandas as pd
 import pyogrio
 import pyproj
 import shapely
+from canopy import write_canopy
 from floor_sheets import write_floor
 from sheets import FIXED_TIME, Fault, fault_lines, write_xlsx
 from woodland import (
@@ -251,6 +252,7 @@ def make_demo(folder: Path) -> None:
     _write_gpkg(parcels, folder / "parcels.gpkg")
     faults = _write_tables(plots, visits, folder) + _write_trees(sheet, folder)
     faults += write_floor(plots, visits, states, folder, SEED)
+    write_canopy(parcels, plots, states, folder, SEED)
     _write_readme(faults, folder)
 
 

@@ -118,9 +118,10 @@ class Inventory:
         table = self.results.change
         rows = table[(table["since"] == str(since)) & (table["until"] == str(until))]
         if rows.empty:
-            from landcarbon.pipeline import change_between
+            from landcarbon.pipeline import estimation_plan
+            from landcarbon.reckon import reckon_change
 
-            rows, _ = change_between(self.stage, self.settings, str(since), str(until))
+            rows = reckon_change(estimation_plan(self.stage, self.settings), str(since), str(until))[0]
         return self._select(rows, by, pool)
 
     def map(self, path: str | Path, *, base_tiles: bool = False) -> Path:

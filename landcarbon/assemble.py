@@ -15,13 +15,16 @@ from landcarbon.marks import area_marks, part_marks, pool_marks, row_marks, tree
 from landcarbon.pipeline import (
     PlotStage,
     carbon_domain,
-    estimate,
+    estimation_plan,
     measure_trees,
     read_and_check,
     root_model,
 )
 from landcarbon.pools.parts import RowShares
-from landcarbon.publish.results import Results
+from landcarbon.publish.results import RasterRequest, Results
+from landcarbon.read.raster_files import find_raster
+from landcarbon.read.source import FileLog
+from landcarbon.reckon import Plan, reckon
 from landcarbon.statements import measured_columns
 
 if TYPE_CHECKING:
@@ -58,14 +61,16 @@ def run_stage(settings: Settings, *, progress: Callable[[str], None] = lambda _:
 
 def assemble(stage: PlotStage, settings: Settings) -> Results:
     """Estimate from the plots and gather everything that is published."""
-    stocks, change, findings = estimate(stage, settings)
+    plan = estimation_plan(stage, settings)
+    figures = reckon(plan)
+    stocks = figures.stocks
     inputs = stage.inputs
-    all_findings = join_findings([inputs.findings, findings])
+    all_findings = join_findings([inputs.findings, figures.findings])
     counts = reconcile(inputs)
     return Results(
         settings_summary=_summary(settings),
         stocks=stocks,
-        change=change,
+        change=figures.change,
         findings=all_findings,
         trees=inputs.trees,
         plots=long_plots(stage, settings),
@@ -73,17 +78,43 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
         plot_points=inputs.plots[["plot", "parcel", "stratum", "lon", "lat", "inside"]],
         surveys=inputs.surveys,
         reconciliation=counts,
-        run={"inputs": inputs.files.to_dict(orient="records"), "equations": _equations_used(stage)},
+        run={"inputs": _files_read(stage, plan), "equations": _equations_used(stage)},
         crs=inputs.crs,
         area_method=inputs.area_method,
+        further=figures.further,
+        rasters=raster_request(plan),
         samples=_samples(inputs.samples, all_findings, stage.shares),
         marks=_marks(stage, settings, stocks, all_findings, counts),
     )
 
 
-def _samples(
-    samples: dict[str, pd.DataFrame], findings: pd.DataFrame, shares: RowShares
-) -> dict[str, pd.DataFrame]:
+def raster_request(plan: Plan) -> RasterRequest | None:
+    """Say what the rasters of the results are made from; None where none are wanted."""
+    cell_m = plan.settings.estimation.map_cell_m
+    parcels, auxiliary, assisted = plan.inputs.parcels, plan.auxiliary, plan.assisted
+    if parcels is None or (cell_m is None and auxiliary is None):
+        return None
+    if auxiliary is None or assisted is None:
+        return RasterRequest(plan.settings.inventory.name, parcels, plan.place, cell_m=cell_m)
+    lines = assisted.models[assisted.models["of"] == "all"]
+    coefficients = lines.rename(columns={"coefficient": "value"})[["survey", "stratum", "term", "value"]]
+    return RasterRequest(
+        plan.settings.inventory.name, parcels, plan.place, auxiliary.files, coefficients, cell_m=cell_m
+    )
+
+
+def _files_read(stage: PlotStage, plan: Plan) -> list[dict[str, Any]]:
+    """Tables and rasters with their checksums."""
+    log = FileLog()
+    if plan.auxiliary is not None:
+        place = plan.auxiliary.place
+        for file in plan.auxiliary.files:
+            log.add(find_raster(file, place.folder, allow_outside=place.allow_outside), 0, columns=file.name)
+    table = pd.concat([stage.inputs.files, log.frame()], ignore_index=True)
+    return [{str(name): value for name, value in row.items()} for row in table.to_dict(orient="records")]
+
+
+def _samples(samples: dict[str, pd.DataFrame], findings: pd.DataFrame, shares: RowShares) -> dict[str, pd.DataFrame]:
     """Sample tables with ``used`` as it ended (modules of the pools set rows aside) and what each row brings in."""
     aside = findings[~findings["used"]].dropna(subset="row_id")
     ended = {}

@@ -47,6 +47,14 @@ class Inputs:
     samples : dict of DataFrame
         Tables of the other pools by name (pieces, lines, logs, stumps, litter, ground_vegetation, saplings, soil); only
         those the project file names.
+    parcel_versions : GeoDataFrame, optional
+        Every outline the parcels have had, where the parcels file says how long each was in force: parcel, stratum,
+        land_use, area_ha, valid_from, valid_to, geometry. ``parcels`` then holds those in force at the latest survey.
+    parcels_in_force : DataFrame, optional
+        survey, parcel, row: which rows of ``parcel_versions`` were in force at each survey.
+    parcel_of : DataFrame, optional
+        survey, plot, parcel, stratum, inside: where each plot lay within the boundaries of each survey. ``plots`` then
+        says where it lay at the latest survey at which it was in the inventory.
     """
 
     trees: pd.DataFrame
@@ -61,3 +69,6 @@ class Inputs:
     crs: str | None
     area_method: str
     samples: dict[str, pd.DataFrame] = field(default_factory=dict)
+    parcel_versions: gpd.GeoDataFrame | None = None
+    parcels_in_force: pd.DataFrame | None = None
+    parcel_of: pd.DataFrame | None = None

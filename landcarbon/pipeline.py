@@ -6,7 +6,6 @@ Every step is a function from tables to tables; this module only calls them in o
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -21,7 +20,7 @@ from landcarbon.check.run import run_checks
 from landcarbon.check.stand import stand_findings
 from landcarbon.columns import with_columns
 from landcarbon.errors import UserError
-from landcarbon.estimate.area_effect import place_by_survey
+from landcarbon.estimate.common_area import place_by_survey
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.inventory.measured import measured_parts, surveys_with_trees
 from landcarbon.plots import TREE_PARTS, PlotDesign, expansion_factors, plot_parts, plot_sums, visit_index
@@ -36,10 +35,10 @@ from landcarbon.pools.trees import (
     tree_biomass,
     tree_findings,
 )
-from landcarbon.publish.results import CHANGE_COLUMNS
+from landcarbon.read.auxiliary import read_auxiliary, read_post_strata
 from landcarbon.read.load import load_inputs
+from landcarbon.reckon import Figures, Plan, make_plan, reckon
 from landcarbon.sample_pools import join_parts, keep_declared, pool_sums, sample_parts
-from landcarbon.statements import state_change, state_stocks
 
 if TYPE_CHECKING:
     from landcarbon.inputs import Inputs
@@ -48,13 +47,12 @@ if TYPE_CHECKING:
 __all__ = [
     "PlotStage",
     "carbon_domain",
-    "change_between",
     "design_of",
     "estimate",
+    "estimation_plan",
     "measure_trees",
     "read_and_check",
     "root_model",
-    "survey_pairs",
     "tree_parts",
 ]
 
@@ -192,52 +190,22 @@ def _without_tally(table: pd.DataFrame, settings: Settings) -> pd.DataFrame:
     return table.assign(**{name: table[name].mask(untallied) for name in columns})
 
 
-def estimate(stage: PlotStage, settings: Settings) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
-    """Estimate stocks at every survey and change between them.
+def estimation_plan(stage: PlotStage, settings: Settings) -> Plan:
+    """Prepare what the figures are reckoned from, rasters read.
 
-    Returns
-    -------
-    stocks, change, findings : DataFrame
+    Raises
+    ------
+    UserError
+        If a raster cannot be used, or classes and their areas do not go together.
     """
-    surveys = [str(name) for name in stage.inputs.surveys["survey"]]
-    stocks, findings = state_stocks(stage.plot_parts, stage.sums, surveys, **_options(stage, settings))
-    parts, found = [], [findings]
-    for since, until in survey_pairs(surveys):
-        part, finding = change_between(stage, settings, since, until)
-        parts.append(part)
-        found.append(finding)
-    parts = [part for part in parts if len(part)]
-    change = pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=CHANGE_COLUMNS)
-    return stocks, change, join_findings(found)
+    auxiliary = read_auxiliary(settings, stage.inputs)
+    classes = read_post_strata(settings, stage.inputs)
+    return make_plan(stage.inputs, settings, stage.plot_parts, stage.sums, auxiliary, classes)
 
 
-def change_between(stage: PlotStage, settings: Settings, since: str, until: str) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Estimate change between any two surveys.
-
-    Returns
-    -------
-    change, findings : DataFrame
-    """
-    return state_change(stage.plot_parts, stage.sums, since, until, **_options(stage, settings))
-
-
-def _options(stage: PlotStage, settings: Settings) -> dict[str, Any]:
-    inputs = stage.inputs
-    parcels = None if inputs.parcels is None else pd.DataFrame(inputs.parcels.drop(columns="geometry"))
-    return {
-        "strata": inputs.strata,
-        "parcels": parcels,
-        "confidence": settings.inventory.confidence,
-        "inventory_name": settings.inventory.name,
-    }
-
-
-def survey_pairs(surveys: list[str]) -> list[tuple[str, str]]:
-    """Pairs of surveys that change is stated for: each with the next, and the first with the last."""
-    pairs = list(pairwise(surveys))
-    if len(surveys) > 2:
-        pairs.append((surveys[0], surveys[-1]))
-    return pairs
+def estimate(stage: PlotStage, settings: Settings) -> Figures:
+    """Estimate stocks at every survey, change between them, and what else the project file asks for."""
+    return reckon(estimation_plan(stage, settings))
 
 
 def tree_parts(settings: Settings) -> list[str]:

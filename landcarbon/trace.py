@@ -50,6 +50,9 @@ class Trace:
         By table, the sample rows of that survey on those plots behind the parts of the pool, used or not, plot by plot.
     one_plot : bool
         Whether one plot was asked for.
+    composition : DataFrame
+        How the figure of a parcel is composed, pool by pool: pool, plots, direct, weight_direct, synthetic, composite,
+        adjustment, density, density_se [t C/ha]; without rows where it is not.
     """
 
     row: pd.Series
@@ -60,6 +63,7 @@ class Trace:
     notes: tuple[str, ...] = ()
     samples: dict[str, pd.DataFrame] = field(default_factory=dict)
     one_plot: bool = False
+    composition: pd.DataFrame = field(default_factory=pd.DataFrame)
 
 
 def trace_unit(
@@ -126,7 +130,20 @@ def trace_unit(
         _notes(pool, here, model),
         samples=_samples(results, tables, when, names),
         one_plot=plot is not None,
+        composition=_composition(results, row) if plot is None else pd.DataFrame(),
     )
+
+
+def _composition(results: Results, row: pd.Series) -> pd.DataFrame:
+    """Find what a composite figure of a parcel is made of."""
+    detail = results.further.get("parcel_detail")
+    if detail is None or row["by"] != "parcel" or not str(row["method"]).startswith(("composite", "synthetic")):
+        return pd.DataFrame()
+    keys = detail[["of", "survey", "parcel"]].astype("str")
+    mine = (keys["of"] == "stocks") & (keys["survey"] == row["survey"]) & (keys["parcel"] == row["unit"])
+    pools = detail["pool"].astype("str")
+    wanted = pools != "all" if row["pool"] == "all" else pools == row["pool"]
+    return detail[mine & wanted].reset_index(drop=True)
 
 
 def tree_shares(trees: pd.DataFrame, pool: str, counted: Iterable[str], root_model: str = "") -> pd.DataFrame:

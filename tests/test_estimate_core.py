@@ -37,7 +37,8 @@ def make_sample(rng: np.random.Generator, count: int, pools: int = 1) -> tuple[S
 
 
 def without(sample: Sample, row: int) -> Sample:
-    return replace(sample, **{name: np.delete(value, row, axis=0) for name, value in vars(sample).items()})
+    given = {name: value for name, value in vars(sample).items() if value is not None}
+    return replace(sample, **{name: np.delete(value, row, axis=0) for name, value in given.items()})
 
 
 def test_group_sum_counts_and_adds() -> None:

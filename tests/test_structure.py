@@ -21,6 +21,7 @@ ROOMS = {
     "landcarbon.factors": 1,
     "landcarbon.inputs": 1,
     "landcarbon.inventory": 2,
+    "landcarbon.raster": 2,
     "landcarbon.read": 3,
     "landcarbon.check": 4,
     "landcarbon.pools": 5,
@@ -33,11 +34,12 @@ ROOMS = {
     "landcarbon.publish": 9,
     "landcarbon.statements": 10,
     "landcarbon.trace": 9,
-    "landcarbon.pipeline": 11,
-    "landcarbon.assemble": 12,
-    "landcarbon.api": 13,
-    "landcarbon.demo": 13,
-    "landcarbon.cli": 14,
+    "landcarbon.reckon": 11,
+    "landcarbon.pipeline": 12,
+    "landcarbon.assemble": 13,
+    "landcarbon.api": 14,
+    "landcarbon.demo": 14,
+    "landcarbon.cli": 15,
 }
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import io
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -140,9 +141,26 @@ def test_print_names_what_a_verifier_needs(demo):
 
 
 def test_the_simple_mean_is_said_where_it_is_one(demo):
-    flat = " ".join(shown(trace_unit(demo, parcel="Owl Bank")).split())
-    assert "The figure is their mean, weighted by relative area" in flat
+    found = trace_unit(demo, parcel="Owl Bank")
+    mean = (found.plots["density_t_c_ha"] * found.plots["size"]).sum() / found.plots["size"].sum()
+    own = replace(found, row=found.row.copy(), composition=found.composition.iloc[:0])
+    own.row["density_t_c_ha"] = mean  # as of a parcel stated from its own plots
+    assert "The figure is their mean, weighted by relative area" in " ".join(shown(own).split())
     assert "The figure is their mean" not in shown(trace_unit(demo))  # strata weigh by area
+
+
+def test_a_composite_figure_is_laid_open(demo):
+    """Identity: weight x own plots + (1 - weight) x model + adjustment is the published figure, pool by pool."""
+    found = trace_unit(demo, parcel="Owl Bank", pool="all")
+    parts = found.composition
+    assert len(parts) == 5
+    weight = parts["weight_direct"]
+    made = weight * parts["direct"] + (1 - weight) * parts["synthetic"] + parts["adjustment"]
+    assert np.allclose(made, parts["density"], rtol=1e-7)
+    assert np.isclose(parts["density"].sum(), found.row["density_t_c_ha"], rtol=1e-8)
+    text = " ".join(shown(found).split())
+    assert "weight x own plots + (1 - weight) x model of the stratum + adjustment" in text
+    assert trace_unit(demo, stratum="beech").composition.empty
 
 
 @pytest.mark.parametrize("width", [60, 80, 200])

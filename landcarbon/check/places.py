@@ -40,7 +40,7 @@ def plots_of_rows(inputs: Inputs, settings: Settings) -> Outcome:
     outside = used & ~blank & (at >= 0)
     placed = np.zeros(len(trees), dtype=bool)
     if len(plots):
-        outside &= ~plots["inside"].to_numpy(dtype=bool)[at]
+        outside &= ~_inside(trees, plots, at, inputs.parcel_of)
         placed = np.isfinite(plots[["x", "y"]].to_numpy(dtype=float)).all(axis=1)[at]
     masks = {
         "plot blank": blank,
@@ -96,8 +96,9 @@ def rows_left(inputs: Inputs, settings: Settings) -> Outcome:
     """
     trees, visits = inputs.trees, inputs.visits
     visited = visits[visits["visited"].to_numpy(dtype=bool)]
-    inside = inputs.plots.loc[inputs.plots["inside"].to_numpy(dtype=bool), "plot"]
-    visited = visited[positions(visited["plot"], inside) >= 0]
+    place = positions(visited["plot"], inputs.plots["plot"])
+    visited = visited[(place >= 0) & _inside(visited, inputs.plots, place, inputs.parcel_of)]
+    visited = visited[~visited["survey"].astype("str").isin(_of_samples_alone(inputs))]
     at = visit_positions(trees, visited)
     standing = (at >= 0) & trees["status"].isin(["live", "dead"]).to_numpy()
     counted = standing & trees["used"].to_numpy(dtype=bool)
@@ -111,6 +112,22 @@ def rows_left(inputs: Inputs, settings: Settings) -> Outcome:
         visited[lost], [{"count": int(count)} for count in counts], value=_rows_text(counts)
     )
     return Outcome(joined([rule("no rows").found(visited[n_standing == 0], value="0 trees"), emptied]))
+
+
+def _inside(rows: pd.DataFrame, plots: pd.DataFrame, at: np.ndarray, parcel_of: pd.DataFrame | None) -> np.ndarray:
+    """Tell whether the plot of each row was in the inventory; at the survey of the row where boundaries change."""
+    if not len(plots):
+        return np.zeros(len(rows), dtype=bool)
+    if parcel_of is None:
+        return np.asarray(plots["inside"].to_numpy(dtype=bool)[at])
+    return visit_positions(rows, parcel_of[parcel_of["inside"].to_numpy(dtype=bool)]) >= 0
+
+
+def _of_samples_alone(inputs: Inputs) -> list[str]:
+    """Surveys with rows of samples and none of trees: a plot without trees says nothing there."""
+    tallied = set(inputs.trees["survey"].dropna().astype("str"))
+    sampled = {str(name) for rows in inputs.samples.values() for name in rows["survey"].dropna().unique()}
+    return sorted(sampled - tallied)
 
 
 def _rows_text(counts: np.ndarray) -> np.ndarray:

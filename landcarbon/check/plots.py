@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from landcarbon.check.keys import positions
+from landcarbon.check.keys import positions, visit_positions
 from landcarbon.check.rules import Outcome, joined, rule
 
 if TYPE_CHECKING:
@@ -188,6 +188,8 @@ def _visited_plots(inputs: Inputs, merge: dict[str, str]) -> tuple[pd.DataFrame,
     """Count usable plots by stratum and survey; name the surveys that have none at all."""
     plots = inputs.plots[inputs.plots["inside"].to_numpy(dtype=bool)]
     visits = inputs.visits[inputs.visits["visited"].to_numpy(dtype=bool)]
+    if inputs.parcel_of is not None:
+        return _visited_within(visits, inputs)
     at = positions(visits["plot"], plots["plot"])
     stratum = plots["stratum"].astype("object").map(lambda name: merge.get(name, name)).to_numpy()
     visits = pd.DataFrame({"survey": visits["survey"].astype("object")})[at >= 0].assign(stratum=stratum[at[at >= 0]])
@@ -200,6 +202,20 @@ def _visited_plots(inputs: Inputs, merge: dict[str, str]) -> tuple[pd.DataFrame,
     counts = visits.groupby(["survey", "stratum"]).size().reindex(every, fill_value=0).rename("plots").reset_index()
     seen = set(visits["survey"])
     empty = [name for name in surveys if name not in seen]
+    return counts[~counts["survey"].isin(empty)], empty
+
+
+def _visited_within(visits: pd.DataFrame, inputs: Inputs) -> tuple[pd.DataFrame, list[str]]:
+    """Count usable plots within the boundaries of each survey, for the strata that have land or a plot at it."""
+    places, versions, in_force = inputs.parcel_of, inputs.parcel_versions, inputs.parcels_in_force
+    if places is None or versions is None or in_force is None:
+        return pd.DataFrame({"survey": [], "stratum": [], "plots": []}), []
+    places = places[places["inside"].to_numpy(dtype=bool)]
+    there = places[visit_positions(places, visits) >= 0]
+    land = pd.DataFrame({"survey": in_force["survey"], "stratum": versions["stratum"].to_numpy()[in_force["row"]]})
+    every = pd.MultiIndex.from_frame(pd.concat([land, there[["survey", "stratum"]]]).drop_duplicates())
+    counts = there.groupby(["survey", "stratum"]).size().reindex(every, fill_value=0).rename("plots").reset_index()
+    empty = [str(name) for name in inputs.surveys["survey"] if name not in set(there["survey"])]
     return counts[~counts["survey"].isin(empty)], empty
 
 

@@ -6,10 +6,11 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from landcarbon.estimate.clusters import unit_counts
 from landcarbon.estimate.difference import elapsed
 from landcarbon.estimate.groups import group_sum
 from landcarbon.estimate.interval import satterthwaite
-from landcarbon.estimate.joint import Joint, joint_table, sum_variance
+from landcarbon.estimate.joint import Joint, SumVariance, column_variances, joint_table, sum_variance
 from landcarbon.estimate.pairs import Side, match_plots, side_of
 from landcarbon.estimate.ratio import MIN_PLOTS, Cells, Sample, counts
 from landcarbon.estimate.ratio import means as sample_means
@@ -36,6 +37,10 @@ class Plan:
         Pool that is left out everywhere, as a part of it was not measured; shape (J,).
     allowed : ndarray of bool
         Strata in which every part of the pool of a part is estimable; shape (H, K).
+    units : tuple of ndarray
+        Sampling units by stratum and part, for each date; shape (H, K).
+    near : bool
+        Variance of strata and of the inventory from neighbouring plots.
     """
 
     sums: Sums
@@ -44,6 +49,8 @@ class Plan:
     measured: np.ndarray
     out: np.ndarray
     allowed: np.ndarray
+    units: tuple[np.ndarray, ...] = ()
+    near: bool = False
 
     @property
     def allowed_pool(self) -> np.ndarray:
@@ -99,6 +106,10 @@ class SumEstimate:
         Part is a mean of the stratum; shape (D, K).
     pool_known : ndarray of bool
         Pool is estimable; shape (D, J).
+    part_units : ndarray
+        Sampling units by date and part; shape (T, D, K).
+    near : ndarray, optional
+        Share of the variance pieces from neighbouring plots; None if they were not asked for.
     """
 
     density: np.ndarray
@@ -114,11 +125,13 @@ class SumEstimate:
     part_plots: np.ndarray
     borrowed: np.ndarray
     pool_known: np.ndarray
+    part_units: np.ndarray
+    near: np.ndarray | None = None
 
 
 @dataclass(frozen=True)
 class _Parts:
-    """Estimates by part of one level; shapes (D, K), ``plots`` (T, D, K)."""
+    """Estimates by part of one level; shapes (D, K), ``plots`` and ``units`` (T, D, K)."""
 
     sides: tuple[Side, ...]
     domains: tuple[np.ndarray, ...]
@@ -126,6 +139,7 @@ class _Parts:
     joint: Joint
     density: np.ndarray
     plots: np.ndarray
+    units: np.ndarray
     paired: np.ndarray
     days: np.ndarray
 
@@ -141,7 +155,7 @@ class _Borrowed:
     df: np.ndarray
 
 
-def plan_sums(samples: tuple[Sample, ...], sums: Sums, area_ha: np.ndarray) -> Plan:
+def plan_sums(samples: tuple[Sample, ...], sums: Sums, area_ha: np.ndarray, *, near: bool = False) -> Plan:
     """Decide which pools and strata count, from what was measured where.
 
     Parameters
@@ -152,16 +166,19 @@ def plan_sums(samples: tuple[Sample, ...], sums: Sums, area_ha: np.ndarray) -> P
         Pools and parts.
     area_ha : ndarray
         Area of each stratum [ha].
+    near : bool
+        Take the variance of strata and of the inventory from neighbouring plots.
     """
     strata, member = len(area_ha), sums.member
     plots = tuple(counts(sample, strata) for sample in samples)
+    units = tuple(unit_counts(sample, strata) for sample in samples)
     measured = np.stack([count.sum(axis=0) > 0 for count in plots])
     # without any plot at a date nothing is missing in particular: the strata are not estimable
     missing = ~measured & measured.any(axis=1, keepdims=True)
     out = np.asarray((member & missing.any(axis=0)).any(axis=1))
-    enough = np.logical_and.reduce([count >= MIN_PLOTS for count in plots])
+    enough = np.logical_and.reduce([count >= MIN_PLOTS for count in units])
     pools = np.stack([enough[:, row].all(axis=1) for row in member], axis=1) & ~out
-    return Plan(sums, area_ha, plots, measured, out, pools[:, sums.pool])
+    return Plan(sums, area_ha, plots, measured, out, pools[:, sums.pool], units, near)
 
 
 def stratum_means(samples: tuple[Sample, ...], plan: Plan) -> StratumMeans:
@@ -170,20 +187,21 @@ def stratum_means(samples: tuple[Sample, ...], plan: Plan) -> StratumMeans:
     Notes
     -----
     The variance is V (1 + n), with V that of the mean: n V is the variance between plots. For change n is the larger
-    number of plots of the two dates.
+    number of plots of the two dates. With clusters n is still the number of plots, and n V is taken as if the plots
+    were not in clusters: it stands for how much single plots differ.
     """
     strata = len(plan.area_ha)
     domains = tuple(sample.stratum for sample in samples)
     parts = _parts(samples, domains, strata, plan)
     number = len(plan.sums.parts)
-    spread, df = np.full((strata, number), np.nan), np.full((strata, number), np.nan)
-    for part in range(number):
-        columns = part + number * np.arange(len(samples))
-        found = sum_variance(parts.joint, columns, np.ones(len(columns)))
-        spread[:, part] = found.variance * (1.0 + np.max([count[:, part] for count in plan.plots], axis=0))
-        df[:, part] = found.df
+    mean = column_variances(parts.joint, number)
+    plots = np.max(plan.plots, axis=0)
+    spread = mean.variance * (1.0 + plots)
+    if parts.joint.lead is not None:
+        alone = _parts(tuple(replace(sample, unit=None) for sample in samples), domains, strata, plan)
+        spread = mean.variance + column_variances(alone.joint, number).variance * plots
     known = plan.allowed & np.isfinite(parts.density)
-    return StratumMeans(np.where(known, parts.density, np.nan), spread, df, parts.days)
+    return StratumMeans(np.where(known, parts.density, np.nan), spread, mean.df, parts.days)
 
 
 def estimate_sums(
@@ -194,6 +212,7 @@ def estimate_sums(
     *,
     means: StratumMeans | None = None,
     shown: np.ndarray | None = None,
+    near: bool = False,
 ) -> SumEstimate:
     """Estimate pools and their sum for the domains of one level.
 
@@ -211,13 +230,15 @@ def estimate_sums(
         To stand for parts that a domain has fewer than two plots of, where it has two plots of another part.
     shown : ndarray, optional
         Plots by date, domain and part to state, where not only those that enter the estimate.
+    near : bool
+        Take the variance from neighbouring plots; for domains made of whole strata.
 
     Returns
     -------
     SumEstimate
     """
-    parts = _parts(samples, domains, number, plan)
-    fewest = parts.plots.min(axis=0)
+    parts = _parts(samples, domains, number, plan, near=near)
+    fewest = parts.units.min(axis=0)
     known = (fewest >= MIN_PLOTS) & np.isfinite(parts.density)
     borrowed = _borrow(parts, known, fewest, plan, means)
     member = plan.sums.member
@@ -233,7 +254,7 @@ def estimate_sums(
         rate = np.where(days == 0, np.nan, density / days)
     some = within.any(axis=2)
     own = within & known
-    variance, df, apart = _variances(parts, own, within & borrowed.which, share, borrowed)
+    variance, df, apart, told = _variances(parts, own, within & borrowed.which, share, borrowed)
     counted = np.where(own.any(axis=2, keepdims=True), own, _of_sum(plan))
 
     def added(values: np.ndarray) -> np.ndarray:
@@ -258,6 +279,8 @@ def estimate_sums(
         part_plots=stated,
         borrowed=borrowed.which,
         pool_known=pool_known,
+        part_units=parts.units,
+        near=told.T if near else None,
     )
 
 
@@ -286,17 +309,20 @@ def _mean_over(values: np.ndarray, within: np.ndarray) -> np.ndarray:
         return np.where(number > 0, base[:, :, 0] + apart / number, np.nan).T
 
 
-def _parts(samples: tuple[Sample, ...], domains: tuple[np.ndarray, ...], number: int, plan: Plan) -> _Parts:
+def _parts(
+    samples: tuple[Sample, ...], domains: tuple[np.ndarray, ...], number: int, plan: Plan, *, near: bool = False
+) -> _Parts:
     """Estimate each part on its own plots."""
     area, allowed = plan.area_ha, plan.allowed
     cells = Cells.of(number, len(area), *((d, s.stratum) for d, s in zip(domains, samples, strict=True)))
     sides = tuple(side_of(s, d, cells, area, allowed) for s, d in zip(samples, domains, strict=True))
     plots = np.stack([group_sum(side.mean.plots_cell, cells.domain, number) for side in sides])
+    units = np.stack([group_sum(side.spread.units_cell, cells.domain, number) for side in sides])
     if len(samples) == 1:
-        joint = joint_table(sides, domains, cells, None)
+        joint = joint_table(sides, domains, cells, None, near=near)
         nothing = np.zeros_like(plots[0])
         return _Parts(
-            sides, domains, cells, joint, sides[0].mean.density, plots, nothing, np.full_like(nothing, np.nan)
+            sides, domains, cells, joint, sides[0].mean.density, plots, units, nothing, np.full_like(nothing, np.nan)
         )
     first, second = samples
     pairs = match_plots((first, second), (domains[0], domains[1]), allowed)
@@ -306,9 +332,10 @@ def _parts(samples: tuple[Sample, ...], domains: tuple[np.ndarray, ...], number:
         sides=sides,
         domains=domains,
         cells=cells,
-        joint=joint_table(sides, domains, cells, pairs),
+        joint=joint_table(sides, domains, cells, pairs, near=near),
         density=sides[1].mean.density - sides[0].mean.density,
         plots=plots,
+        units=units,
         paired=paired,
         days=elapsed((first, second), (domains[0], domains[1]), pairs, cells, area, allowed),
     )
@@ -363,8 +390,8 @@ def _areas(plan: Plan, number: int, means: StratumMeans | None) -> tuple[np.ndar
 
 def _variances(
     parts: _Parts, own: np.ndarray, borrowed: np.ndarray, share: np.ndarray, means: _Borrowed
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Variance, degrees of freedom and whether plots differ, of each sum and domain; shapes (J + 1, D).
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Variance, degrees of freedom, whether plots differ and share from neighbours; shapes (J + 1, D).
 
     Domains in which the same parts have plots of their own are handled together. Means of strata are taken as
     independent of the plots of the domain, and as fully correlated with each other.
@@ -372,8 +399,8 @@ def _variances(
     cells, dates = parts.cells, len(parts.sides)
     number = own.shape[2]
     variance, df = np.zeros(own.shape[:2]), np.full(own.shape[:2], np.nan)
-    apart = np.zeros(own.shape[:2], dtype=bool)
-    done = {}
+    apart, near = np.zeros(own.shape[:2], dtype=bool), np.full(own.shape[:2], np.nan)
+    done: dict[tuple[bytes, bytes], SumVariance] = {}
     for name, rows in enumerate(own):
         chosen, place = np.unique(rows, axis=0, return_inverse=True)
         for kind, columns in enumerate(chosen):
@@ -389,9 +416,10 @@ def _variances(
             variance[name, hit] = done[key].variance[hit]
             df[name, hit] = done[key].df[hit]
             apart[name, hit] = done[key].apart[hit]
+            near[name, hit] = done[key].near[hit]
         if borrowed[name].any():
             variance[name], df[name] = _with_borrowed(variance[name], df[name], borrowed[name], means, cells)
-    return variance, df, apart
+    return variance, df, apart, near
 
 
 def _with_borrowed(

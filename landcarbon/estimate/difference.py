@@ -9,8 +9,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from landcarbon.estimate.groups import group_sum
+from landcarbon.estimate.groups import group_sum, narrow, wide
 from landcarbon.estimate.interval import satterthwaite
+from landcarbon.estimate.joint import SumVariance, column_variances, joint_table
 from landcarbon.estimate.pairs import Pairs, PairSums, Side, cell_covariance, match_plots, side_of
 from landcarbon.estimate.ratio import MIN_PLOTS, Cells, Sample, inflation, means
 
@@ -28,11 +29,15 @@ class Difference:
     variance, df : ndarray
         Its variance and degrees of freedom.
     variance_all_plots : ndarray
-        Variance by the textbook form, for comparison.
+        Variance by the textbook form, for comparison; NaN with clusters or variance from neighbours.
     days : ndarray
         Elapsed time the difference refers to [d]; NaN if visits of a stratum it rests on have no date.
     since, until, paired : ndarray of int
         Plots counted at the earlier date, at the later one, and at both.
+    units_since, units_until : ndarray of int, optional
+        Sampling units counted at the two dates.
+    near : ndarray, optional
+        Share of the variance pieces from neighbouring plots; None if they were not asked for.
     """
 
     density: np.ndarray
@@ -43,6 +48,9 @@ class Difference:
     since: np.ndarray
     until: np.ndarray
     paired: np.ndarray
+    units_since: np.ndarray | None = None
+    units_until: np.ndarray | None = None
+    near: np.ndarray | None = None
 
 
 def difference_of_ratios(
@@ -51,6 +59,8 @@ def difference_of_ratios(
     n_domains: int,
     area_ha: np.ndarray,
     allowed: np.ndarray,
+    *,
+    near: bool = False,
 ) -> Difference:
     """Estimate the change of domain means.
 
@@ -66,11 +76,14 @@ def difference_of_ratios(
         Area of each stratum [ha]; NaN if unknown.
     allowed : ndarray of bool
         Strata estimable at both dates, by pool; shape (strata, pools).
+    near : bool
+        Take the variance from differences of neighbouring plots, where there are enough of them. For domains that are
+        made of whole strata.
 
     Returns
     -------
     Difference
-        NaN where a domain has fewer than two plots at either date.
+        NaN where a domain has fewer than two units at either date.
 
     Notes
     -----
@@ -92,25 +105,58 @@ def difference_of_ratios(
         side_of(sample, domain, cells, area_ha, allowed) for sample, domain in zip(samples, domains, strict=True)
     )
     pairs = match_plots(samples, domains, allowed)
-    parts = PairSums.of(first, second, pairs, domains[0], cells)
-    variance, part_df = _components(first, second, pairs, parts, cells)
-    plots = [group_sum(side.mean.plots_cell, cells.domain, n_domains) for side in (first, second)]
-    paired = group_sum(parts.plots_cell, cells.domain, n_domains)
-    codes = np.tile(cells.domain, 3)
-    df = np.minimum(satterthwaite(variance, part_df, codes, n_domains), plots[0] + plots[1] - paired - 1)
+    plots, units = (
+        [group_sum(number, cells.domain, n_domains) for number in numbers]
+        for numbers in (
+            (first.mean.plots_cell, second.mean.plots_cell),
+            (first.spread.units_cell, second.spread.units_cell),
+        )
+    )
+    if near or samples[0].unit is not None:
+        spread = _by_units((first, second), domains, cells, pairs, near)
+        textbook = np.full(spread.variance.shape, np.nan)
+        inside = domains[0][pairs.first] >= 0
+        paired = group_sum(pairs.counted[inside], domains[0][pairs.first[inside]], n_domains)
+    else:
+        parts = PairSums.of(first, second, pairs, domains[0], cells)
+        paired = group_sum(parts.plots_cell, cells.domain, n_domains)
+        spread = _by_plots(first, second, pairs, parts, cells, most=plots[0] + plots[1] - paired - 1)
+        textbook = first.spread.variance + second.spread.variance - 2.0 * cell_covariance(first, second, parts, cells)
+        textbook = group_sum(textbook, cells.domain, n_domains)
     density = second.mean.density - first.mean.density
-    enough = (plots[0] >= MIN_PLOTS) & (plots[1] >= MIN_PLOTS) & np.isfinite(density)
+    enough = (units[0] >= MIN_PLOTS) & (units[1] >= MIN_PLOTS) & np.isfinite(density)
     days = elapsed(samples, domains, pairs, cells, area_ha, allowed)
-    textbook = first.spread.variance + second.spread.variance - 2.0 * cell_covariance(first, second, parts, cells)
     return Difference(
         density=np.where(enough, density, np.nan),
-        variance=np.where(enough, group_sum(variance, codes, n_domains), np.nan),
-        variance_all_plots=np.where(enough, group_sum(textbook, cells.domain, n_domains), np.nan),
-        df=np.where(enough, df, np.nan),
+        variance=np.where(enough, spread.variance, np.nan),
+        variance_all_plots=np.where(enough, textbook, np.nan),
+        df=np.where(enough, spread.df, np.nan),
         days=np.where(enough, days, np.nan),
         since=plots[0].astype(np.int64),
         until=plots[1].astype(np.int64),
         paired=paired.astype(np.int64),
+        units_since=units[0].astype(np.int64),
+        units_until=units[1].astype(np.int64),
+        near=spread.near if near else None,
+    )
+
+
+def _by_units(
+    sides: tuple[Side, Side], domains: tuple[np.ndarray, np.ndarray], cells: Cells, pairs: Pairs, near: bool
+) -> SumVariance:
+    """Variance where plots lie in clusters, or comes from neighbours."""
+    return column_variances(joint_table(sides, domains, cells, pairs, near=near), sides[0].sample.value.shape[1])
+
+
+def _by_plots(one: Side, two: Side, pairs: Pairs, parts: PairSums, cells: Cells, *, most: np.ndarray) -> SumVariance:
+    """Variance and degrees of freedom where each plot is a unit, all pools at once."""
+    variance, part_df = _components(one, two, pairs, parts, cells)
+    codes = np.tile(cells.domain, 3)
+    return SumVariance(
+        variance=group_sum(variance, codes, cells.domains),
+        df=np.minimum(satterthwaite(variance, part_df, codes, cells.domains), most),
+        apart=np.zeros(most.shape, dtype=bool),
+        near=np.full(most.shape, np.nan),
     )
 
 
@@ -148,11 +194,14 @@ def _alone(side: Side, rows: np.ndarray, paired: np.ndarray, cells: Cells) -> tu
     sample, mean = side.sample, side.mean
     free = sample.used & (mean.plots_stratum >= MIN_PLOTS)[sample.stratum]
     free[rows] &= ~paired
+    if not free.any():  # all plots repeat
+        return np.zeros_like(mean.weight), np.zeros_like(mean.weight)
+    pools, free = free.shape[1], narrow(free)
     square = np.where(free, sample.size[:, None], 0.0) ** 2
     slope = side.spread.slope
     n_cells = len(cells.domain)
-    squares = group_sum((side.spread.inside - slope[mean.cell] * mean.size) ** 2, mean.cell, n_cells)
-    plots = group_sum(free[mean.rows], mean.cell, n_cells)
+    squares = side.spread.within
+    plots = wide(group_sum(free[mean.rows], mean.cell, n_cells), pools)
     share = np.divide(plots, mean.plots_cell, out=np.zeros_like(squares), where=mean.plots_cell > 0)
     outside = group_sum(square, sample.stratum, cells.strata)[cells.stratum]
     outside = outside - group_sum(square[mean.rows], mean.cell, n_cells)

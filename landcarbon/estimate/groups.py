@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-__all__ = ["group_sum", "label_codes"]
+__all__ = ["group_sum", "label_codes", "narrow", "wide"]
 
 
 def group_sum(values: np.ndarray, codes: np.ndarray, groups: int) -> np.ndarray:
@@ -27,10 +27,23 @@ def group_sum(values: np.ndarray, codes: np.ndarray, groups: int) -> np.ndarray:
     ndarray of float
         Shape (groups, columns).
     """
-    columns = values.shape[1]
-    cell = codes[:, None] * columns + np.arange(columns)
-    sums = np.bincount(cell.ravel(), weights=values.ravel(), minlength=groups * columns)
-    return sums.astype(float, copy=False).reshape(groups, columns)  # without rows bincount returns integers
+    from scipy.sparse import csc_array  # heavy; the package must import without it
+
+    rows = len(codes)
+    # one column per row with a single 1 in it: the product adds whole rows, in the order given
+    chooses = csc_array((np.ones(rows), codes, np.arange(rows + 1)), shape=(groups, rows))
+    return np.asarray(chooses @ np.asarray(values, dtype=float))
+
+
+def narrow(table: np.ndarray) -> np.ndarray:
+    """Keep one column of a table whose columns are all the same, so that what follows is done once."""
+    same = table.shape[1] > 1 and bool((table == table[:, :1]).all())
+    return table[:, :1] if same else table
+
+
+def wide(values: np.ndarray, columns: int) -> np.ndarray:
+    """Show one column as many, without copying it."""
+    return values if values.shape[1] == columns else np.broadcast_to(values, (len(values), columns))
 
 
 def label_codes(column: pd.Series, labels: list[str]) -> np.ndarray:

@@ -1,93 +1,26 @@
 """Variance of sums of domain means whose parts were measured on different plots, at one date or between two.
 
 Every plot brings into a sum what was measured on it: a column for each part and date. Plots with the same set of
-columns make a group, and the variance is the sum over these groups. Symbols are those of ``docs/estimation.md``.
+columns make a group, and the variance is the sum over these groups. Where plots lie in clusters read cluster for plot.
+Symbols are those of ``docs/estimation.md``.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
+from landcarbon.estimate.contributions import Joint, joint_table
 from landcarbon.estimate.interval import satterthwaite
-from landcarbon.estimate.pairs import Pairs, Side
 from landcarbon.estimate.ratio import MIN_PLOTS, Cells
+from landcarbon.estimate.systematic import MIN_NEIGHBOURS, neighbour_variance
 
-__all__ = ["Joint", "SumVariance", "joint_table", "sum_variance"]
+__all__ = ["Joint", "SumVariance", "column_variances", "joint_table", "sum_variance"]
 
-_Piece = tuple[np.ndarray, np.ndarray]  # variance and degrees of freedom by cell
+_Piece = tuple[np.ndarray, np.ndarray, np.ndarray]  # variance, degrees of freedom, from neighbours, by cell
 
 MOST_SETS = 128  # sets of columns told apart; plots with rarer ones are bounded together
-
-
-@dataclass(frozen=True)
-class Joint:
-    """What each plot adds to the domain means. Rows n, cells C, columns Q (parts, date by date), dates T.
-
-    Attributes
-    ----------
-    stratum, cell : ndarray of int
-        Of each row; cell -1 outside all domains; shape (n,).
-    size : ndarray
-        Size at the first date, then what it grew by; 0 where the plot is not in a sample; shape (n, T).
-    used : ndarray of bool
-        Column counts on this plot; shape (n, Q).
-    value : ndarray
-        Sign times weight times deviation, for plots in a domain; shape (n, Q).
-    beside : ndarray
-        What a unit of size of a plot of the stratum outside the domain takes off; shape (C, Q).
-    date, part : ndarray of int
-        Date and part of each column; shape (Q,).
-    cells : Cells
-        Cells of the domains.
-    """
-
-    stratum: np.ndarray
-    cell: np.ndarray
-    size: np.ndarray
-    used: np.ndarray
-    value: np.ndarray
-    beside: np.ndarray
-    date: np.ndarray
-    part: np.ndarray
-    cells: Cells
-
-    @property
-    def whole(self) -> bool:
-        """Whether each cell holds all plots of its stratum."""
-        one = len(np.unique(self.cells.stratum)) == len(self.cells.stratum)
-        return one and bool((self.cell >= 0).all())
-
-    def take(self, columns: np.ndarray, scale: np.ndarray) -> Joint:
-        """Keep some columns, each multiplied by a number."""
-        return replace(
-            self,
-            used=self.used[:, columns],
-            value=self.value[:, columns] * scale,
-            beside=self.beside[:, columns] * scale,
-            date=self.date[columns],
-            part=self.part[columns],
-        )
-
-    def split(self, rows: np.ndarray) -> Joint:
-        """Take the two dates of some rows apart, as if they were different plots."""
-        first, second = self.used.copy(), self.used[rows]
-        first[np.ix_(rows, self.date == 1)] = False
-        second[:, self.date == 0] = False
-
-        def again(values: np.ndarray) -> np.ndarray:
-            return np.concatenate([values, values[rows]])
-
-        used = np.concatenate([first, second])
-        return replace(
-            self,
-            stratum=again(self.stratum),
-            cell=again(self.cell),
-            size=again(self.size),
-            used=used,
-            value=again(self.value),
-        )
 
 
 @dataclass(frozen=True)
@@ -100,68 +33,14 @@ class SumVariance:
         Variance and degrees of freedom; df NaN where a domain has no plot.
     apart : ndarray of bool
         Whether some plot of the domain lacks some part of the sum.
+    near : ndarray
+        Share of the pieces of the variance that come from neighbouring plots; NaN if there are none.
     """
 
     variance: np.ndarray
     df: np.ndarray
     apart: np.ndarray
-
-
-def joint_table(sides: tuple[Side, ...], domains: tuple[np.ndarray, ...], cells: Cells, pairs: Pairs | None) -> Joint:
-    """Put the deviations of one or two dates side by side.
-
-    Parameters
-    ----------
-    sides : tuple of Side
-        One date, or the earlier and the later one, whose sum is then the change.
-    domains : tuple of ndarray of int
-        Domain of each plot of the samples; -1 for none.
-    cells : Cells
-        Cells of the domains.
-    pairs : Pairs or None
-        Plots of both dates.
-    """
-    rows = [np.arange(len(sides[0].sample.plot))]
-    number = len(rows[0])
-    if len(sides) > 1 and pairs is not None:
-        place = np.full(len(sides[1].sample.plot), -1)
-        place[pairs.second] = pairs.first
-        new = place < 0
-        place[new] = number + np.arange(int(new.sum()))
-        rows.append(place)
-        number += int(new.sum())
-    stratum, cell = np.zeros(number, dtype=np.int64), np.full(number, -1)
-    size = np.zeros((number, len(sides)))
-    used, value, beside = [], [], []
-    for date, (side, domain, row) in enumerate(zip(sides, domains, rows, strict=True)):
-        sign = -1.0 if date < len(sides) - 1 else 1.0
-        stratum[row] = side.sample.stratum
-        cell[row[side.mean.rows]] = side.mean.cell
-        size[row, date] = side.sample.size
-        columns = side.sample.value.shape[1]
-        counted, out = np.zeros((number, columns), dtype=bool), np.zeros((number, columns))
-        counted[row] = side.counted
-        with np.errstate(invalid="ignore"):
-            per_size = sign * side.mean.weight * side.spread.slope
-            here = sign * side.mean.weight[side.mean.cell] * side.spread.inside
-            here = here - per_size[side.mean.cell] * side.mean.size
-        out[row[side.mean.rows]] = np.where(side.counted[domain >= 0], np.nan_to_num(here), 0.0)
-        used.append(counted)
-        value.append(out)
-        beside.append(np.nan_to_num(per_size))
-    if len(sides) > 1:  # written with the growth, which is mostly zero, so that little is lost to rounding
-        size[:, 1] -= size[:, 0]
-    return Joint(
-        stratum=stratum,
-        cell=cell,
-        size=size,
-        used=np.concatenate(used, axis=1),
-        value=np.concatenate(value, axis=1),
-        beside=np.concatenate(beside, axis=1),
-        date=np.repeat(np.arange(len(sides)), used[0].shape[1]),
-        part=np.tile(np.arange(used[0].shape[1]), len(sides)),
-        cells=cells,
-    )
+    near: np.ndarray
 
 
 def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVariance:
@@ -194,7 +73,7 @@ def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVar
     """
     table = joint.take(columns, scale)
     cells = table.cells
-    there = table.used.any(axis=1) & (table.cell >= 0)
+    there = table.heard() & (table.cell >= 0)
     plots = _count(table.cell[there], len(cells.domain))
     apart = np.zeros(len(cells.domain))
     for date in np.unique(table.date):
@@ -211,8 +90,8 @@ def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVar
     components += _bounded(table, sets.lone)
     if not components:
         nothing = np.zeros(cells.domains)
-        return SumVariance(nothing, np.full(cells.domains, np.nan), nothing > 0)
-    variance, df = (np.stack(arrays) for arrays in zip(*components, strict=True))
+        return SumVariance(nothing, np.full(cells.domains, np.nan), nothing > 0, np.full(cells.domains, np.nan))
+    variance, df, near = (np.stack(arrays) for arrays in zip(*components, strict=True))
     most = np.bincount(cells.domain, weights=plots, minlength=cells.domains) - 1.0
     apart_domain = np.bincount(cells.domain, weights=apart, minlength=cells.domains) > 0
     effective = _df_of_separate(variance, df, cells)
@@ -222,7 +101,27 @@ def sum_variance(joint: Joint, columns: np.ndarray, scale: np.ndarray) -> SumVar
         variance=np.bincount(cells.domain, weights=variance.sum(axis=0), minlength=cells.domains),
         df=np.minimum(effective, np.maximum(most, 1.0)),
         apart=apart_domain,
+        near=_near_share(near, df, cells),
     )
+
+
+def column_variances(joint: Joint, parts: int) -> SumVariance:
+    """Variance of each part alone, or of its change; arrays of shape (domains, parts)."""
+    dates = joint.used.shape[1] // max(parts, 1)
+    made = [sum_variance(joint, part + parts * np.arange(dates), np.ones(dates)) for part in range(parts)]
+    return SumVariance(
+        variance=np.stack([one.variance for one in made], axis=1),
+        df=np.stack([one.df for one in made], axis=1),
+        apart=np.stack([one.apart for one in made], axis=1),
+        near=np.stack([one.near for one in made], axis=1),
+    )
+
+
+def _near_share(near: np.ndarray, df: np.ndarray, cells: Cells) -> np.ndarray:
+    """Share of the pieces that come from neighbours, by domain; NaN without pieces."""
+    there = df > 0
+    told, every = (np.bincount(cells.domain, sums, cells.domains) for sums in ((near & there).sum(0), there.sum(0)))
+    return np.divide(told, every, out=np.full(cells.domains, np.nan), where=every > 0)
 
 
 def _df_of_separate(variance: np.ndarray, df: np.ndarray, cells: Cells) -> np.ndarray:
@@ -255,7 +154,8 @@ def _overlaps(table: Joint, sets: _Sets) -> np.ndarray:
     """Compare sets by the plots of a stratum they share, over the root of the product of their numbers; (P, P, H)."""
     strata = table.cells.strata
     distinct, position = np.unique(sets.code, return_inverse=True)
-    held = np.bincount(position * strata + table.stratum, minlength=len(distinct) * strata)
+    once = table.once(np.arange(len(position)))
+    held = np.bincount(position[once] * strata + table.stratum[once], minlength=len(distinct) * strata)
     held = held.reshape(len(distinct), strata).astype(float)
     has = (distinct & sets.kept[:, None]) == sets.kept[:, None]
     shared = np.stack([(one & has).astype(float) @ held for one in has]) if len(has) else np.zeros((0, 0, strata))
@@ -279,7 +179,8 @@ class _Sets:
         code = table.used @ bits
         distinct, position, count = np.unique(code, return_inverse=True, return_counts=True)
         strata = table.cells.strata
-        held, number = np.unique(position * max(strata, 1) + table.stratum, return_counts=True)
+        once = table.once(np.arange(len(code)))
+        held, number = np.unique(position[once] * max(strata, 1) + table.stratum[once], return_counts=True)
         which, stratum = held // max(strata, 1), held % max(strata, 1)
         frequent = np.argsort(-count, kind="stable")
         frequent = np.sort(frequent[distinct[frequent] > 0][:MOST_SETS])
@@ -311,7 +212,7 @@ def _pairs(table: Joint, part: int) -> tuple[np.ndarray, np.ndarray]:
     """Rows that have a part at both dates: all, and those of strata with at least two of them."""
     columns = np.flatnonzero(table.part == part)
     both = np.asarray(table.used[:, columns].all(axis=1) & (len(columns) > 1))
-    number = np.bincount(table.stratum[both], minlength=table.cells.strata)
+    number = np.bincount(table.stratum[table.once(np.flatnonzero(both))], minlength=table.cells.strata)
     return both, both & (number >= MIN_PLOTS)[table.stratum]
 
 
@@ -329,7 +230,7 @@ def _count(codes: np.ndarray, groups: int, weights: np.ndarray | None = None) ->
 
 
 def _component(table: Joint, exact: np.ndarray, above: np.ndarray, columns: np.ndarray) -> _Piece:
-    """Variance that the rows ``exact`` bring into each cell, and its degrees of freedom; shapes (C,).
+    """Variance that the rows ``exact`` bring into each cell, its degrees of freedom and source; shapes (C,).
 
     ``above`` are the rows that tell about it: all that have these columns.
     """
@@ -345,37 +246,48 @@ def _component(table: Joint, exact: np.ndarray, above: np.ndarray, columns: np.n
     share = np.divide(mine, like, out=np.zeros_like(mine), where=like > 0)
     beside, total_beside = _beside(table, like_rows, mine_rows, columns)
     total = _count(cell, n_cells, own) + total_beside
-    m = _count(table.stratum[mine_rows], table.cells.strata)[table.cells.stratum]
-    n = _count(table.stratum[like_rows], table.cells.strata)[table.cells.stratum]
+    m = _count(table.stratum[table.once(mine_rows)], table.cells.strata)[table.cells.stratum]
+    n = _count(table.stratum[table.once(like_rows)], table.cells.strata)[table.cells.stratum]
     enough = (n >= MIN_PLOTS) & (m > 0)
     n = np.where(enough, n, MIN_PLOTS)
     summed = share * _count(cell, n_cells, own**2) + beside - m * (total / n) ** 2
     variance = np.where(enough, n / (n - 1.0) * np.maximum(summed, 0.0), 0.0)
-    df = np.where(enough & ((variance > 0) | (mine > 0)), np.maximum(like - 1.0, 1.0), 0.0)
-    return variance, df
+    heard = like if table.own is None else _count(cell, n_cells, table.heard(columns)[inside])
+    df = np.where(enough & ((variance > 0) | (mine > 0)), np.maximum(heard - 1.0, 1.0), 0.0)
+    near = np.zeros(n_cells, dtype=bool)
+    if table.place is not None:
+        near = enough & (df > 0) & (n >= MIN_NEIGHBOURS) & (like == n)
+        told = neighbour_variance(own, table.place[inside], cell, n_cells, near)
+        near = told.known
+        variance, df = np.where(near, m * told.variance, variance), np.where(near, np.minimum(told.df, df), df)
+    return variance, df, near
 
 
 def _beside(table: Joint, like: np.ndarray, mine: np.ndarray, columns: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Add up plots of the stratum outside each cell: squares of the rows ``mine``, sum of the rows ``like``."""
     cells = table.cells
     squares, total = np.zeros(len(cells.domain)), np.zeros(len(cells.domain))
-    dates = table.size.shape[1]
-    slopes = [table.beside[:, columns[table.date[columns] == date]].sum(axis=1) for date in range(dates)]
-    if dates > 1:
-        slopes[0] = slopes[0] + slopes[1]  # the second size is written as growth
+    sizes = table.size.shape[1]
+    slopes = [table.beside[:, columns[table.measure[columns] == size]].sum(axis=1) for size in range(sizes)]
+    for size, base in enumerate(table.growth):
+        if base >= 0:
+            slopes[base] = slopes[base] + slopes[size]
     if table.whole or not any(slope.any() for slope in slopes):
         return squares, total
 
     def outside(rows: np.ndarray, values: np.ndarray) -> np.ndarray:
         cell = table.cell[rows]
-        everywhere = _count(table.stratum[rows], cells.strata, values)[cells.stratum]
+        lead = slice(None) if table.lead is None else table.lead[rows]
+        everywhere = _count(table.stratum[rows[lead]], cells.strata, values[lead])[cells.stratum]
         return everywhere - _count(cell[cell >= 0], len(cells.domain), values[cell >= 0])
 
-    for date, slope in enumerate(slopes):
-        total -= slope * outside(like, table.size[like, date])
-        for other in range(date, dates):
-            twice = 1.0 if other == date else 2.0
-            squares += twice * slope * slopes[other] * outside(mine, table.size[mine, date] * table.size[mine, other])
+    kept = [size for size, slope in enumerate(slopes) if slope.any()]
+    for place, size in enumerate(kept):
+        slope = slopes[size]
+        total -= slope * outside(like, table.size[like, size])
+        for other in kept[place:]:
+            twice = 1.0 if other == size else 2.0
+            squares += twice * slope * slopes[other] * outside(mine, table.size[mine, size] * table.size[mine, other])
     return np.maximum(squares, 0.0), total
 
 
@@ -392,7 +304,7 @@ def _bounded(table: Joint, lone: np.ndarray) -> list[_Piece]:
         for column in columns:
             used = table.used[:, column]
             pieces.append(_component(table, used & lone & ~paired, used, np.array([column])))
-        deviation += np.sqrt(np.sum([variance for variance, _ in pieces], axis=0))
-        for _, free in pieces:
+        deviation += np.sqrt(np.sum([variance for variance, _, _ in pieces], axis=0))
+        for _, free, _ in pieces:
             df = np.minimum(df, np.where(free > 0, free, np.inf))
-    return [(deviation**2, np.where(np.isfinite(df), df, 0.0))]
+    return [(deviation**2, np.where(np.isfinite(df), df, 0.0), np.zeros(len(df), dtype=bool))]

@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from landcarbon.estimate.groups import group_sum
+from landcarbon.estimate.groups import group_sum, narrow, wide
 from landcarbon.estimate.ratio import MIN_PLOTS, Cells, Deviations, Means, Sample, deviations, inflation, means
 
 __all__ = ["PairSums", "Pairs", "Side", "cell_covariance", "match_plots", "pool_covariance", "side_of"]
@@ -49,10 +49,12 @@ def side_of(sample: Sample, domain: np.ndarray, cells: Cells, area_ha: np.ndarra
 
 
 def match_plots(samples: tuple[Sample, Sample], domains: tuple[np.ndarray, np.ndarray], allowed: np.ndarray) -> Pairs:
-    """Match plots; one that changed its stratum or domain between the dates does not pair."""
+    """Match plots; one that changed its stratum, cluster or domain between the dates does not pair."""
     one, two = samples
     _, first, second = np.intersect1d(one.plot, two.plot, assume_unique=True, return_indices=True)
     same = (one.stratum[first] == two.stratum[second]) & (domains[0][first] == domains[1][second])
+    if one.unit is not None and two.unit is not None:
+        same &= one.unit[first] == two.unit[second]
     first, second = first[same], second[same]
     stratum = one.stratum[first]
     return Pairs(first, second, stratum, one.used[first] & two.used[second] & allowed[stratum])
@@ -86,10 +88,12 @@ class PairSums:
     @classmethod
     def of(cls, one: Side, two: Side, pairs: Pairs, domain: np.ndarray, cells: Cells) -> PairSums:
         """Add up over the plots in both sets; ``domain`` is that of the plots of the first."""
-        size_1 = np.where(pairs.counted, one.sample.size[pairs.first][:, None], 0.0)
-        size_2 = np.where(pairs.counted, two.sample.size[pairs.second][:, None], 0.0)
-        inside = domain[pairs.first] >= 0
+        pools, both = pairs.counted.shape[1], narrow(pairs.counted)
+        size_1 = np.where(both, one.sample.size[pairs.first][:, None], 0.0)
+        size_2 = np.where(both, two.sample.size[pairs.second][:, None], 0.0)
+        inside: np.ndarray | slice = domain[pairs.first] >= 0
         cell = cells.find(domain[pairs.first][inside], pairs.stratum[inside])
+        inside = slice(None) if len(cell) == len(pairs.first) else inside  # no copies where no plot is left out
         n_cells = len(cells.domain)
 
         def by_stratum(values: np.ndarray) -> np.ndarray:
@@ -98,9 +102,10 @@ class PairSums:
         def by_cell(values: np.ndarray) -> np.ndarray:
             return group_sum(values, cell, n_cells)
 
-        counted, s_1, s_2 = pairs.counted[inside], size_1[inside], size_2[inside]
-        z_1 = np.where(counted, _of_rows(one, pairs.first[inside]), 0.0)
-        z_2 = np.where(counted, _of_rows(two, pairs.second[inside]), 0.0)
+        counted, s_1, s_2 = both[inside], size_1[inside], size_2[inside]
+        z_1, z_2 = _of_rows(one, pairs.first[inside]), _of_rows(two, pairs.second[inside])
+        if not counted.all():
+            z_1, z_2 = np.where(counted, z_1, 0.0), np.where(counted, z_2, 0.0)
         r_1, r_2 = one.spread.slope, two.spread.slope
         u_1, u_2 = z_1 - r_1[cell] * s_1, z_2 - r_2[cell] * s_2
         g_1, g_2 = one.mean.weight, two.mean.weight
@@ -114,8 +119,8 @@ class PairSums:
         apart, a_2 = g_2 * r_2 - g_1 * r_1, g_2 * r_2
         beside = apart**2 * b_11 + 2.0 * apart * a_2 * b_1g + a_2**2 * b_gg
         return cls(
-            plots_stratum=group_sum(pairs.counted, pairs.stratum, cells.strata),
-            plots_cell=by_cell(counted),
+            plots_stratum=wide(group_sum(both, pairs.stratum, cells.strata), pools),
+            plots_cell=wide(by_cell(counted), pools),
             cross=by_cell(u_1 * u_2) + r_1 * r_2 * (b_11 + b_1g),
             direct=by_cell((g_2[cell] * u_2 - g_1[cell] * u_1) ** 2) + np.maximum(beside, 0.0),
             total_1=by_cell(z_1) - r_1 * by_stratum(size_1),
@@ -125,6 +130,8 @@ class PairSums:
 
 def _of_rows(side: Side, rows: np.ndarray) -> np.ndarray:
     """Deviations of plots of the sample; the plots must lie in a domain."""
+    if len(side.mean.rows) == len(side.sample.size):
+        return side.spread.inside[rows]
     position = np.zeros(len(side.sample.size), dtype=np.int64)
     position[side.mean.rows] = np.arange(len(side.mean.rows))
     return side.spread.inside[position[rows]]

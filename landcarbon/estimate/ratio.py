@@ -10,7 +10,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from landcarbon.estimate.groups import group_sum
+from landcarbon.estimate.clusters import pieces_of_clusters, pieces_of_plots
+from landcarbon.estimate.groups import group_sum, narrow, wide
 from landcarbon.estimate.interval import satterthwaite
 
 __all__ = ["Cells", "Deviations", "Means", "RatioEstimate", "Sample", "counts", "deviations", "means", "ratio_of_means"]
@@ -31,13 +32,17 @@ class Sample:
     parcel : ndarray of int
         Parcel of each plot; -1 if none.
     size : ndarray
-        Relative sampled area, above 0; share of the plot that lies inside.
+        What the plot counts for, above 0: its relative sampled area, times its weight if there are weights.
     value : ndarray
         Density by plot and pool [t C/ha]; 0 where not used.
     used : ndarray of bool
         Plot has a value of the pool; shape of ``value``.
     day : ndarray
         Date of the visit [d]; NaN if unknown.
+    unit : ndarray of int, optional
+        Sampling unit of each plot, within its stratum; without it each plot is one.
+    place : ndarray, optional
+        Position of each plot [m]; shape (plots, 2), NaN if unknown.
     """
 
     plot: np.ndarray
@@ -47,6 +52,8 @@ class Sample:
     value: np.ndarray
     used: np.ndarray
     day: np.ndarray
+    unit: np.ndarray | None = None
+    place: np.ndarray | None = None
 
 
 @dataclass(frozen=True)
@@ -78,13 +85,28 @@ class Cells:
             Domain (-1 for none) and stratum of each plot, for each sample.
         """
         keys = [domain[domain >= 0] * strata + stratum[domain >= 0] for domain, stratum in pairs]
-        distinct = np.unique(np.concatenate(keys))
+        if domains * strata <= _most_cells(sum(len(key) for key in keys)):  # marking is quicker than sorting
+            there = np.zeros(domains * strata, dtype=bool)
+            for key in keys:
+                there[key] = True
+            distinct = np.flatnonzero(there)
+        else:
+            distinct = np.unique(np.concatenate(keys))
         return cls(distinct // max(strata, 1), distinct % max(strata, 1), domains, strata)
 
     def find(self, domain: np.ndarray, stratum: np.ndarray) -> np.ndarray:
         """Cell number of each plot; domains must not be -1."""
-        keys = self.domain * self.strata + self.stratum
-        return np.searchsorted(keys, domain * self.strata + stratum)
+        keys, wanted = self.domain * self.strata + self.stratum, domain * self.strata + stratum
+        if self.domains * self.strata > _most_cells(len(wanted)):
+            return np.searchsorted(keys, wanted)
+        place = np.zeros(self.domains * self.strata, dtype=np.int64)
+        place[keys] = np.arange(len(keys))
+        return place[wanted]
+
+
+def _most_cells(rows: int) -> int:
+    """Pairs of domain and stratum up to which a table of all of them is worth its memory."""
+    return 4 * rows + 1_000_000
 
 
 @dataclass(frozen=True)
@@ -131,11 +153,18 @@ class Deviations:
         What a unit of size of any plot of the stratum takes off, by cell; shape (C, K).
     variance : ndarray
         Part of the cell in the variance of the domain mean; shape (C, K).
+    within : ndarray
+        Sum of the squared deviations of the units with a plot in the cell; shape (C, K).
+    units_stratum, units_cell : ndarray
+        Sampling units that count, by stratum and cell; shapes (H, K) and (C, K).
     """
 
     inside: np.ndarray
     slope: np.ndarray
     variance: np.ndarray
+    within: np.ndarray
+    units_stratum: np.ndarray
+    units_cell: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -145,15 +174,21 @@ class RatioEstimate:
     Attributes
     ----------
     density, variance, df : ndarray
-        Mean [t C/ha], its variance and degrees of freedom, shape (D, K); NaN where a domain has fewer than two plots.
+        Mean [t C/ha], its variance and degrees of freedom, shape (D, K); NaN where a domain has fewer than two units.
     plots : ndarray of int
         Counted plots; shape (D, K).
+    units : ndarray of int, optional
+        Counted sampling units; shape (D, K).
+    near : ndarray, optional
+        Share of the strata whose variance comes from neighbouring plots; shape (D, K). None if it was not asked for.
     """
 
     density: np.ndarray
     variance: np.ndarray
     df: np.ndarray
     plots: np.ndarray
+    units: np.ndarray | None = None
+    near: np.ndarray | None = None
 
 
 def counts(sample: Sample, strata: int) -> np.ndarray:
@@ -186,32 +221,40 @@ def means(sample: Sample, domain: np.ndarray, cells: Cells, area_ha: np.ndarray,
     R_d = sum_h (A_h / S_h) sum_{i in d,h} s_i y_i / sum_h (A_h / S_h) sum_{i in d,h} s_i with S_h the sum of size over
     the whole stratum. With equal sizes A_h / S_h is the usual expansion of area per plot.
     """
-    counted = sample.used & allowed[sample.stratum]
+    pools = sample.value.shape[1]
+    counted = narrow(sample.used & allowed[sample.stratum])
     size_all = np.where(counted, sample.size[:, None], 0.0)
-    size_stratum = group_sum(size_all, sample.stratum, cells.strata)
     rows = np.flatnonzero(domain >= 0)
     cell = cells.find(domain[rows], sample.stratum[rows])
-    size, inside = size_all[rows], counted[rows]
-    plots_cell = group_sum(inside, cell, len(cells.domain))
+    within = slice(None) if len(rows) == len(domain) else rows  # without copies where no plot is left out
+    size, inside, value = size_all[within], counted[within], sample.value[within]
+
+    def by_stratum(values: np.ndarray) -> np.ndarray:
+        return wide(group_sum(values, sample.stratum, cells.strata), pools)
+
+    def by_cell(values: np.ndarray) -> np.ndarray:
+        return wide(group_sum(values, cell, len(cells.domain)), pools)
+
+    size_stratum, plots_cell = by_stratum(size_all), by_cell(inside)
     several = group_sum(plots_cell > 0, cells.domain, cells.domains) > 1
     area = np.where(several[cells.domain], area_ha[cells.stratum][:, None], 1.0)
     with np.errstate(divide="ignore", invalid="ignore"):
         expansion = np.where(plots_cell > 0, area / size_stratum[cells.stratum], 0.0)
         # sums run over differences from one value of the domain: exact where all values are equal
-        origin = _last_values(sample.value[rows], inside, domain[rows], cells.domains)
-        apart = group_sum(size * (sample.value[rows] - origin[domain[rows]]), cell, len(cells.domain))
-        whole = group_sum(expansion * group_sum(size, cell, len(cells.domain)), cells.domain, cells.domains)
+        origin = _last_values(value, wide(inside, pools), domain[within], cells.domains)
+        apart = by_cell(size * (value - origin[domain[within]]))
+        whole = group_sum(expansion * by_cell(size), cells.domain, cells.domains)
         density = origin + group_sum(expansion * apart, cells.domain, cells.domains) / whole
         weight = expansion / whole[cells.domain]
     return Means(
         rows=rows,
         cell=cell,
-        size=size,
-        plots_stratum=group_sum(counted, sample.stratum, cells.strata),
+        size=wide(size, pools),
+        plots_stratum=by_stratum(counted),
         size_stratum=size_stratum,
-        square_stratum=group_sum(size_all**2, sample.stratum, cells.strata),
+        square_stratum=by_stratum(size_all**2),
         plots_cell=plots_cell,
-        square_cell=group_sum(size**2, cell, len(cells.domain)),
+        square_cell=by_cell(size**2),
         weight=weight,
         density=density,
     )
@@ -224,16 +267,19 @@ def deviations(sample: Sample, mean: Means, cells: Cells) -> Deviations:
     -----
     u_i = s_i 1_d (y_i - R_d) - r s_i with r the sum of the first term over the stratum by S_h; plots of the stratum
     outside the domain count with the second term alone. The part of a stratum in the variance is
-    weight^2 n_h / (n_h - 1) sum u_i^2.
+    weight^2 n_h / (n_h - 1) sum u_i^2. Plots of a cluster are added up to one u first, and n_h counts clusters.
     """
     with np.errstate(divide="ignore", invalid="ignore"):
-        z = mean.size * (sample.value[mean.rows] - mean.density[cells.domain[mean.cell]])
+        rows = slice(None) if len(mean.rows) == len(sample.size) else mean.rows
+        z = mean.size * (sample.value[rows] - mean.density[cells.domain[mean.cell]])
         slope = group_sum(z, mean.cell, len(cells.domain)) / mean.size_stratum[cells.stratum]
         slope = np.where(mean.plots_cell > 0, slope, 0.0)
-        within = group_sum((z - slope[mean.cell] * mean.size) ** 2, mean.cell, len(cells.domain))
-        beside = slope**2 * np.maximum(mean.square_stratum[cells.stratum] - mean.square_cell, 0.0)
-        variance = mean.weight**2 * inflation(mean.plots_stratum)[cells.stratum] * (within + beside)
-    return Deviations(z, slope, variance)
+        unit = sample.unit
+        parts = pieces_of_plots(mean, z) if unit is None else pieces_of_clusters(unit, sample, mean, z, cells)
+        within = group_sum((parts.z - slope[parts.cell] * parts.size) ** 2, parts.cell, len(cells.domain))
+        beside = slope**2 * np.maximum(parts.square_stratum[cells.stratum] - parts.square_cell, 0.0)
+        variance = mean.weight**2 * inflation(parts.units_stratum)[cells.stratum] * (within + beside)
+    return Deviations(z, slope, variance, within, parts.units_stratum, parts.units_cell)
 
 
 def inflation(plots: np.ndarray) -> np.ndarray:
@@ -242,7 +288,7 @@ def inflation(plots: np.ndarray) -> np.ndarray:
 
 
 def cell_df(plots_cell: np.ndarray, plots_stratum: np.ndarray) -> np.ndarray:
-    """Degrees of freedom of the variance part of a cell.
+    """Degrees of freedom of the variance part of a cell, from its plots or, if there are clusters, its units.
 
     A domain with few plots in a large stratum knows its variance from those few plots only, so the number is one less
     than the plots of the cell (at least 1), never more than the stratum allows. Zero for an empty cell.
@@ -267,7 +313,7 @@ def ratio_of_means(
     area_ha : ndarray
         Area of each stratum [ha]; NaN if unknown.
     allowed : ndarray of bool
-        Strata that take part, by pool; shape (strata, pools). Strata with fewer than two plots must be left out.
+        Strata that take part, by pool; shape (strata, pools). Strata with fewer than two units must be left out.
 
     Returns
     -------
@@ -282,14 +328,16 @@ def ratio_of_means(
     mean = means(sample, domain, cells, area_ha, allowed)
     spread = deviations(sample, mean, cells)
     plots = group_sum(mean.plots_cell, cells.domain, domains)
-    part_df = cell_df(mean.plots_cell, mean.plots_stratum[cells.stratum])
-    df = np.minimum(satterthwaite(spread.variance, part_df, cells.domain, domains), plots - 1)
-    enough = (plots >= MIN_PLOTS) & np.isfinite(mean.density)
+    units = plots if sample.unit is None else group_sum(spread.units_cell, cells.domain, domains)
+    part_df = cell_df(spread.units_cell, spread.units_stratum[cells.stratum])
+    df = np.minimum(satterthwaite(spread.variance, part_df, cells.domain, domains), units - 1)
+    enough = (units >= MIN_PLOTS) & np.isfinite(mean.density)
     return RatioEstimate(
         density=np.where(enough, mean.density, np.nan),
         variance=np.where(enough, group_sum(spread.variance, cells.domain, domains), np.nan),
         df=np.where(enough, df, np.nan),
         plots=plots.astype(np.int64),
+        units=units.astype(np.int64),
     )
 
 

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pandas as pd
 
+from landcarbon.estimate.clusters import few_clusters, unit_counts
 from landcarbon.estimate.combine import Plan, plan_sums
 from landcarbon.estimate.interval import check_confidence, t_half_width
 from landcarbon.estimate.notes import (
@@ -20,10 +21,13 @@ from landcarbon.estimate.notes import (
     zero_variance,
 )
 from landcarbon.estimate.ratio import MIN_PLOTS, RatioEstimate, Sample, counts, ratio_of_means
+from landcarbon.estimate.single_columns import ratio_from_neighbours
 from landcarbon.estimate.sum_levels import sum_levels
 from landcarbon.estimate.sum_notes import borrowed_parts, pools_left_out, sum_methods
-from landcarbon.estimate.sums import Sums, read_sums
+from landcarbon.estimate.sums import read_sums
+from landcarbon.estimate.systematic import check_variance, say_neighbours
 from landcarbon.estimate.tables import LEVELS, Plots, Units, read_plots
+from landcarbon.estimate.two_phase import first_phase_area_se, say_two_phase, stock_error, with_first_phase
 from landcarbon.findings import empty_findings, join_findings, make_findings
 
 __all__ = ["STOCK_COLUMNS", "estimate_stocks"]
@@ -56,16 +60,17 @@ _METHOD = {
 
 @dataclass(frozen=True)
 class _Level:
-    """Estimates of one level at one survey; ``area_ha`` and ``method`` have shape (units, pools)."""
+    """Estimates of one level at one survey; ``area_ha``, ``method`` have shape (units, pools), ``area_se`` (units,)."""
 
     by: str
     labels: list[str]
     area_ha: np.ndarray
     estimate: RatioEstimate
     method: np.ndarray
+    area_se: np.ndarray | None = None
 
 
-def estimate_stocks(
+def estimate_stocks(  # noqa: PLR0913  (the tables, and how to estimate and report)
     plot_pools: pd.DataFrame,
     strata: pd.DataFrame,
     parcels: pd.DataFrame | None,
@@ -75,6 +80,7 @@ def estimate_stocks(
     confidence: float,
     inventory_name: str,
     sums: Mapping[str, Sequence[str]] | None = None,
+    variance: str = "random",
 ) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Estimate stocks at every survey.
 
@@ -83,8 +89,11 @@ def estimate_stocks(
     plot_pools : DataFrame
         One row per visited plot and survey: survey, plot, parcel, stratum, date, size (relative sampled area), inside
         and one column per pool and for ``all``, or per part if ``sums`` is given [t C/ha]; NaN where not measured.
+        Optional: ``weight`` (relative land a plot stands for within its stratum; multiplies ``size``), ``cluster``
+        (plots with the same name in a stratum are one sampling unit; blank for none), ``x`` and ``y`` [m].
     strata : DataFrame
-        stratum, area_ha [ha] (NaN if unknown).
+        stratum, area_ha [ha] (NaN if unknown). Optional: ``first_phase``, number of points of a first sample that tell
+        the area; NaN where it is known exactly.
     parcels : DataFrame or None
         parcel, area_ha [ha].
     surveys : sequence of str, or DataFrame with the column survey
@@ -98,12 +107,15 @@ def estimate_stocks(
     sums : mapping, optional
         Columns that make up each pool. Each part is then estimated from its own plots, a pool is the sum of its parts
         and ``all`` the sum of the pools that were measured at the survey.
+    variance : str
+        ``random`` takes the plots of a stratum as a random sample. ``neighbours`` takes the variance of strata and
+        inventory from the differences of neighbouring plots, for systematic grids; parcels keep the former.
 
     Returns
     -------
     stocks : DataFrame
         Columns ``STOCK_COLUMNS``, by inventory, stratum and parcel; densities in t C/ha, stocks in t C. A unit with
-        fewer than two plots has NaN and says so in ``method``. There is no inventory row where the area of one of
+        fewer than two units has NaN and says so in ``method``. There is no inventory row where the area of one of
         several strata is unknown.
     findings : DataFrame
         What was left out, not estimable, or looks too good.
@@ -111,13 +123,14 @@ def estimate_stocks(
     Raises
     ------
     UserError
-        If a column is missing, a plot occurs twice in a survey, or ``confidence`` is out of range.
+        If a column is missing, a plot occurs twice in a survey, or an option is out of range.
 
     Notes
     -----
     Formulas and sources: ``docs/estimation.md``.
     """
     check_confidence(confidence)
+    near = check_variance(variance)
     chosen = None if sums is None else read_sums(sums, pools)
     plots = read_plots(plot_pools, strata, parcels, pools, parts=None if chosen is None else chosen.parts)
     names = _survey_names(surveys)
@@ -127,11 +140,13 @@ def estimate_stocks(
     for survey in names:
         sample = plots.sample(survey)
         if chosen is None:
-            levels = _levels(sample, plots.units, inventory_name)
+            levels = _levels(sample, plots.units, inventory_name, near)
             found += _findings(levels, plots, sample, survey)
         else:
-            levels, about = _levels_of_sums(sample, plots, chosen, survey, inventory_name)
+            plan = plan_sums((sample,), chosen, plots.units.stratum_area_ha, near=near)
+            levels, about = _levels_of_sums(sample, plots, plan, survey, inventory_name)
             found += about
+        levels = _designed(levels, plots.units)
         for level in levels:
             blocks[level.by].append(_rows(level, survey, rows, confidence))
     return unit_order(blocks, len(rows), STOCK_COLUMNS), join_findings(found)
@@ -156,14 +171,29 @@ def _survey_names(surveys: Sequence[str] | pd.DataFrame) -> list[str]:
     return [str(name) for name in given]
 
 
-def _levels(sample: Sample, units: Units, inventory_name: str) -> list[_Level]:
+def _designed(levels: list[_Level], units: Units) -> list[_Level]:
+    """Add the error of estimated areas, and say how variances came about."""
+    strata = next(level.estimate for level in levels if level.by == "stratum")
+    done = []
+    for level in levels:
+        made, known = level.estimate, np.isfinite(level.estimate.density)
+        text = say_two_phase(say_neighbours(level.method, known, made.near), known, level.by, units)
+        if level.by == "inventory":
+            made = with_first_phase(made, strata, units)
+        area_se = first_phase_area_se(units) if level.by == "stratum" else None
+        done.append(replace(level, estimate=made, method=text, area_se=area_se))
+    return done
+
+
+def _levels(sample: Sample, units: Units, inventory_name: str, near: bool) -> list[_Level]:
     """Estimate the inventory (if areas allow), the strata and the parcels."""
     strata = len(units.strata)
-    allowed = counts(sample, strata) >= MIN_PLOTS
+    allowed = unit_counts(sample, strata) >= MIN_PLOTS
     pools = allowed.shape[1]
 
-    def estimate(domain: np.ndarray, domains: int) -> RatioEstimate:
-        return ratio_of_means(sample, domain, domains, units.stratum_area_ha, allowed)
+    def estimate(domain: np.ndarray, domains: int, near: bool = False) -> RatioEstimate:
+        made = ratio_of_means(sample, domain, domains, units.stratum_area_ha, allowed)
+        return ratio_from_neighbours(made, sample, domain, units.stratum_area_ha, allowed) if near else made
 
     levels = []
 
@@ -172,9 +202,9 @@ def _levels(sample: Sample, units: Units, inventory_name: str) -> list[_Level]:
 
     if units.has_total:
         area = np.where(allowed, units.stratum_area_ha[:, None], 0.0).sum(axis=0, keepdims=True)
-        add("inventory", [inventory_name], area, estimate(np.zeros_like(sample.stratum), 1))
+        add("inventory", [inventory_name], area, estimate(np.zeros_like(sample.stratum), 1, near))
     area = np.repeat(units.stratum_area_ha[:, None], pools, axis=1)
-    by_stratum = estimate(sample.stratum, strata)
+    by_stratum = estimate(sample.stratum, strata, near)
     by_stratum = replace(by_stratum, plots=counts(sample, strata).astype(np.int64))
     add("stratum", units.strata, area, by_stratum)
     area = np.repeat(units.parcel_area_ha[:, None], pools, axis=1)
@@ -189,24 +219,25 @@ def _methods(by: str, estimate: RatioEstimate) -> np.ndarray:
     reason = np.where(
         count < MIN_PLOTS, refused[np.minimum(count, MIN_PLOTS - 1)], "not estimable: area of its strata unknown"
     )
+    if estimate.units is not None:
+        reason = np.where((count >= MIN_PLOTS) & (estimate.units < MIN_PLOTS), "not estimable: one cluster", reason)
     return np.where(np.isfinite(estimate.density), _METHOD[by], reason)
 
 
 def _levels_of_sums(
-    sample: Sample, plots: Plots, sums: Sums, survey: str, inventory_name: str
+    sample: Sample, plots: Plots, plan: Plan, survey: str, inventory_name: str
 ) -> tuple[list[_Level], list[pd.DataFrame]]:
     """Estimate every level from parts with their own plots each, and say what is to be said about it."""
     units = plots.units
-    plan = plan_sums((sample,), sums, units.stratum_area_ha)
     levels = []
     for level in sum_levels((sample,), plan, units, inventory_name):
         made = level.estimate
         plain = np.full(made.density.shape, _METHOD[level.by], dtype=object)
-        estimate = RatioEstimate(made.density, made.variance, made.df, made.plots[0])
+        estimate = RatioEstimate(made.density, made.variance, made.df, made.plots[0], near=made.near)
         text = sum_methods(plain, made, plan, [survey])
         levels.append(_Level(level.by, level.labels, level.area_ha, estimate, text))
         borrowed = made
-    about = _findings(levels, replace(plots, pools=sums.labels()), sample, survey, plan)
+    about = _findings(levels, replace(plots, pools=plan.sums.labels()), sample, survey, plan)
     return levels, [*about, pools_left_out(plan, [survey]), borrowed_parts(borrowed, plan, units, survey)]
 
 
@@ -216,6 +247,11 @@ def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd
     density, se = estimate.density, np.sqrt(estimate.variance)
     half = t_half_width(se, estimate.df, confidence)
     area = level.area_ha
+    stock_se = stock_error(se, density, area, level.area_se)
+    low, high = (density - half) * area, (density + half) * area
+    if level.area_se is not None:
+        wide = t_half_width(stock_se, estimate.df, confidence)
+        low, high = density * area - wide, density * area + wide
     columns = {
         "area_ha": area,
         "plots": estimate.plots,
@@ -224,9 +260,9 @@ def _rows(level: _Level, survey: str, pools: list[str], confidence: float) -> pd
         "density_low": density - half,
         "density_high": density + half,
         "stock_t_c": density * area,
-        "stock_se": se * area,
-        "stock_low": (density - half) * area,
-        "stock_high": (density + half) * area,
+        "stock_se": stock_se,
+        "stock_low": low,
+        "stock_high": high,
         "df": estimate.df,
     }
     rows = units * len(pools)
@@ -254,7 +290,11 @@ def _findings(
     number = counts(sample, len(units.strata))
     inside = np.ones(len(columns), dtype=bool) if plan is None else ~plan.out[plan.sums.pool]
     shown = [name for name, yes in zip(columns, inside, strict=True) if yes]
-    found = [left_out(plots, survey), few_plots_in_strata(units, shown, [number[:, inside]], [survey])]
+    found = [
+        left_out(plots, survey),
+        few_plots_in_strata(units, shown, [number[:, inside]], [survey]),
+        few_clusters(units, [sample], survey),
+    ]
     for level in levels:
         found.append(zero_variance(level.by, level.labels, names, level.estimate.variance, survey))
     parcels = levels[-1].estimate

@@ -46,10 +46,11 @@ def sum_levels(samples: tuple[Sample, ...], plan: Plan, units: Units, inventory_
     levels = []
     if units.has_total:
         domains = tuple(np.zeros_like(sample.stratum) for sample in samples)
-        estimate = estimate_sums(samples, domains, 1, plan)
+        estimate = estimate_sums(samples, domains, 1, plan, near=plan.near)
         levels.append(SumLevel("inventory", [inventory_name], estimate.area_ha, estimate))
     domains = tuple(sample.stratum for sample in samples)
-    estimate = estimate_sums(samples, domains, len(units.strata), plan, shown=np.stack(plan.plots))
+    shown = np.stack(plan.plots)
+    estimate = estimate_sums(samples, domains, len(units.strata), plan, shown=shown, near=plan.near)
     levels.append(SumLevel("stratum", units.strata, of(units.strata, units.stratum_area_ha), estimate))
     domains = tuple(sample.parcel for sample in samples)
     means = stratum_means(samples, plan)

@@ -37,8 +37,9 @@ def sum_methods(method: np.ndarray, estimate: SumEstimate, plan: Plan, surveys: 
     text[known & np.isnan(estimate.repeated)] = ""  # no plots of their own
     source = "stratum mean" if len(surveys) == 1 else "change of its stratum"
     for part, label in enumerate(plan.sums.labels()):
-        for plots, own in enumerate(("no plots of its own", "one plot of its own")):
-            hit = estimate.borrowed[:, part] & (estimate.part_plots.min(axis=0)[:, part] == plots)
+        few = np.minimum(estimate.part_plots.min(axis=0)[:, part], MIN_PLOTS)
+        for plots, own in enumerate(("no plots of its own", "one plot of its own", "its plots in one cluster")):
+            hit = estimate.borrowed[:, part] & (few == plots)
             for name in (plan.sums.pool[part], len(plan.sums.pools)):
                 text[hit & known[:, name] & estimate.pool_known[:, plan.sums.pool[part]], name] += (
                     f"; {label}: {source} ({own})"
@@ -79,7 +80,7 @@ def _reasons(estimate: SumEstimate, plan: Plan, surveys: Sequence[str]) -> np.nd
     sums, plots = plan.sums, estimate.part_plots
     domains = len(estimate.density)
     why = np.full((domains, len(sums.pools) + 1), "area of its strata unknown", dtype=object)
-    fewest = plots.min(axis=0)
+    fewest, units = plots.min(axis=0), estimate.part_units.min(axis=0)
     for name in range(len(sums.pools) + 1):
         mine = np.flatnonzero(sums.pool == name) if name < len(sums.pools) else np.flatnonzero(_measured(plan))
         if not len(mine):
@@ -95,6 +96,9 @@ def _reasons(estimate: SumEstimate, plan: Plan, surveys: Sequence[str]) -> np.nd
             if len(surveys) > 1:
                 text += f" in {surveys[0]}, {count[1]} in {surveys[1]}"
             why[domain, name] = text + (f" with {labels[scarce[domain]]}" if differ[domain] else "")
+        lumped = mine[np.argmin(units[:, mine], axis=1)]
+        for domain in hit[(fewest[hit, scarce[hit]] >= MIN_PLOTS) & (units[hit, lumped[hit]] < MIN_PLOTS)]:
+            why[domain, name] = "one cluster" + (f" with {labels[lumped[domain]]}" if differ[domain] else "")
     for pool in np.flatnonzero(plan.out):
         why[:, pool] = not_measured(plan, pool, surveys)
     return why

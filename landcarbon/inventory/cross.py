@@ -7,7 +7,7 @@ from typing import Any
 from landcarbon.inventory.columns import table_columns, table_names
 from landcarbon.inventory.faults import Fault
 from landcarbon.inventory.ids import id_faults
-from landcarbon.inventory.models import Settings
+from landcarbon.inventory.models import SAMPLE_TABLES, Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.inventory.pool_cross import pool_faults
 from landcarbon.inventory.units import accepted_units, dimension_of
@@ -74,9 +74,14 @@ def _survey_faults(settings: Settings) -> list[Fault]:
     faults = []
     shared = settings.trees.file is not None
     for name, survey in settings.surveys.items():
-        if survey.trees is None and not shared:
-            what = "no tree table: neither this survey names one nor does [trees] give one for all surveys"
-            faults.append(Fault(("surveys", name), what, "Give trees = 'FILE' here, or file = 'FILE' under [trees]."))
+        sampled = any(getattr(holder, table) for holder in (survey, settings.samples) for table in SAMPLE_TABLES)
+        if survey.trees is None and not shared and not sampled:
+            what = (
+                "no tree table: neither this survey names one nor does [trees] give one for all surveys, and there is "
+                "no table of samples either"
+            )
+            told = "Give trees = 'FILE' or a table of samples, such as soil = 'FILE', here, or file = 'FILE' under "
+            faults.append(Fault(("surveys", name), what, told + "[trees]."))
         if survey.trees is not None and shared:
             what = "tree tables are given both here and under [trees]"
             faults.append(Fault(("surveys", name, "trees"), what, "Keep one of the two."))

@@ -47,6 +47,12 @@ class Estimation(Section):
     rasters: list[str] | None = Field(
         default=None, description="Rasters of [rasters] that assist the estimates; all of them if left out"
     )
+    map_cell_m: float | None = Field(
+        default=None,
+        gt=0,
+        description="Side of the cells of the rasters of density and change [m]; that of the first raster if left out. "
+        "Without rasters the results hold such maps only if this is stated",
+    )
     by_stratum: bool = Field(default=False, description="Fit the model of the rasters in each stratum by itself")
 
 
@@ -56,6 +62,7 @@ class Raster(Section):
     file: str | None = Field(default=None, description="GeoTIFF or other raster, the same for all surveys")
     files: dict[str, str] = Field(default={}, description="survey = 'file', where each survey has its own")
     band: int = Field(default=1, ge=1, description="Band to read")
+    crs: str | None = Field(default=None, description="Coordinate system, if the file does not state it")
 
     @model_validator(mode="after")
     def _one_way(self) -> Raster:

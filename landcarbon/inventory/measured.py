@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from landcarbon.inventory.models import SAMPLE_TABLES, Settings
 
-__all__ = ["PART_TABLES", "chosen_parts", "counted_tables", "measured_parts", "tables_given"]
+__all__ = ["PART_TABLES", "chosen_parts", "counted_tables", "measured_parts", "surveys_with_trees", "tables_given"]
 
 #: Parts a user may name for each pool, and the tables any one of which they need (none: the tree table).
 PART_TABLES: dict[str, dict[str, tuple[str, ...]]] = {
@@ -31,6 +31,12 @@ def tables_given(settings: Settings) -> tuple[str, ...]:
     return tuple(table for table in SAMPLE_TABLES if any(getattr(holder, table) for holder in holders))
 
 
+def surveys_with_trees(settings: Settings) -> set[str]:
+    """Return the surveys at which trees were tallied; at the others only samples were taken."""
+    shared = bool(settings.trees.file)
+    return {name for name, survey in settings.surveys.items() if survey.trees or shared}
+
+
 def chosen_parts(settings: Settings, pool: str) -> tuple[str, ...]:
     """Return the parts of a measured pool in the words of the project file.
 
@@ -52,7 +58,8 @@ def chosen_parts(settings: Settings, pool: str) -> tuple[str, ...]:
     known = PART_TABLES[pool]
     given = tables_given(settings)
     usual = _DEFAULTS.get(pool, tuple(known))
-    return tuple(part for part in usual if not known[part] or set(known[part]) & set(given))
+    trees = bool(surveys_with_trees(settings))
+    return tuple(part for part in usual if (set(known[part]) & set(given) if known[part] else trees))
 
 
 def counted_tables(settings: Settings) -> set[str]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from landcarbon.inventory.faults import Fault
 from landcarbon.inventory.locate import Path
-from landcarbon.inventory.measured import PART_TABLES, chosen_parts, tables_given
+from landcarbon.inventory.measured import PART_TABLES, chosen_parts, surveys_with_trees, tables_given
 from landcarbon.inventory.models import POOL_NAMES, SAMPLE_TABLES, Settings
 from landcarbon.inventory.nearest import suggestion
 
@@ -12,7 +12,7 @@ __all__ = ["pool_faults"]
 
 # What this version can do for each pool; anything else would be promised and not kept.
 _HOW = {
-    "above_ground": ("measured",),
+    "above_ground": ("measured", "not counted"),
     "below_ground": ("ratio", "not counted"),
     "dead_wood": ("measured", "default", "not counted"),
     "litter": ("measured", "default", "not counted"),
@@ -22,6 +22,9 @@ _HOW = {
 
 # The share of coarse fragments has to be known for these kinds of bulk density; the third has it inside.
 _WITH_COARSE = ("fine per fine volume", "whole per whole volume")
+
+_TREES = "Give trees = 'FILE' under a survey, or file = 'FILE' under [trees]."
+_NO_TREES = "Without trees say {pool} = {{ how = 'not counted', reason = '...' }} under [pools]."
 
 _BOLE_ONLY = "3"  # status of dead mangroves beyond those with a share of the mass lost: nothing left but the bole
 
@@ -37,6 +40,7 @@ def pool_faults(settings: Settings) -> list[Fault]:
     return [
         *_how_faults(settings),
         *_part_faults(settings),
+        *_root_faults(settings),
         *_table_faults(settings),
         *_line_faults(settings),
         *_class_faults(settings),
@@ -60,7 +64,7 @@ def _how_faults(settings: Settings) -> list[Fault]:
 
 def _part_faults(settings: Settings) -> list[Fault]:
     """Check that the parts named exist and have a table, and that there is any part at all."""
-    given = tables_given(settings)
+    given, trees = tables_given(settings), surveys_with_trees(settings)
     faults = []
     for pool, known in PART_TABLES.items():
         named = getattr(settings.pools, pool).parts
@@ -73,10 +77,21 @@ def _part_faults(settings: Settings) -> list[Fault]:
                 faults.append(Fault(path, f"no part {part!r} of {pool}", remedy))
             elif known[part] and not set(known[part]) & set(given):
                 faults.append(Fault(path, f"the part {part!r} has no table", _give(known[part])))
+            elif not known[part] and not trees:
+                faults.append(Fault(path, f"the part {part!r} has no tree table", _TREES))
         if named is None and not chosen_parts(settings, pool):
             tables = tuple(dict.fromkeys(table for names in known.values() for table in names))
-            faults.append(Fault(("pools", pool), "measured, but there is no table of measurements", _give(tables)))
+            told = _NO_TREES.format(pool=pool) + " " if () in known.values() and not trees else ""
+            what = "measured, but there is no table of measurements"
+            faults.append(Fault(("pools", pool), what, told + _give(tables)))
     return faults
+
+
+def _root_faults(settings: Settings) -> list[Fault]:
+    if settings.pools.below_ground.how != "ratio" or surveys_with_trees(settings):
+        return []
+    what = "roots are a ratio to the biomass of trees, but there is no tree table"
+    return [Fault(("pools", "below_ground"), what, _NO_TREES.format(pool="below_ground"))]
 
 
 def _give(tables: tuple[str, ...]) -> str:

@@ -412,8 +412,9 @@ def logs(
     check.apply("cavity larger than log", net < 0.0)
     formulas = sorted({name for name in volume["formula"][check.used] if name})
     method = f"logs on the plot, volume by {', '.join(formulas)}" if formulas else "logs on the plot"
-    told = {"part": _COARSE, "method": method, "shares": shares}
-    return area_parts(check, net, wood, visited, area_m2=options.log_area_m2, **told)
+    return area_parts(
+        check, net, wood, visited, area_m2=options.log_area_m2, part=_COARSE, method=method, shares=shares
+    )
 
 
 def _log_volume(check: RowCheck, length: FloatArray, ends: list[FloatArray], options: DownWoodOptions) -> pd.DataFrame:

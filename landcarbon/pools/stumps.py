@@ -115,5 +115,6 @@ def stumps(
     check.wood(wood, default_class(options))
     volume = stump_volume(height, diameter, taper=options.taper)
     method = "stumps as cylinders" if np.isnan(options.taper) else f"stumps with taper B = {options.taper:g}"
-    told = {"part": "stumps", "method": method, "shares": shares}
-    return area_parts(check, volume, wood, visited, area_m2=options.log_area_m2, **told)
+    return area_parts(
+        check, volume, wood, visited, area_m2=options.log_area_m2, part="stumps", method=method, shares=shares
+    )

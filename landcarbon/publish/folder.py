@@ -14,12 +14,14 @@ import time
 import uuid
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
 
 from landcarbon.errors import ResultsError
+from landcarbon.findings import join_findings
 from landcarbon.publish.geopackage import read_parcels, read_plot_points, write_geopackage
 from landcarbon.publish.provenance import is_ours, read_provenance, write_provenance
 from landcarbon.publish.readme import write_readme
@@ -118,8 +120,9 @@ def write_results(results: Results, out: Path, *, base_tiles: bool = False) -> P
         unfinished = target.with_name(f".{target.name}.unfinished-{uuid.uuid4().hex}")
         unfinished.mkdir()
         try:
-            for name, writer in _writers(results, base_tiles).items():
-                writer(results, unfinished / name)
+            written = _with_rasters(results, unfinished)
+            for name, writer in _writers(written, base_tiles).items():
+                writer(written, unfinished / name)
             _put_in_place(unfinished, target)
         finally:
             shutil.rmtree(unfinished, ignore_errors=True)
@@ -178,7 +181,6 @@ def _writers(results: Results, base_tiles: bool) -> dict[str, Callable[[Results,
     return {
         **{SAMPLE_FILES[name]: _sample_writer(name) for name in results.samples},
         **{FURTHER_FILES[name]: _further_writer(name) for name in results.further},
-        **{name: _raster_writer(name) for name in results.rasters},
         "stocks.csv": lambda results, path: write_table(results.stocks, path),
         "change.csv": lambda results, path: write_table(results.change, path),
         "findings.csv": lambda results, path: write_table(results.findings, path),
@@ -204,8 +206,14 @@ def _further_writer(name: str) -> Callable[[Results, Path], None]:
     return lambda results, path: write_table(results.further[name], path)
 
 
-def _raster_writer(name: str) -> Callable[[Results, Path], None]:
-    return lambda results, path: results.rasters[name](path)
+def _with_rasters(results: Results, folder: Path) -> Results:
+    """Write the rasters; what was noted about them goes to the findings."""
+    if results.rasters is None:
+        return results
+    from landcarbon.publish.rasters import write_rasters
+
+    _, found = write_rasters(folder, results.rasters, results.stocks, results.change)
+    return replace(results, findings=join_findings([results.findings, found]))
 
 
 def _further_names(record: dict[str, Any]) -> list[str]:

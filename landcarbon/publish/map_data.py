@@ -12,6 +12,7 @@ import pandas as pd
 from landcarbon.publish.colours import ColourScale, diverging_scale, sequential_scale
 from landcarbon.publish.map_shapes import DEGREE_DECIMALS, name_places, outlines
 from landcarbon.publish.results import Results, sums_of_plots
+from landcarbon.publish.tables import FLOAT_FORMAT
 from landcarbon.publish.words import POOL_NAMES
 
 __all__ = ["CHANGE_FIELDS", "STOCK_FIELDS", "page_data"]
@@ -184,7 +185,8 @@ def _figures(
 def _short(value: float) -> float | None:
     if not math.isfinite(value):
         return None
-    rounded = float(f"{value:.{_DIGITS}g}")
+    # By way of the digits of the tables, so that a page made from the tables is the same to the last byte.
+    rounded = float(f"{float(FLOAT_FORMAT % value):.{_DIGITS}g}")
     return int(rounded) if rounded.is_integer() else rounded
 
 

@@ -16,7 +16,7 @@ import pandas as pd
 from landcarbon.publish.results import Results
 from landcarbon.publish.words import CAUTIONS, SIGN_RULE
 
-__all__ = ["MADE_BY", "count_findings", "is_ours", "plain", "read_provenance", "write_provenance"]
+__all__ = ["MADE_BY", "count_findings", "is_ours", "plain", "raster_files", "read_provenance", "write_provenance"]
 
 MADE_BY = "landcarbon results folder"
 _FORM = 1
@@ -30,7 +30,6 @@ _PACKAGES = (
     "pyarrow",
     "folium",
     "rasterio",
-    "exactextract",
 )
 
 
@@ -58,7 +57,7 @@ def write_provenance(results: Results, path: Path) -> None:
         "has_parcels": results.parcels is not None,
         "samples": list(results.samples),
         "further": list(results.further),
-        "rasters": list(results.rasters),
+        "rasters": raster_files(path.parent),
         "findings": count_findings(results.findings).to_dict(orient="records"),
         "marks": list(results.marks),
         "cautions": CAUTIONS,
@@ -67,6 +66,11 @@ def write_provenance(results: Results, path: Path) -> None:
     }
     text = json.dumps(plain(record), indent=2, ensure_ascii=False, allow_nan=False)
     path.write_text(text + "\n", encoding="utf-8", errors="backslashreplace", newline="\n")
+
+
+def raster_files(folder: Path) -> list[str]:
+    """Names of the rasters in a results folder."""
+    return sorted(item.name for item in folder.glob("*.tif") if item.name.startswith(("density_", "change_")))
 
 
 def count_findings(findings: pd.DataFrame) -> pd.DataFrame:

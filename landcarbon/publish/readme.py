@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import textwrap
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from pathlib import Path
 
 import jinja2
 
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.publish.columns import columns_of, describe
+from landcarbon.publish.provenance import raster_files
 from landcarbon.publish.results import (
     CHANGE_COLUMNS,
     FURTHER_FILES,
@@ -26,13 +27,15 @@ _WIDTH = 100
 _NAME_WIDTH = 22
 
 
-def readme_text(results: Results) -> str:
+def readme_text(results: Results, rasters: Sequence[str] = ()) -> str:
     """Tell what the files and columns of a results folder are.
 
     Parameters
     ----------
     results : Results
         The run.
+    rasters : sequence of str
+        Names of the rasters beside the tables.
 
     Returns
     -------
@@ -57,7 +60,7 @@ def readme_text(results: Results) -> str:
         tables=[(table, _table_lines(table, names, results)) for table, names in _written(results).items()],
         samples=[(SAMPLE_FILES[name], name.replace("_", " ")) for name in results.samples],
         further=[(FURTHER_FILES[name], FURTHER_WORDS[name]) for name in results.further],
-        rasters=[(name, raster_words(name)) for name in results.rasters],
+        rasters=[(name, raster_words(name)) for name in rasters],
         sign_rule=SIGN_RULE,
         area_method=results.area_method or "No areas were given.",
         marks=results.marks,
@@ -75,7 +78,9 @@ def write_readme(results: Results, path: Path) -> None:
     path : Path
         File to write.
     """
-    path.write_text(readme_text(results), encoding="utf-8", errors="backslashreplace", newline="\n")
+    path.write_text(
+        readme_text(results, raster_files(path.parent)), encoding="utf-8", errors="backslashreplace", newline="\n"
+    )
 
 
 def _written(results: Results) -> dict[str, Iterable[str]]:

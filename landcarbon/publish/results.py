@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Sequence
 from dataclasses import dataclass, field
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -16,12 +15,16 @@ from landcarbon.inventory.models import SAMPLE_TABLES
 if TYPE_CHECKING:
     import geopandas as gpd
 
+    from landcarbon.read.raster_files import RasterFile
+    from landcarbon.read.rasters import RasterPlace
+
 __all__ = [
     "CHANGE_COLUMNS",
     "FURTHER_FILES",
     "OPTIONAL_COLUMNS",
     "SAMPLE_FILES",
     "STOCK_COLUMNS",
+    "RasterRequest",
     "Results",
     "parts_of_plots",
     "sums_of_plots",
@@ -32,10 +35,41 @@ __all__ = [
 SAMPLE_FILES = {table: f"samples_{table}.parquet" for table in SAMPLE_TABLES}
 #: Files of what not every inventory has, by the name in ``Results.further``.
 FURTHER_FILES = {
-    name: f"{name}.csv" for name in ("trend", "area_effect", "parcel_detail", "parcel_models", "raster_models")
+    name: f"{name}.csv"
+    for name in ("trend", "area_effect", "parcel_detail", "parcel_models", "raster_worth", "raster_lines")
 }
 #: Columns that stocks and change have if the project file asks for lower bounds.
 OPTIONAL_COLUMNS = ("density_at_least", "stock_at_least", "change_at_least")
+
+
+@dataclass(frozen=True)
+class RasterRequest:
+    """What the maps of cells are made from.
+
+    Attributes
+    ----------
+    inventory : str
+        Name of the inventory.
+    parcels : GeoDataFrame
+        parcel, stratum, geometry in the coordinate system of the inventory.
+    place : RasterPlace
+        Where files are sought; its coordinate system is that of the maps.
+    files : sequence of RasterFile
+        Auxiliary rasters; may be empty.
+    coefficients : DataFrame
+        survey, stratum, term, value; a survey without any gets a map of parcel means.
+    cell_m : float, optional
+        Cell size; that of the first raster if left out.
+    """
+
+    inventory: str
+    parcels: gpd.GeoDataFrame
+    place: RasterPlace
+    files: Sequence[RasterFile] = ()
+    coefficients: pd.DataFrame = field(
+        default_factory=lambda: pd.DataFrame({"survey": [], "stratum": [], "term": [], "value": []})
+    )
+    cell_m: float | None = None
 
 
 @dataclass(frozen=True)
@@ -80,8 +114,8 @@ class Results:
     further : dict of DataFrame
         Further tables by the names of ``FURTHER_FILES``, as far as there are any: trend lines, what a change of area
         brings, how the figures of parcels are composed, and the models behind them.
-    rasters : dict
-        Writers of the rasters of the run by file name; empty in results read back.
+    rasters : RasterRequest or None
+        What the rasters of density and change are made from; None where none are wanted, and in results read back.
     """
 
     settings_summary: dict[str, Any]
@@ -100,7 +134,7 @@ class Results:
     marks: list[str] = field(default_factory=list)
     samples: dict[str, pd.DataFrame] = field(default_factory=dict)
     further: dict[str, pd.DataFrame] = field(default_factory=dict)
-    rasters: dict[str, Callable[[Path], None]] = field(default_factory=dict)
+    rasters: RasterRequest | None = None
 
     @property
     def name(self) -> str:

@@ -12,12 +12,26 @@ from landcarbon.errors import ResultsError
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.publish.results import CHANGE_COLUMNS, OPTIONAL_COLUMNS, STOCK_COLUMNS
 
-__all__ = ["TEXT_COLUMNS", "read_table", "restore_text", "safe_text", "table_columns", "write_table"]
+__all__ = ["FLOAT_FORMAT", "TEXT_COLUMNS", "read_table", "restore_text", "safe_text", "table_columns", "write_table"]
 
 #: Columns of the published tables that hold text; all others are numbers, except where named below.
 TEXT_COLUMNS = frozenset(
     {"by", "unit", "survey", "since", "until", "pool", "method", "severity", "rule", "table", "file", "column", "value"}
-    | {"plot", "tree", "message", "remedy", "step", "parcel", "stratum"}
+    | {
+        "plot",
+        "tree",
+        "message",
+        "remedy",
+        "step",
+        "parcel",
+        "stratum",
+        "of",
+        "model",
+        "coefficients",
+        "term",
+        "rasters",
+    }
+    | {"why", "plots_compared"}
 )
 _TRUTH_COLUMNS = frozenset({"used"})
 _WHOLE_COLUMNS = frozenset({"row", "row_id"})
@@ -26,7 +40,7 @@ _NUMBER_COLUMNS = (
 )
 
 # Ten significant digits: far beyond what a sample can tell, short enough to hide the last-bit noise of summation.
-_FLOAT_FORMAT = "%.10g"
+FLOAT_FORMAT = "%.10g"
 _DANGEROUS = re.compile(r"'*[=+\-@\t\r\n]")
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?")
 _RESTORED = re.compile(r"'('*[=+\-@\t\r\n])")
@@ -84,7 +98,7 @@ def write_table(frame: pd.DataFrame, path: Path) -> None:
         encoding="utf-8",
         errors="backslashreplace",
         lineterminator="\n",
-        float_format=_FLOAT_FORMAT,
+        float_format=FLOAT_FORMAT,
     )
 
 

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 from rich.text import Text
 
 from landcarbon.publish.results import Results
+from landcarbon.publish.terminal_further import further_tables
 from landcarbon.publish.terminal_tables import (
     change_table,
     finding_line,
@@ -85,6 +86,8 @@ def print_results(results: Results, console: Console, *, by: str = "inventory", 
     console.print(Text.assemble("\n", plain_text(results.name)), style="bold")
     tables = _overview(results) if by == "inventory" else [stocks_table(results, by), change_table(results, by)]
     _print_tables(tables, console)
+    if by != "inventory":
+        _print_tables(further_tables(results, by), console)
     if by != "inventory" and rows_of(results.stocks, by).empty:
         plural = {"stratum": "strata", "parcel": "parcels"}[by]
         console.print(Text(f"There are no {plural} in these results; see --by inventory."))
@@ -120,6 +123,7 @@ def print_check(results: Results, console: Console) -> None:
 def _overview(results: Results) -> Iterable[Table]:
     yield stocks_table(results, "inventory")
     yield change_table(results, "inventory")
+    yield from further_tables(results, "inventory")
     if rows_of(results.stocks, "inventory")["density_t_c_ha"].isna().all():
         yield strata_table(results)
     elif rows_of(results.stocks, "stratum")["unit"].nunique() > 1:

@@ -57,6 +57,8 @@ def print_trace(trace: Trace, console: Console, trees: int) -> None:
     if len(trace.plots):
         print_wide(_plots_of(trace), console)
         _say_mean(trace, console)
+    if len(trace.composition):
+        print_wide(_composed(trace.composition), console)
     for note in trace.notes:
         console.print(plain_text(note))
     _print_trees(trace, console, trees)
@@ -79,6 +81,18 @@ def _say_mean(trace: Trace, console: Console) -> None:
     # The published table holds ten digits.
     if math.isclose(mean, float(trace.row["density_t_c_ha"]), rel_tol=1e-8, abs_tol=1e-8):
         console.print(f"The figure is their mean, weighted by relative area: {figure(mean, _DECIMALS)} t C/ha.")
+
+
+def _composed(rows: pd.DataFrame) -> Table:
+    """Show the arithmetic of a composite figure: weight x own + (1 - weight) x model + adjustment."""
+    title = "Composed per pool: weight x own plots + (1 - weight) x model of the stratum + adjustment to its total"
+    names = ["plots", "own plots", "weight", "model", "adjustment", "t C/ha", "SE"]
+    table = table_of(title, [("pool", "left"), *((name, "right") for name in names)])
+    columns = ["direct", "weight_direct", "synthetic", "adjustment", "density", "density_se"]
+    for row in rows.itertuples(index=False):
+        cells = [figure(number_of(row, name), _DECIMALS) for name in columns]
+        table.add_row(plain_text(str(row.pool).replace("_", " ")), figure(number_of(row, "plots"), 0), *cells)
+    return table
 
 
 def _plots_of(trace: Trace) -> Table:

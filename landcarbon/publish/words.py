@@ -32,7 +32,8 @@ FURTHER_WORDS = {
     "area_effect": "what a change of area alone brings, beside the change on the common area",
     "parcel_detail": "how the figure of each parcel is composed: own plots, model, adjustment",
     "parcel_models": "models behind the figures of the parcels",
-    "raster_models": "what the rasters were worth, and the models fitted to them",
+    "raster_worth": "what the rasters were worth, and whether they were used",
+    "raster_lines": "the lines fitted to the rasters",
 }
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import geopandas as gpd
 import numpy as np
@@ -12,20 +12,24 @@ import shapely
 from pyproj import CRS
 
 from landcarbon.errors import InputFileError
+from landcarbon.findings import join_findings
 from landcarbon.inventory.models import Settings
 from landcarbon.read.crs import WGS84, is_metric, metric_crs, move_points, utm_for
 from landcarbon.read.limits import limit
-from landcarbon.read.mapping import map_raw
+from landcarbon.read.mapping import Mapped, left_blank, map_raw
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
 from landcarbon.read.table import RawTable
+from landcarbon.read.validity import by_survey, check_periods, gaps_in_time, has_periods
 from landcarbon.read.vectors import geodesic_area_m2, mend_polygons, read_vector
 
-__all__ = ["ParcelTable", "locate", "read_parcels"]
+__all__ = ["Boundaries", "ParcelTable", "locate", "read_parcels", "settle_boundaries"]
 
 _M2_PER_HA = 10_000.0
 _ALL = "all"
 _UNASSIGNED = "unassigned"
+_PERIOD = ["valid_from", "valid_to"]
+_COLUMNS = ["parcel", "stratum", "land_use", "area_ha"]
 
 
 @dataclass
@@ -42,12 +46,43 @@ class ParcelTable:
         Whether areas were stated by the user.
     findings : list of DataFrame
         What was noted.
+    dated : bool
+        Whether rows say how long they are in force. ``frame`` then holds every row of the file, with valid_from,
+        valid_to, file and row, and a parcel may stand in several; :func:`settle_boundaries` takes it from there.
     """
 
     frame: gpd.GeoDataFrame
     crs: CRS
     stated: bool
     findings: list[pd.DataFrame]
+    dated: bool = False
+
+
+@dataclass(frozen=True)
+class Boundaries:
+    """Boundaries that change between surveys.
+
+    Attributes
+    ----------
+    latest : ParcelTable
+        Parcels in force at the latest survey.
+    versions : GeoDataFrame
+        As ``Inputs.parcel_versions``.
+    in_force : DataFrame
+        As ``Inputs.parcels_in_force``.
+    findings : list of DataFrame
+        What was noted.
+    """
+
+    latest: ParcelTable
+    versions: gpd.GeoDataFrame
+    in_force: pd.DataFrame
+    findings: list[pd.DataFrame]
+
+    def at(self, survey: str) -> gpd.GeoDataFrame:
+        """Return the parcels in force at one survey."""
+        rows = self.in_force.loc[self.in_force["survey"] == survey, "row"].to_numpy()
+        return self.versions.iloc[rows].reset_index(drop=True)
 
 
 def read_parcels(settings: Settings, log: FileLog) -> ParcelTable | None:
@@ -84,8 +119,9 @@ def read_parcels(settings: Settings, log: FileLog) -> ParcelTable | None:
         geometry = geometry[table["row"].to_numpy() - 1].reset_index(drop=True)
     if table.empty:
         raise InputFileError("the file holds no parcel", where=source.name)
-    _check_ids(table, source.name)
-    findings = [*mapped.findings]
+    dated = _check_periods(mapped, source.name)
+    _check_ids(table, source.name, repeated=dated)
+    findings = [*mapped.findings, *left_blank(mapped, "parcels")]
     given = geometry
     geometry, mended = mend_polygons(geometry)
     area = geodesic_area_m2(geometry)
@@ -104,9 +140,54 @@ def read_parcels(settings: Settings, log: FileLog) -> ParcelTable | None:
     table["area_ha"] = table["area_ha"].where(stated, table["measured_ha"])
     findings += _strata(table, "stratum" in mapped.given)
     table["stratum"] = table["stratum"].replace(dict(settings.strata.merge))
+    if dated:
+        check_periods(table)
+        frame = gpd.GeoDataFrame(table[[*_COLUMNS, *_PERIOD, "file", "row"]], geometry=planar, crs=crs)
+        return ParcelTable(frame, crs, bool(stated.any()), findings, dated=True)
     findings += _overlaps(table, planar) + _gaps(planar, source.name)
-    frame = gpd.GeoDataFrame(table[["parcel", "stratum", "land_use", "area_ha"]], geometry=planar, crs=crs)
+    frame = gpd.GeoDataFrame(table[_COLUMNS], geometry=planar, crs=crs)
     return ParcelTable(frame, crs, bool(stated.any()), findings)
+
+
+def settle_boundaries(parcels: ParcelTable, surveys: pd.DataFrame) -> Boundaries:
+    """Find which outlines are in force at each survey, and look these over for overlaps and gaps.
+
+    Parameters
+    ----------
+    parcels : ParcelTable
+        Parcels whose rows say how long they are in force.
+    surveys : DataFrame
+        survey, date; in the order of time.
+
+    Returns
+    -------
+    Boundaries
+
+    Raises
+    ------
+    InputFileError
+        If a survey has no date, or no parcel is in force at it.
+    """
+    frame = parcels.frame
+    in_force = by_survey(frame, surveys)
+    found = gaps_in_time(frame, surveys, in_force)
+    seen: list[list[int]] = []
+    about = []
+    for name, group in in_force.groupby("survey", sort=False):
+        rows = group["row"].to_numpy()
+        if rows.tolist() not in seen:
+            seen.append(rows.tolist())
+            here = frame.iloc[rows].reset_index(drop=True)
+            about += [
+                part.assign(survey=str(name))
+                for part in _overlaps(here, here.geometry) + _gaps(here.geometry, str(here["file"].iloc[0]))
+            ]
+    told = join_findings(about)
+    found.append(told[~told.duplicated(["rule", "value", "message"])].reset_index(drop=True))
+    latest = frame.iloc[in_force.loc[in_force["survey"] == surveys["survey"].iloc[-1], "row"].to_numpy()]
+    kept = latest[[*_COLUMNS, "geometry"]].reset_index(drop=True)
+    versions = frame[[*_COLUMNS, *_PERIOD, "geometry"]]
+    return Boundaries(replace(parcels, frame=kept, dated=False), versions, in_force, found)
 
 
 def _name_single(raw: RawTable) -> None:
@@ -116,17 +197,33 @@ def _name_single(raw: RawTable) -> None:
         raw.columns["parcel"] = pa.array(["1"], pa.string())
 
 
-def _check_ids(table: pd.DataFrame, file: str) -> None:
+def _check_periods(mapped: Mapped, file: str) -> bool:
+    """Tell whether boundaries have dates; one that cannot be read must not pass for an open end."""
+    for column in _PERIOD:
+        if column in mapped.bad:
+            texts = mapped.bad[column]
+            place, text = mapped.frame["row"].iloc[texts.index[0]], texts.iloc[0]
+            raise InputFileError(
+                f"{len(texts)} cells under {mapped.given[column]!r} hold no date in the form expected, "
+                f"the first {text!r} in row {place}",
+                where=file,
+                remedy="Write year-month-day, or give format under [dates]; leave the cell blank for an open end.",
+            )
+    return has_periods(mapped.frame)
+
+
+def _check_ids(table: pd.DataFrame, file: str, *, repeated: bool) -> None:
     blank = table["parcel"] == ""
     if blank.any():
         raise InputFileError(f"{int(blank.sum())} polygons have no parcel id", where=file, remedy="Fill in the ids.")
     twice = table.loc[table["parcel"].duplicated(), "parcel"].unique()
-    if len(twice):
+    if len(twice) and not repeated:
         shown = ", ".join(twice[:5]) + (" ..." if len(twice) > 5 else "")
         raise InputFileError(
             f"{len(twice)} parcel ids stand more than once: {shown}",
             where=file,
-            remedy="Give each polygon its own id, or join the polygons of one parcel into one feature.",
+            remedy="Give each polygon its own id, or join the polygons of one parcel into one feature; an outline that "
+            "was in force for a time only has valid_from and valid_to.",
         )
 
 

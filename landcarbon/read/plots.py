@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -19,11 +20,16 @@ from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, Source, find_source, has_geometry
 
 if TYPE_CHECKING:
-    from landcarbon.read.parcels import ParcelTable
+    import geopandas as gpd
 
-__all__ = ["PlotTable", "read_plots"]
+    from landcarbon.read.parcels import Boundaries, ParcelTable
+
+__all__ = ["PlotTable", "place_by_survey", "place_plots", "read_plots"]
 
 _ALL = "all"
+_COLUMNS = ["plot", "x", "y", "lon", "lat", "parcel", "stratum", "inside"]
+_DESIGN = ("cluster", "weight", "post_stratum")  # columns of the sampling design, handed on where the file has them
+_LISTED = 10
 
 
 @dataclass
@@ -33,7 +39,7 @@ class PlotTable:
     Attributes
     ----------
     frame : DataFrame
-        As ``Inputs.plots``.
+        As ``Inputs.plots``, but for ``inside``; parcel and stratum as the file gives them, until the plots are placed.
     extra : DataFrame
         plot, slope_deg, share_inside, plot_area_ha as far as the plots file gives them (NaN if not).
     crs : CRS or None
@@ -48,15 +54,15 @@ class PlotTable:
     findings: list[pd.DataFrame]
 
 
-def read_plots(settings: Settings, parcels: ParcelTable | None, log: FileLog) -> PlotTable:
-    """Read the plots and place them in parcels and strata.
+def read_plots(settings: Settings, parcels: CRS | None, log: FileLog) -> PlotTable:
+    """Read the plots; :func:`place_plots` puts them into parcels and strata.
 
     Parameters
     ----------
     settings : Settings
         The project file.
-    parcels : ParcelTable or None
-        Parcels, if there are any.
+    parcels : CRS or None
+        Coordinate system of the parcels, if there are any.
     log : FileLog
         Notes what was read.
 
@@ -84,10 +90,94 @@ def read_plots(settings: Settings, parcels: ParcelTable | None, log: FileLog) ->
     target = _target(settings, parcels, table, crs)
     table["x"], table["y"], table["lon"], table["lat"] = _moved(table, crs, target)
     findings += _far_out(table, crs, target)
-    findings += _place(table, parcels, settings)
-    columns = ["plot", "x", "y", "lon", "lat", "parcel", "stratum", "inside"]
     extra = table[["plot", "slope_deg", "share_inside", "plot_area_ha", "file", "row"]].copy()
-    return PlotTable(table[columns], extra, target, findings)
+    design = [name for name in _DESIGN if name in mapped.given]
+    return PlotTable(table[[*_COLUMNS[:-1], *design, "file", "row"]].copy(), extra, target, findings)
+
+
+def place_plots(
+    plots: PlotTable, parcels: ParcelTable | None, settings: Settings
+) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
+    """Fill in parcel, stratum and whether a plot lies inside.
+
+    Parameters
+    ----------
+    plots : PlotTable
+        As read.
+    parcels : ParcelTable or None
+        Parcels, if there are any.
+    settings : Settings
+        The project file.
+
+    Returns
+    -------
+    DataFrame, list of DataFrame
+        ``Inputs.plots`` and findings.
+    """
+    table = plots.frame.copy()
+    findings: list[pd.DataFrame] = []
+    table["inside"] = True
+    if parcels is not None:
+        findings = _into_parcels(table, parcels)
+        _take_stratum(table, parcels.frame)
+    elif (table["stratum"] == "").all():
+        table["stratum"] = pd.Series([_ALL] * len(table), dtype="str")
+    table["stratum"] = table["stratum"].replace(dict(settings.strata.merge))
+    return _tidy(table), findings
+
+
+def _tidy(table: pd.DataFrame) -> pd.DataFrame:
+    return table[[*_COLUMNS, *(name for name in _DESIGN if name in table)]].reset_index(drop=True)
+
+
+def place_by_survey(
+    plots: PlotTable, boundaries: Boundaries, settings: Settings
+) -> tuple[pd.DataFrame, pd.DataFrame, list[pd.DataFrame]]:
+    """Place the plots within the boundaries of each survey.
+
+    The location decides. The parcel the plots table names counts for a plot without coordinates, and for one that lies
+    in no parcel, as far as that parcel is in force.
+
+    Parameters
+    ----------
+    plots : PlotTable
+        As read.
+    boundaries : Boundaries
+        Outlines in force at each survey.
+    settings : Settings
+        The project file.
+
+    Returns
+    -------
+    plots : DataFrame
+        ``Inputs.plots``: where they lie at the latest survey at which they are in the inventory.
+    places : DataFrame
+        ``Inputs.parcel_of``.
+    findings : list of DataFrame
+        What was noted.
+    """
+    surveys = list(dict.fromkeys(boundaries.in_force["survey"]))
+    known = set(boundaries.versions["parcel"])
+    strange = plots.frame[(plots.frame["parcel"] != "") & ~plots.frame["parcel"].isin(known)]
+    findings = [_unknown_parcels(strange, sorted(known)), _without_place(plots.frame, boundaries)]
+    parts = []
+    for survey in surveys:
+        table = plots.frame.copy()
+        parcels = boundaries.at(survey)
+        seen = _seen_in(table, parcels)
+        given = table["parcel"].where(table["parcel"].isin(list(parcels["parcel"])), "")
+        table["parcel"] = seen.where(seen != "", given)
+        table["inside"] = table["parcel"] != ""
+        _take_stratum(table, parcels)
+        table["stratum"] = table["stratum"].replace(dict(settings.strata.merge))
+        parts.append(table.assign(survey=survey, seen=seen))
+    places = pd.concat(parts, ignore_index=True).astype({"survey": "str"})
+    findings += [*_against_boundaries(plots.frame, places, known), *_moving(places, len(surveys))]
+    last = parts[-1]
+    for earlier in reversed(parts[:-1]):
+        last = last.where(last["inside"], earlier)
+    frame = _tidy(last.astype(parts[0].dtypes.to_dict()))
+    return frame, places[["survey", "plot", "parcel", "stratum", "inside"]], findings
 
 
 def _read(source: Source, settings: Settings, log: FileLog) -> tuple[Mapped, CRS | None]:
@@ -156,10 +246,10 @@ def _unique(table: pd.DataFrame, file: str) -> tuple[pd.DataFrame, list[pd.DataF
     return table.reset_index(drop=True), findings
 
 
-def _target(settings: Settings, parcels: ParcelTable | None, table: pd.DataFrame, crs: CRS | None) -> CRS | None:
+def _target(settings: Settings, parcels: CRS | None, table: pd.DataFrame, crs: CRS | None) -> CRS | None:
     """Choose the coordinate system of the results."""
     if parcels is not None:
-        return parcels.crs
+        return parcels
     if settings.inventory.crs:
         return metric_crs(settings.inventory.crs)
     if crs is None or not (table["x"].notna() & table["y"].notna()).any():
@@ -202,38 +292,68 @@ def _far_out(table: pd.DataFrame, crs: CRS | None, target: CRS | None) -> list[p
     return [note("implausible location", rows, value=value, fill=words)]
 
 
-def _place(table: pd.DataFrame, parcels: ParcelTable | None, settings: Settings) -> list[pd.DataFrame]:
-    """Fill in parcel, stratum and whether the plot lies inside."""
-    findings: list[pd.DataFrame] = []
-    table["inside"] = True
-    if parcels is not None:
-        findings = _into_parcels(table, parcels)
-        of_parcel = dict(zip(parcels.frame["parcel"], parcels.frame["stratum"], strict=True))
-        taken = table["parcel"].map(of_parcel).fillna("").astype("str")
-        table["stratum"] = table["stratum"].where(table["stratum"] != "", taken)
-    elif (table["stratum"] == "").all():
-        table["stratum"] = pd.Series([_ALL] * len(table), dtype="str")
-    table["stratum"] = table["stratum"].replace(dict(settings.strata.merge))
-    return findings
+def _take_stratum(table: pd.DataFrame, parcels: pd.DataFrame) -> None:
+    """Give plots without a stratum that of their parcel."""
+    of_parcel = dict(zip(parcels["parcel"], parcels["stratum"], strict=True))
+    taken = table["parcel"].map(of_parcel).fillna("").astype("str")
+    table["stratum"] = table["stratum"].where(table["stratum"] != "", taken)
+
+
+def _seen_in(table: pd.DataFrame, parcels: gpd.GeoDataFrame) -> pd.Series:
+    """Return the parcel each plot lies in, blank for none."""
+    from landcarbon.read.parcels import locate
+
+    names = parcels["parcel"].to_numpy(dtype=object)
+    found = locate(parcels, table["x"].to_numpy(), table["y"].to_numpy())
+    return pd.Series(np.append(names, "")[found], index=table.index, dtype="str")
+
+
+def _unknown_parcels(strange: pd.DataFrame, names: Sequence[str]) -> pd.DataFrame:
+    hints = [" " + suggestion(name, names) for name in strange["parcel"]]
+    return note("unknown parcel", strange, fill=pd.DataFrame({"hint": pd.Series(hints, dtype="str").str.rstrip()}))
 
 
 def _into_parcels(table: pd.DataFrame, parcels: ParcelTable) -> list[pd.DataFrame]:
     """Take the parcel given where it is known, else that of the location."""
-    from landcarbon.read.parcels import locate
-
-    names = parcels.frame["parcel"].to_numpy(dtype=object)
-    found = locate(parcels.frame, table["x"].to_numpy(), table["y"].to_numpy())
-    seen = pd.Series(np.append(names, "")[found], index=table.index, dtype="str")
+    names = list(parcels.frame["parcel"])
+    seen = _seen_in(table, parcels.frame)
     given = table["parcel"] != ""
-    known = given & table["parcel"].isin(list(names))
-    strange = table[given & ~known]
-    hints = [" " + suggestion(name, names) for name in strange["parcel"]]
+    known = given & table["parcel"].isin(names)
     apart = table[known & (seen != table["parcel"]) & table["x"].notna() & table["y"].notna()]
     where = [f"lies in {place}" if place else "lies in no parcel" for place in seen[apart.index]]
     findings = [
-        note("unknown parcel", strange, fill=pd.DataFrame({"hint": pd.Series(hints, dtype="str").str.rstrip()})),
+        _unknown_parcels(table[given & ~known], names),
         note("parcel against location", apart, fill=pd.DataFrame({"parcel": list(apart["parcel"]), "where": where})),
     ]
     table["parcel"] = table["parcel"].where(known, seen)
     table["inside"] = table["parcel"] != ""
     return findings
+
+
+def _without_place(plots: pd.DataFrame, boundaries: Boundaries) -> pd.DataFrame:
+    """Tell plots that only a name puts into a parcel whose outline changes: nobody knows on which side they lie."""
+    rows = boundaries.in_force.drop_duplicates(["parcel", "row"])["parcel"].value_counts()
+    nowhere = plots["x"].isna() | plots["y"].isna()
+    return note("changing parcel without location", plots[nowhere & plots["parcel"].isin(list(rows.index[rows > 1]))])
+
+
+def _against_boundaries(plots: pd.DataFrame, places: pd.DataFrame, known: set[str]) -> list[pd.DataFrame]:
+    """Tell plots that lie at no survey in the parcel the plots table names, though they have a location."""
+    agrees = (places["seen"] == places["plot"].map(plots.set_index("plot")["parcel"])).groupby(places["plot"]).any()
+    located = plots["x"].notna() & plots["y"].notna() & plots["parcel"].isin(list(known))
+    apart = plots[located & ~plots["plot"].map(agrees).astype(bool)]
+    where = places.groupby("plot", sort=False)["seen"].agg(lambda seen: ", ".join(dict.fromkeys(seen[seen != ""])))
+    told = [f"lies in {names}" if names else "lies in no parcel" for names in apart["plot"].map(where)]
+    return [
+        note("parcel against boundaries", apart, fill=pd.DataFrame({"parcel": list(apart["parcel"]), "where": told}))
+    ]
+
+
+def _moving(places: pd.DataFrame, surveys: int) -> list[pd.DataFrame]:
+    """Tell how many plots are in another parcel or stratum, or in or out, from one survey to another."""
+    distinct = places.drop_duplicates(["plot", "parcel", "stratum", "inside"])["plot"].value_counts(sort=False)
+    names = list(distinct.index[distinct > 1])
+    if not names:
+        return []
+    shown = ", ".join(names[:_LISTED]) + (" ..." if len(names) > _LISTED else "")
+    return [note("plots in changing parcels", value=shown, fill={"count": len(names), "surveys": surveys})]

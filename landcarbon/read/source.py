@@ -144,13 +144,14 @@ class FileLog:
         """Note a file with the number of its rows, the columns used and those left aside."""
         for path in _members(source.path):
             name = source.file if path == source.path else str(Path(source.file).with_name(path.name))
-            data = path.read_bytes()
+            with path.open("rb") as opened:  # piece by piece: a raster may be larger than memory
+                digest = hashlib.file_digest(opened, "sha256").hexdigest()
             self.rows.append(
                 {
                     "file": name,
                     "sheet": source.part,
-                    "sha256": hashlib.sha256(data).hexdigest(),
-                    "bytes": len(data),
+                    "sha256": digest,
+                    "bytes": path.stat().st_size,
                     "rows": rows if path == source.path else 0,
                     "role": source.role,
                     "columns": columns,

@@ -15,7 +15,10 @@ from landcarbon.inventory.models import Settings
 
 Moment = pd.Timestamp | NaTType
 
+MIDDLE_OF_YEAR = (7, 1)  # month and day that stand for a year
+
 __all__ = [
+    "MIDDLE_OF_YEAR",
     "Assigned",
     "assign_surveys",
     "day_text",
@@ -223,4 +226,4 @@ def _moment(name: str, since: Moment, until: Moment, median: Moment | None) -> M
     if median is not None and not pd.isna(median):
         return median
     year = label_year(name)
-    return pd.Timestamp(year, 7, 1) if year else pd.NaT
+    return pd.Timestamp(year, *MIDDLE_OF_YEAR) if year else pd.NaT

@@ -37,6 +37,8 @@ STATUS_DEFAULTS = {
     "0": "absent",
 }
 
+_CODES_NAMED = 12  # in one message
+
 _COLUMNS = [
     "row_id", "file", "row", "survey", "plot", "subplot", "tree", "stem", "species", "status", "dbh_cm", "height_m",
     "expansion_per_ha", "weight", "decay_class", "break_height_m", "top_cm", "date", "used",
@@ -88,9 +90,25 @@ def read_trees(settings: Settings, log: FileLog) -> TreeRows:
         findings += [*mapped.findings, *reader.findings]
         codes.append(reader.codes)
         start += len(mapped.frame)
-    if not settings.status:
-        findings += _understood(codes)
-    return TreeRows(stack_frames(parts), findings)
+    findings += [] if settings.status else _understood(codes)
+    findings += _unmapped(codes)
+    return TreeRows(stack_frames(parts) if parts else _no_rows(settings), findings)
+
+
+def _no_rows(settings: Settings) -> pd.DataFrame:
+    """Return the canonical table without a row, for an inventory of samples alone."""
+    text = pd.Categorical([], categories=pd.Index([], dtype="str"))
+    kinds: dict[str, object] = {
+        **{name: text for name in ("file", "plot", "subplot", "species", "decay_class")},
+        "survey": pd.Categorical([], categories=pd.Index(list(settings.surveys), dtype="str")),
+        "status": _status_category(np.empty(0, dtype="int8")),
+        **{name: pd.Series(dtype="str") for name in ("tree", "stem")},
+        "row_id": np.empty(0, dtype="int64"),
+        "row": np.empty(0, dtype="int32"),
+        "date": np.empty(0, dtype="datetime64[s]"),
+        "used": np.empty(0, dtype=bool),
+    }
+    return pd.DataFrame({name: kinds.get(name, np.empty(0, dtype="float64")) for name in _COLUMNS})
 
 
 class _FileRows:
@@ -186,7 +204,7 @@ class _FileRows:
         levels = list(codes.cat.categories)
         names = [_status_name(level, dict(self.settings.status)) for level in levels]
         counts = np.bincount(codes.cat.codes.to_numpy(), minlength=len(levels))
-        self.codes = {level: (name, int(n)) for level, name, n in zip(levels, names, counts, strict=True) if name}
+        self.codes = {level: (name, int(n)) for level, name, n in zip(levels, names, counts, strict=True) if n}
         known = np.array([STATUS_NAMES.index(name) if name else -1 for name in names] + [-1], dtype="int8")
         places = known[codes.cat.codes.to_numpy()]
         unknown = places < 0
@@ -232,10 +250,7 @@ def _status_name(code: str, given: dict[str, str]) -> str:
 
 def _understood(codes: Sequence[dict[str, tuple[str, int]]]) -> list[pd.DataFrame]:
     """Tell which status codes were taken for what without a word of the user's."""
-    rows: dict[tuple[str, str], int] = {}
-    for of_file in codes:
-        for code, (name, count) in of_file.items():
-            rows[name, code] = rows.get((name, code), 0) + count
+    rows = {key: count for key, count in _counted(codes).items() if key[0]}
     if not rows:
         return []
     told = []
@@ -243,6 +258,26 @@ def _understood(codes: Sequence[dict[str, tuple[str, int]]]) -> list[pd.DataFram
         mine = [f"{code!r} ({count:,} rows)" for (meaning, code), count in sorted(rows.items()) if meaning == name]
         told += [f"{', '.join(mine)} as {name}"] if mine else []
     return [note("status codes understood", value=", ".join(code for _, code in rows), fill={"codes": "; ".join(told)})]
+
+
+def _unmapped(codes: Sequence[dict[str, tuple[str, int]]]) -> list[pd.DataFrame]:
+    """Name the status codes that mean nothing, once for all rows that have them."""
+    rows = {code: count for (name, code), count in sorted(_counted(codes).items()) if not name}
+    if not rows:
+        return []
+    most = sorted(rows, key=lambda code: -rows[code])[:_CODES_NAMED]
+    told = ", ".join(f"{repr(code) if code else 'blank'} ({rows[code]:,} rows)" for code in most)
+    told += f" and {len(rows) - len(most)} more" if len(rows) > len(most) else ""
+    return [note("status not mapped", value=", ".join(most), fill={"count": f"{sum(rows.values()):,}", "codes": told})]
+
+
+def _counted(codes: Sequence[dict[str, tuple[str, int]]]) -> dict[tuple[str, str], int]:
+    """Add up the rows of each code, by its meaning (blank: none) and the code, over all files."""
+    rows: dict[tuple[str, str], int] = {}
+    for of_file in codes:
+        for code, (name, count) in of_file.items():
+            rows[name, code] = rows.get((name, code), 0) + count
+    return rows
 
 
 def _status_category(places: np.ndarray) -> pd.Categorical:

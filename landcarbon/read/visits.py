@@ -2,24 +2,25 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 
 from landcarbon.errors import InputFileError
+from landcarbon.inventory.measured import surveys_with_trees
 from landcarbon.inventory.models import Settings
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.read.mapping import Mapped, left_blank, not_readable, read_mapped
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
-from landcarbon.read.surveys import files_of, label_year, survey_by_date, survey_by_label
+from landcarbon.read.surveys import MIDDLE_OF_YEAR, files_of, label_year, survey_by_date, survey_by_label
 
-__all__ = ["VisitRows", "make_visits", "read_visits"]
+__all__ = ["VisitRows", "field_rows", "make_visits", "read_visits"]
 
 _LEVEL = 0.0
 _WHOLE = 1.0
-_MIDDLE_OF_YEAR = (7, 1)
 
 
 @dataclass
@@ -120,6 +121,35 @@ def _labels_fit(labels: pd.Series, settings: Settings) -> bool:
     return any(survey_by_label(labels.unique(), list(settings.surveys)).values())
 
 
+def field_rows(settings: Settings, trees: pd.DataFrame, samples: Mapping[str, pd.DataFrame]) -> pd.DataFrame:
+    """Return the rows that show that a crew was on a plot: trees, or samples at surveys without a tree table.
+
+    Parameters
+    ----------
+    settings : Settings
+        The project file.
+    trees : DataFrame
+        ``Inputs.trees``.
+    samples : mapping of DataFrame
+        ``Inputs.samples``.
+
+    Returns
+    -------
+    DataFrame
+        survey, plot, subplot (blank for samples: theirs are no parts of the tree plot), date, sample.
+    """
+    tallied = surveys_with_trees(settings)
+    parts = [trees[["survey", "plot", "subplot", "date"]].assign(sample=False)]
+    for table in samples.values():
+        alone = table.loc[~table["survey"].isin(list(tallied)), ["survey", "plot", "date"]]
+        if len(alone):
+            parts.append(alone.assign(subplot="", sample=True))
+    if len(parts) == 1:
+        return parts[0]
+    rows = pd.concat([part.astype({name: "str" for name in ("survey", "plot", "subplot")}) for part in parts])
+    return rows[rows["survey"] != ""].reset_index(drop=True)
+
+
 def make_visits(
     settings: Settings,
     surveys: pd.DataFrame,
@@ -141,7 +171,7 @@ def make_visits(
     extra : DataFrame
         Slope, share and area from the plots file.
     trees : DataFrame
-        Tree rows.
+        From :func:`field_rows`.
     rows : VisitRows
         Rows of the visits files.
 
@@ -193,15 +223,15 @@ def _stated(rows: pd.DataFrame, plots: list[str]) -> tuple[pd.DataFrame, list[pd
 
 
 def _seen(trees: pd.DataFrame) -> pd.DataFrame:
-    """Return for every survey and plot with tree rows their number, median date and number of subplots."""
-    rows = trees[["survey", "plot", "date", "subplot"]]
-    rows = rows[rows["survey"].notna()]
+    """Return for every survey and plot with rows of trees, or samples alone, their number, median date, subplots."""
+    rows = trees[trees["survey"].notna()]
     grouped = rows.groupby(["survey", "plot"], observed=True, sort=True)
     seen = pd.DataFrame(
         {
             "tree_rows": grouped.size(),
             "tree_date": grouped["date"].median(),
             "tree_subplots": grouped["subplot"].nunique(),
+            "of_samples": grouped["sample"].any(),
         }
     ).reset_index()
     return seen.astype({"survey": "str", "plot": "str"})
@@ -211,6 +241,7 @@ def _visited(frame: pd.DataFrame, settings: Settings, with_file: set[str]) -> li
     """Settle which visits took place: the visits file decides; without a row there, tree rows are the evidence."""
     has_rows = frame["tree_rows"].notna()
     listed = frame["row"].notna()
+    tallied = surveys_with_trees(settings)
     zero = {name for name, survey in settings.surveys.items() if survey.plots_without_rows == "zero"}
     doubtful = listed & (frame["doubt"] == True) & ~has_rows  # noqa: E712  (blank where there is no row)
     frame["visited"] = (listed & (frame["said"] != 0)) | (~listed & (has_rows | frame["survey"].isin(list(zero))))
@@ -222,7 +253,8 @@ def _visited(frame: pd.DataFrame, settings: Settings, with_file: set[str]) -> li
     ]
     for survey, group in frame[~has_rows & ~listed].groupby("survey", sort=False):
         meaning = "visited and empty, so they count as zero" if survey in zero else "missing there"
-        words = {"count": len(group), "survey": survey, "meaning": meaning}
+        kind = "a tree row" if survey in tallied else "a row of samples"
+        words = {"count": len(group), "survey": survey, "meaning": meaning, "row": kind}
         findings.append(note("plots without rows", survey=str(survey), value=str(len(group)), fill=words))
     return findings
 
@@ -232,11 +264,12 @@ def _dates(frame: pd.DataFrame, surveys: pd.DataFrame) -> list[pd.DataFrame]:
     windows = surveys.set_index("survey")
     middle = windows["since"] + (windows["until"] - windows["since"]) / 2
     years = {name: label_year(name) for name in surveys["survey"]}
-    labels = {n: pd.Timestamp(y, *_MIDDLE_OF_YEAR) if y else pd.NaT for n, y in years.items()}
+    labels = {n: pd.Timestamp(y, *MIDDLE_OF_YEAR) if y else pd.NaT for n, y in years.items()}
     frame["date"] = pd.to_datetime(frame["date"]).astype("datetime64[s]")
     frame["date_source"] = np.where(frame["date"].notna(), "visit", "")
     for source, values in (
-        ("trees", frame["tree_date"]),
+        ("trees", frame["tree_date"].mask(frame["of_samples"] == True)),  # noqa: E712  (blank where there is no row)
+        ("samples", frame["tree_date"]),
         ("window", frame["survey"].map(middle)),
         ("label", frame["survey"].map(labels)),
     ):

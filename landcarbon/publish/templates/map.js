@@ -65,6 +65,11 @@ function drawCarbonMap(place, data) {
     const found = layer.kind === "change" ? row(layer, i) : null;
     return Boolean(found && known(found[C.low]) && found[C.low] <= 0 && found[C.high] >= 0);
   }
+  // A parcel without plots of its own has the level of its stratum: to be told from the others at a glance.
+  function fromModel(layer, i) {
+    const found = row(layer, i);
+    return Boolean(found) && data.methods[found[layer.kind === "density" ? D.method : C.method]].startsWith("synthetic");
+  }
   function colour(layer, value) {
     const last = layer.colours.length - 1;
     let at = 0;
@@ -115,8 +120,8 @@ function drawCarbonMap(place, data) {
   let shown = pool.layers[0];
 
   function parcelStyle(feature) {
-    const i = feature.properties.i, value = shade(shown, i), open = spansZero(shown, i);
-    return {fill: true, fillOpacity: data.tiles ? 0.8 : 1, fillColor: known(value) ? colour(shown, value) : HATCH,
+    const i = feature.properties.i, value = shade(shown, i), open = spansZero(shown, i), model = fromModel(shown, i);
+    return {fill: true, fillOpacity: (data.tiles ? 0.8 : 1) * (model ? 0.55 : 1), fillColor: known(value) ? colour(shown, value) : HATCH,
       color: "#2b332f", weight: open ? 2 : 1, dashArray: open ? "5 4" : null, opacity: 0.9};
   }
   const parcels = L.geoJSON(data.shapes, {
@@ -243,6 +248,7 @@ function drawCarbonMap(place, data) {
   function parcelKeys() {
     const all = data.parcels.map((_, i) => i), keys = [];
     if (all.some((i) => spansZero(shown, i))) keys.push(key(swatch({fill: "none", "stroke-dasharray": "4 3", "stroke-width": 2}), data.interval + " includes zero"));
+    if (all.some((i) => fromModel(shown, i))) keys.push(key(swatch({fill: shown.colours[Math.floor(shown.colours.length / 2)], "fill-opacity": 0.55}), "paler: no plots, level of the stratum"));
     if (all.some((i) => !known(shade(shown, i)))) keys.push(key(swatch({fill: HATCH}), "not estimable"));
     return keys;
   }

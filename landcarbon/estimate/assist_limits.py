@@ -1,0 +1,37 @@
+"""Limits that decide whether rasters serve an estimate, read once from ``assist.toml`` where each has its source."""
+
+from __future__ import annotations
+
+import tomllib
+from dataclasses import dataclass
+from functools import cache
+from importlib import resources
+
+__all__ = ["AssistLimits", "assist_limits"]
+
+
+@dataclass(frozen=True)
+class AssistLimits:
+    """Limits.
+
+    Attributes
+    ----------
+    relative_efficiency : float
+        Least variance of the plain estimate over that of the assisted one.
+    plots_per_slope : float
+        Plots beyond one per stratum, for each raster.
+    missing_share : float
+        Largest share of a stratum without raster value.
+    """
+
+    relative_efficiency: float
+    plots_per_slope: float
+    missing_share: float
+
+
+@cache
+def assist_limits() -> AssistLimits:
+    """Limits of ``assist.toml``."""
+    path = resources.files("landcarbon.estimate").joinpath("assist.toml")
+    given = tomllib.loads(path.read_text(encoding="utf-8"))
+    return AssistLimits(**{name: float(table["value"]) for name, table in given.items()})
