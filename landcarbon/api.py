@@ -115,6 +115,10 @@ class Inventory:
         for survey in (since, until):
             if str(survey) not in self.surveys:
                 raise UserError(f"no survey {survey!r}", remedy=f"Surveys are: {', '.join(self.surveys)}")
+        if self.surveys.index(str(since)) >= self.surveys.index(str(until)):
+            raise UserError(
+                f"survey {since} is not before {until}", remedy="Name the earlier survey first, then the later one."
+            )
         table = self.results.change
         rows = table[(table["since"] == str(since)) & (table["until"] == str(until))]
         if rows.empty:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -22,9 +23,12 @@ from landcarbon.pipeline import (
 )
 from landcarbon.pools.parts import RowShares
 from landcarbon.publish.results import RasterRequest, Results
-from landcarbon.read.raster_files import find_raster
+from landcarbon.raster.coefficients import INTERCEPT
+from landcarbon.read.raster_files import RasterFile, find_raster
 from landcarbon.read.source import FileLog
-from landcarbon.reckon import Plan, reckon
+from landcarbon.reckon import reckon
+from landcarbon.reckon_notes import reckoning_marks
+from landcarbon.reckon_plan import Plan
 from landcarbon.statements import measured_columns
 
 if TYPE_CHECKING:
@@ -73,7 +77,9 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
         change=figures.change,
         findings=all_findings,
         trees=inputs.trees,
-        plots=long_plots(stage, settings),
+        plots=long_plots(
+            replace(stage, plot_parts=plan.plot_parts), settings, None if plan.assisted is None else plan.used_parts
+        ),
         parcels=inputs.parcels,
         plot_points=inputs.plots[["plot", "parcel", "stratum", "lon", "lat", "inside"]],
         surveys=inputs.surveys,
@@ -84,7 +90,10 @@ def assemble(stage: PlotStage, settings: Settings) -> Results:
         further=figures.further,
         rasters=raster_request(plan),
         samples=_samples(inputs.samples, all_findings, stage.shares),
-        marks=_marks(stage, settings, stocks, all_findings, counts),
+        marks=[
+            *_marks(stage, settings, stocks, all_findings, counts),
+            *reckoning_marks(plan.dates, moving=plan.moving, composite=plan.composite),
+        ],
     )
 
 
@@ -95,12 +104,30 @@ def raster_request(plan: Plan) -> RasterRequest | None:
     if parcels is None or (cell_m is None and auxiliary is None):
         return None
     if auxiliary is None or assisted is None:
-        return RasterRequest(plan.settings.inventory.name, parcels, plan.place, cell_m=cell_m)
+        return _checked(RasterRequest(plan.settings.inventory.name, parcels, plan.place, cell_m=cell_m))
     lines = assisted.models[assisted.models["of"] == "all"]
-    coefficients = lines.rename(columns={"coefficient": "value"})[["survey", "stratum", "term", "value"]]
-    return RasterRequest(
-        plan.settings.inventory.name, parcels, plan.place, auxiliary.files, coefficients, cell_m=cell_m
+    coefficients = _mapped(lines, auxiliary.files).rename(columns={"coefficient": "value"})
+    return _checked(
+        RasterRequest(plan.settings.inventory.name, parcels, plan.place, auxiliary.files, coefficients, cell_m=cell_m)
     )
+
+
+def _checked(request: RasterRequest) -> RasterRequest:
+    """Refuse cells that are too small before the long work begins."""
+    from landcarbon.publish.rasters import raster_grid
+
+    raster_grid(request)
+    return request
+
+
+def _mapped(lines: pd.DataFrame, files: Sequence[RasterFile]) -> pd.DataFrame:
+    """Put the mean effect of classes of known area into the intercept: no map says in which cells they lie."""
+    mapped = {INTERCEPT, *(file.name for file in files), *(f"{file.name} {file.survey}" for file in files)}
+    classes = ~lines["term"].isin(mapped)
+    effect = lines["coefficient"].where(classes, 0.0) * lines["centre"].fillna(0.0)
+    total = effect.groupby([lines["survey"], lines["stratum"]]).transform("sum")
+    shifted = lines["coefficient"] + total.where(lines["term"] == INTERCEPT, 0.0)
+    return lines.assign(coefficient=shifted).loc[~classes, ["survey", "stratum", "term", "coefficient"]]
 
 
 def _files_read(stage: PlotStage, plan: Plan) -> list[dict[str, Any]]:
@@ -145,10 +172,11 @@ def refuse_nothing(results: Results) -> None:
     )
 
 
-def long_plots(stage: PlotStage, settings: Settings) -> pd.DataFrame:
+def long_plots(stage: PlotStage, settings: Settings, adjusted: pd.DataFrame | None = None) -> pd.DataFrame:
     """Give one row per survey, plot, pool and part; a pool as a whole, and ``all``, have a blank part.
 
     A pool stands for a plot only where all its parts were measured there that were measured at the survey at all.
+    ``adjusted`` holds the values that the estimates take where rasters assist; they have a column of their own.
     """
     table, sums = stage.plot_parts, stage.sums
     columns = sums["all"]
@@ -160,15 +188,18 @@ def long_plots(stage: PlotStage, settings: Settings) -> pd.DataFrame:
     blocks = []
     for pool, parts in sums.items():
         lacking = (table[parts].isna() & asked[parts]).any(axis=1) | ~asked[parts].any(axis=1)
-        total = table[parts].sum(axis=1).mask(lacking)
-        blocks.append(table[keys].assign(pool=pool, part="", density_t_c_ha=total))
+        sums_of = {"density_t_c_ha": table, **({} if adjusted is None else {"adjusted_t_c_ha": adjusted})}
+        totals = {name: values[parts].sum(axis=1).mask(lacking) for name, values in sums_of.items()}
+        blocks.append(table[keys].assign(pool=pool, part="", **totals))
         if pool != "all":
             blocks += [
-                table[keys].assign(pool=pool, part=column.split(".", 1)[1], density_t_c_ha=table[column])
+                table[keys].assign(
+                    pool=pool, part=column.split(".", 1)[1], **{name: v[column] for name, v in sums_of.items()}
+                )
                 for column in parts
             ]
     rows = pd.concat(blocks, ignore_index=True)
-    first = ["survey", "plot", "pool", "part", "density_t_c_ha"]
+    first = ["survey", "plot", "pool", "part", "density_t_c_ha", *(["adjusted_t_c_ha"] if adjusted is not None else [])]
     rows = rows[first + [name for name in keys if name not in first]]
     told = stage.sample_parts[["survey", "plot", "pool", "part", "mass_t_ha", "samples", "method", "known"]]
     rows = rows.merge(told, on=["survey", "plot", "pool", "part"], how="left")

@@ -10,8 +10,15 @@ import pandas as pd
 
 from landcarbon.constants import CARBON_TO_CO2, DAYS_PER_YEAR
 from landcarbon.errors import UserError
-from landcarbon.estimate.change_levels import ChangeLevel, designed, with_best, with_own_dates, without_noise
-from landcarbon.estimate.change_notes import DIFFERENCE, change_methods, missing_dates, single_pairs
+from landcarbon.estimate.change_levels import (
+    ChangeLevel,
+    designed,
+    with_best,
+    with_moved_plots,
+    with_own_dates,
+    without_noise,
+)
+from landcarbon.estimate.change_notes import DIFFERENCE, change_methods, missing_dates, moved_plots, single_pairs
 from landcarbon.estimate.clusters import unit_counts
 from landcarbon.estimate.combine import Plan, SumEstimate, plan_sums
 from landcarbon.estimate.difference import Difference, difference_of_ratios
@@ -134,11 +141,15 @@ def estimate_change(  # noqa: PLR0913  (the survey's tables, two surveys, and ho
         levels = [
             with_own_dates(level, samples, plots.units, allowed, columns=chosen is None, near=near) for level in levels
         ]
+    levels = [with_moved_plots(level, samples, plots.units, allowed) for level in levels]
     if change == _WAYS[1]:
         levels, more = with_best(levels, samples, plots.units, allowed, surveys)
         found = [*found, more]
     levels = designed([without_noise(level, samples) for level in levels], plots.units)
-    found += _findings(levels, plots.units, names, *surveys)
+    found += [
+        *_findings(levels, plots.units, names, *surveys),
+        moved_plots(samples, _plot_names(plots, surveys[1]), surveys),
+    ]
     rows = [_rows(level, surveys, names, confidence) for level in levels if level.labels]
     table = pd.concat(rows, ignore_index=True)[CHANGE_COLUMNS] if rows else pd.DataFrame(columns=CHANGE_COLUMNS)
     return table, join_findings(found)
@@ -233,6 +244,11 @@ def _domains(by: str, samples: tuple[Sample, Sample]) -> tuple[np.ndarray, np.nd
     if by == "stratum":
         return samples[0].stratum, samples[1].stratum
     return samples[0].parcel, samples[1].parcel
+
+
+def _plot_names(plots: Plots, survey: str) -> pd.Series:
+    """Names of the plots of a survey, in the order of its sample."""
+    return plots.frame["plot"][(plots.survey == survey) & plots.taken()]
 
 
 def _check_surveys(plots: Plots, since: str, until: str) -> None:

@@ -17,6 +17,7 @@ from allometry.heights import impute, published_height
 from allometry.roots import default_model, level
 from landcarbon.check.equations import memory_findings, range_findings, species_findings
 from landcarbon.check.run import run_checks
+from landcarbon.check.seasons import season_findings
 from landcarbon.check.stand import stand_findings
 from landcarbon.columns import with_columns
 from landcarbon.errors import UserError
@@ -37,7 +38,8 @@ from landcarbon.pools.trees import (
 )
 from landcarbon.read.auxiliary import read_auxiliary, read_post_strata
 from landcarbon.read.load import load_inputs
-from landcarbon.reckon import Figures, Plan, make_plan, reckon
+from landcarbon.reckon import Figures, reckon
+from landcarbon.reckon_plan import Plan, make_plan
 from landcarbon.sample_pools import join_parts, keep_declared, pool_sums, sample_parts
 
 if TYPE_CHECKING:
@@ -167,6 +169,7 @@ def measure_trees(inputs: Inputs, settings: Settings) -> PlotStage:
             memory_findings(assignments, trees),
             range_findings(trees),
             stand_findings(trees, inputs.visits, inputs.surveys, inputs.plots),
+            season_findings(inputs.visits, inputs.surveys),
             biomass_findings,
             dead_findings,
             plot_findings,

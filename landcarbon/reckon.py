@@ -5,21 +5,19 @@ This module only decides which estimator takes which table; the arithmetic lies 
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 from itertools import pairwise
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
+import numpy as np
 import pandas as pd
 
-from landcarbon.errors import LandcarbonError
 from landcarbon.estimate.area_effect import area_effect
-from landcarbon.estimate.assist import Assisted, assist
 from landcarbon.estimate.common_area import (
     CommonArea,
     change_on_common_area,
     common_area,
-    place_by_survey,
     stocks_by_survey,
     tables_at,
 )
@@ -27,110 +25,13 @@ from landcarbon.estimate.composite import REPLACED_RULES, Detail, composite_chan
 from landcarbon.estimate.offsets import add_change_offsets, add_offsets
 from landcarbon.estimate.report import with_interval
 from landcarbon.estimate.trend import estimate_trend
-from landcarbon.estimate.visit_times import common_dates, to_common_date
-from landcarbon.findings import empty_findings, join_findings, make_findings
+from landcarbon.findings import empty_findings, join_findings
 from landcarbon.publish.results import CHANGE_COLUMNS
-from landcarbon.read.rasters import RasterPlace
+from landcarbon.reckon_notes import many_replaced, units_without_change
+from landcarbon.reckon_plan import Plan
 from landcarbon.statements import state_change, state_stocks
 
-if TYPE_CHECKING:
-    import geopandas as gpd
-
-    from landcarbon.inputs import Inputs
-    from landcarbon.inventory import Settings
-    from landcarbon.read.auxiliary import Auxiliary, PostClasses
-
-__all__ = ["Figures", "Plan", "make_plan", "reckon", "reckon_change", "survey_pairs"]
-
-
-@dataclass(frozen=True)
-class Boundaries:
-    """Outlines of the parcels, which was in force when, and where the plots lay; as in ``Inputs``."""
-
-    versions: gpd.GeoDataFrame
-    in_force: pd.DataFrame
-    parcel_of: pd.DataFrame
-
-
-@dataclass(frozen=True)
-class Plan:
-    """What the figures are reckoned from.
-
-    Attributes
-    ----------
-    inputs : Inputs
-        Checked tables.
-    settings : Settings
-        The project file.
-    plot_parts : DataFrame
-        One row per plot and survey with a column per part, as measured; places by survey where boundaries change.
-    sums : mapping
-        Columns of each pool, and ``all``.
-    assisted : Assisted or None
-        Plot values adjusted by rasters or classes.
-    auxiliary : Auxiliary or None
-        The rasters.
-    findings : DataFrame
-        What preparing found.
-    """
-
-    inputs: Inputs
-    settings: Settings
-    plot_parts: pd.DataFrame
-    sums: Mapping[str, Sequence[str]]
-    assisted: Assisted | None
-    auxiliary: Auxiliary | None
-    findings: pd.DataFrame
-
-    @property
-    def surveys(self) -> list[str]:
-        """Names of the surveys, in the order of time."""
-        return [str(name) for name in self.inputs.surveys["survey"]]
-
-    @property
-    def moving(self) -> bool:
-        """Whether boundaries change between the surveys."""
-        return self.inputs.parcel_versions is not None
-
-    @property
-    def boundaries(self) -> Boundaries:
-        """Outlines of the parcels through time; only where boundaries change."""
-        inputs = self.inputs
-        if inputs.parcel_versions is None or inputs.parcels_in_force is None or inputs.parcel_of is None:
-            raise LandcarbonError("boundaries asked for that do not change")
-        return Boundaries(inputs.parcel_versions, inputs.parcels_in_force, inputs.parcel_of)
-
-    @property
-    def used_parts(self) -> pd.DataFrame:
-        """Plot values the estimators take: adjusted ones where rasters assist."""
-        return self.plot_parts if self.assisted is None else self.assisted.plot_parts
-
-    @property
-    def parcels(self) -> pd.DataFrame | None:
-        """Parcels without their outlines."""
-        found = self.inputs.parcels
-        return None if found is None else pd.DataFrame(found.drop(columns="geometry"))
-
-    @property
-    def confidence(self) -> float:
-        """Confidence of the intervals."""
-        return self.settings.inventory.confidence
-
-    @property
-    def place(self) -> RasterPlace:
-        """Where rasters lie, and the coordinate system of the results."""
-        settings = self.settings
-        return RasterPlace(settings.folder, self.inputs.crs, settings.inventory.allow_outside)
-
-    def options(self, strata: pd.DataFrame, parcels: pd.DataFrame | None) -> dict[str, Any]:
-        """Arguments of the estimators."""
-        return {
-            "strata": strata,
-            "parcels": parcels,
-            "confidence": self.confidence,
-            "inventory_name": self.settings.inventory.name,
-            "variance": self.settings.estimation.variance,
-        }
+__all__ = ["Figures", "reckon", "reckon_change", "survey_pairs"]
 
 
 @dataclass(frozen=True)
@@ -159,74 +60,6 @@ def survey_pairs(surveys: Sequence[str]) -> list[tuple[str, str]]:
     return pairs
 
 
-def make_plan(
-    inputs: Inputs,
-    settings: Settings,
-    plot_parts: pd.DataFrame,
-    sums: Mapping[str, Sequence[str]],
-    auxiliary: Auxiliary | None = None,
-    classes: PostClasses | None = None,
-) -> Plan:
-    """Prepare the plot values: places by survey, common dates, rasters and classes.
-
-    Parameters
-    ----------
-    inputs, settings, plot_parts, sums
-        As in :class:`Plan`.
-    auxiliary : Auxiliary, optional
-        Rasters.
-    classes : PostClasses, optional
-        Classes of known area.
-    """
-    found = [] if auxiliary is None else [auxiliary.findings]
-    surveys = [str(name) for name in inputs.surveys["survey"]]
-    if inputs.parcel_of is not None:
-        plot_parts = place_by_survey(plot_parts, inputs.parcel_of)
-    if settings.estimation.dates == "common":
-        plot_parts, moved = to_common_date(plot_parts, common_dates(plot_parts, surveys))
-        found.append(moved)
-    plan = Plan(inputs, settings, plot_parts, sums, None, auxiliary, empty_findings())
-    if auxiliary is not None or classes is not None:
-        if plan.moving:
-            found.append(_rasters_with_moving_boundaries())
-            plan = replace(plan, auxiliary=None)
-        else:
-            assisted = _assist(plan, classes)
-            plan = replace(plan, assisted=assisted)
-            found.append(assisted.findings)
-    return replace(plan, findings=join_findings(found))
-
-
-def _rasters_with_moving_boundaries() -> pd.DataFrame:
-    return make_findings(
-        "rasters not used",
-        severity="warning",
-        table="rasters",
-        message="Rasters and classes of known area assist only where boundaries stay the same; these estimates rest on "
-        "the plots alone.",
-        remedy="Leave out valid_from and valid_to, or the rasters.",
-    )
-
-
-def _assist(plan: Plan, classes: PostClasses | None) -> Assisted:
-    if plan.auxiliary is None:
-        values = pd.DataFrame(columns=["survey", "plot", "raster", "value"])
-        means = pd.DataFrame(columns=["survey", "by", "unit", "raster", "mean", "covered"])
-    else:
-        values, means = plan.auxiliary.plot_values, plan.auxiliary.unit_means
-    return assist(
-        plan.plot_parts,
-        plan.sums,
-        values,
-        means,
-        plan.inputs.strata,
-        by_stratum=plan.settings.estimation.by_stratum,
-        post_stratum=None if classes is None else (classes.plots, classes.areas),
-        parcels=plan.parcels,
-        engine={"variance": plan.settings.estimation.variance},
-    )
-
-
 def reckon(plan: Plan) -> Figures:
     """Reckon every figure of an inventory.
 
@@ -237,13 +70,13 @@ def reckon(plan: Plan) -> Figures:
     """
     stocks, found = _direct_stocks(plan)
     stocks, detail, told = _compose_stocks(plan, stocks, found)
-    further, findings = _detail_tables(detail, "stocks"), [plan.findings, told]
+    further, findings = _detail_tables(plan, detail, "stocks"), [plan.findings, told]
     changes, effects = [], []
     for since, until in survey_pairs(plan.surveys):
         change, made, told, common = reckon_change(plan, since, until)
         changes.append(change)
         findings.append(told)
-        further = _joined(further, _detail_tables(made, "change"))
+        further = _joined(further, _detail_tables(plan, made, "change"))
         if common is not None:
             effects.append(area_effect(stocks, change, common))
     change = _stacked(changes, CHANGE_COLUMNS)
@@ -311,6 +144,9 @@ def reckon_change(
         at = table[table["survey"].isin([since, until])]
         change, detail, told = composite_change(change, parcels, at, plan.sums, **_composing(plan))
         found = _with_replaced(found, told)
+    simple = plan.settings.estimation.change == "difference"
+    replaced = many_replaced(change, since, until) if simple else empty_findings()
+    found = join_findings([found, units_without_change(common, change), replaced])
     return _final(plan, change), detail, found, common
 
 
@@ -408,15 +244,20 @@ def _final(plan: Plan, table: pd.DataFrame) -> pd.DataFrame:
 
 
 def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Trend lines, where there are three surveys and boundaries stay."""
-    if len(plan.surveys) < 3 or plan.moving:
+    """Trend lines, where three surveys have plots and boundaries stay."""
+    table = plan.plot_parts
+    seen = set(table.loc[table["inside"].to_numpy(dtype=bool), "survey"].astype("str"))
+    surveys = [name for name in plan.surveys if name in seen]
+    if len(surveys) < 3 or plan.moving:
         return pd.DataFrame(), empty_findings()
     pools = [pool for pool in plan.sums if pool != "all"]
+    # Own plots alone would stand beside composite change and contradict it.
+    parcels = plan.parcels if plan.settings.estimation.parcels == "direct" else None
     return estimate_trend(
-        plan.plot_parts,
+        table,
         plan.inputs.strata,
-        plan.parcels,
-        plan.surveys,
+        parcels,
+        surveys,
         pools=pools,
         sums=plan.sums,
         confidence=plan.confidence,
@@ -424,15 +265,33 @@ def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
     )
 
 
-def _detail_tables(detail: Detail | None, of: str) -> dict[str, pd.DataFrame]:
+def _detail_tables(plan: Plan, detail: Detail | None, of: str) -> dict[str, pd.DataFrame]:
     if detail is None:
         return {}
     first = ["of", "survey", "since", "until"]
     made = {}
-    for name, table in (("parcel_detail", detail.parcels), ("parcel_models", detail.models)):
+    parcels = detail.parcels if plan.assisted is None else _with_raster_shift(detail.parcels, plan.assisted.offsets)
+    for name, table in (("parcel_detail", parcels), ("parcel_models", detail.models)):
         told = table.assign(of=of, **{key: "" for key in first[1:] if key not in table})
         made[name] = told[[*first, *(column for column in told if column not in first)]]
     return made
+
+
+def _with_raster_shift(parcels: pd.DataFrame, offsets: pd.DataFrame) -> pd.DataFrame:
+    """Say what the rasters add to the mean of a parcel's adjusted plots, as it is not like its stratum."""
+    own = offsets[offsets["by"] == "parcel"]
+    pool = own["part"].str.split(".").str[0]
+    shift = own["offset"].groupby([own["survey"], own["unit"], pool]).sum()
+
+    def at(survey: pd.Series) -> np.ndarray:
+        keys = pd.MultiIndex.from_arrays([survey.astype("str"), parcels["parcel"].astype("str"), parcels["pool"]])
+        return shift.reindex(keys).fillna(0.0).to_numpy(dtype=float)
+
+    moved = at(parcels["survey"]) if "survey" in parcels else at(parcels["until"]) - at(parcels["since"])
+    place = list(parcels.columns).index("direct") + 1
+    told = parcels.copy()
+    told.insert(place, "raster_shift", np.where(parcels["direct"].notna(), moved, np.nan))
+    return told
 
 
 def _joined(tables: dict[str, pd.DataFrame], more: dict[str, pd.DataFrame]) -> dict[str, pd.DataFrame]:

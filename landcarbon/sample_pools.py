@@ -14,7 +14,7 @@ from landcarbon.constants import M2_PER_HECTARE
 from landcarbon.factors.carbon import carbon_fraction
 from landcarbon.findings import join_findings, make_findings
 from landcarbon.inventory.measured import measured_parts
-from landcarbon.plots import PlotDesign
+from landcarbon.plots import DESIGN_COLUMNS, PlotDesign
 from landcarbon.pool_options import (
     down_wood_options,
     litter_options,
@@ -141,7 +141,7 @@ def join_parts(trees: pd.DataFrame, parts: pd.DataFrame, inputs: Inputs) -> pd.D
     lone = (table.pop("_merge") == "right_only").to_numpy()
     if lone.any():
         place = inputs.plots.set_index("plot").reindex(table.loc[lone, "plot"])
-        for name in ("parcel", "stratum", "inside"):
+        for name in ("parcel", "stratum", "inside", *(name for name in DESIGN_COLUMNS if name in table)):
             table.loc[lone, name] = place[name].to_numpy()
         table.loc[lone, "size"] = 1.0
         table["inside"] = table["inside"].astype(bool)

@@ -267,6 +267,8 @@ def _with_figures(
         parts = parts_of_plots(here, pool)
         for part, rows in parts.groupby(parts["part"].astype("str"), sort=False):
             add(f"{pool}.{part}", str(part), rows.set_index(rows["plot"].astype("str"))["density_t_c_ha"])
+    if "adjusted_t_c_ha" in plots and (plots["adjusted_t_c_ha"] - plots["density_t_c_ha"]).abs().gt(0).any():
+        columns["adjusted_t_c_ha"] = "by raster"
     by_plot = shares.groupby(shares["plot"].astype("str"))
     if len(shares) and shares["density_t_c_ha"].isna().all():
         shoot = by_plot["mass_t_ha"].sum()
@@ -298,7 +300,7 @@ def _notes(pool: str, here: pd.DataFrame, model: str) -> tuple[str, ...]:
             )
     others = [text for text in (_without_trees(name, here) for name in wanted) if text]
     if others:
-        notes.append(f"No tree enters {'; '.join(others)}: worked out per plot from samples or a default factor.")
+        notes.append(f"Not from trees but from samples or a default factor, plot by plot: {'; '.join(others)}.")
     notes += [text for name in wanted for text in _methods(name, here)]
     if sums_of_plots(here, pool)["density_t_c_ha"].isna().any():
         notes.append(

@@ -125,22 +125,90 @@ def test_slopes_by_stratum_equal_the_separate_estimator():
     assert row["density_se"] ** 2 == pytest.approx(expected.variance_residuals[0] * slope_loss(19, 1)[0], rel=1e-9)
 
 
+def two_strata(number=40, seed=3, low=5.0):
+    """Two strata and two surveys of the same plots; in the second the carbon goes with the height by ``low``."""
+    plots, values, means, _, _ = simple(number)
+    rng = np.random.default_rng(seed)
+    second = np.arange(number) >= number // 2
+    height = values["height"].to_numpy()
+    carbon = np.where(second, 20 + low * height, 20 + 5 * height) + rng.normal(0, 6, number)
+    tables = []
+    for survey, date, growth in (("1", "2014-06-01", 1.0), ("2", "2024-06-01", 1.2)):
+        column = growth * carbon + (growth - 1) * rng.normal(0, 8, number)
+        tables.append(plots.assign(survey=survey, date=pd.Timestamp(date), **{"above_ground.trees": column}))
+    plots = pd.concat(tables, ignore_index=True)
+    plots = plots.assign(stratum=np.where(np.tile(second, 2), "T", "S"), parcel="")
+    values = pd.concat([values, values.assign(survey="2")], ignore_index=True)
+    means = pd.concat([means[:1], means[:1].assign(unit="T", height=17.0)])
+    means = pd.concat([means, means.assign(survey="2")], ignore_index=True)
+    return plots, values, means, pd.DataFrame({"stratum": ["S", "T"], "area_ha": [60.0, 40.0]})
+
+
 def test_change_equals_the_model_assisted_difference():
     """Independent of the engine: ``change_regression`` on repeated plots, each date with its own line."""
-    plots = survey_plots().assign(size=1.0)
-    both = plots.groupby("plot")["survey"].transform("size") == 2
-    plots = plots[both].reset_index(drop=True)
-    found, _, change = assisted_estimates(plots)
-    rows, code, area, x, x_mean = design_of(plots, "t1", units()[0])
-    later = plots[plots["survey"] == "t2"].set_index("plot")["above_ground.trees"].reindex(rows["plot"]).to_numpy()
-    weight = stratum_weights(code, area)
-    y = (rows["above_ground.trees"].to_numpy(), later)
-    expected = change_regression(y, (x, x), weight, code, (x_mean, x_mean))
+    plots, values, means, strata = two_strata()
+    found = assist(plots, ONE, values, means, strata)
+    _, change = estimates(plots, found, strata, None, sums=ONE)
+    assert found.report["used"].all()
+    assert found.report["why"].str.contains("common slopes").any()
+    height, code = values["height"].to_numpy()[:40], (np.arange(40) >= 20).astype(int)
+    area, x_mean = np.array([60.0, 40.0]), np.array([0.6, 0.4, 0.6 * 15 + 0.4 * 17])
+    x = np.column_stack([np.eye(2)[code], height])
+    y = tuple(plots["above_ground.trees"].to_numpy().reshape(2, 40))
+    expected = change_regression(y, (x, x), stratum_weights(code, area), code, (x_mean, x_mean))
     row = whole(change, "above_ground")
-    assert found.report.set_index(["survey", "pool", "stratum"]).loc[("t1", "above_ground", ""), "used"]
-    assert row["change_t_c"] == pytest.approx(expected.mean[0] * 2000, rel=1e-9)
-    factor = slope_loss(len(rows) - 4, 1)[0]
-    assert (row["change_se"] / 2000) ** 2 == pytest.approx(expected.variance_residuals[0] * factor, rel=1e-9)
+    assert row["change_t_c"] == pytest.approx(expected.mean[0] * 100, rel=1e-9)
+    assert (row["change_se"] / 100) ** 2 == pytest.approx(
+        expected.variance_residuals[0] * slope_loss(38, 1)[0], rel=1e-9
+    )
+
+
+def test_a_stratum_that_common_slopes_harm_stays_plain():
+    """Identity: the figures of the low stratum are the plain ones, those of the other rest on its own plots alone."""
+    plots, values, means, strata = two_strata(low=0.0)
+    made = [assist(plots, ONE, values, means, strata, by_stratum=own) for own in (False, True)]
+    plain, plain_change = estimates(plots, None, strata, None, sums=ONE)
+    only = plots[plots["stratum"] == "S"].reset_index(drop=True)
+    alone = estimates(only, assist(only, ONE, values, means, strata[:1]), strata[:1], None, sums=ONE)
+    for found in made:
+        stocks, change = estimates(plots, found, strata, None, sums=ONE)
+        for table, other, by_itself in ((stocks, plain, alone[0]), (change, plain_change, alone[1])):
+            low, high = (table["unit"] == "T", table["unit"] == "S")
+            pd.testing.assert_frame_equal(table[low], other[low])
+            figures = table[high].select_dtypes("number").to_numpy()
+            expected = by_itself[by_itself["unit"] == "S"].select_dtypes("number").to_numpy()
+            assert figures == pytest.approx(expected, rel=1e-9, nan_ok=True)
+        used = found.report[found.report["pool"] == "above_ground"].drop_duplicates("stratum").set_index("stratum")
+        assert used["used"].to_dict() == {"": True, "S": True, "T": False}
+        assert "below 1.1" in used.loc["T", "why"]
+        assert used.loc["", "why"] == "they serve in S, not in T"
+        note = found.findings[found.findings["rule"] == "rasters not used in stratum"]
+        assert (note["value"].item(), note["severity"].item()) == ("T", "note")
+        strata_sum = stocks[stocks["by"] == "stratum"].groupby(["survey", "pool"])["stock_t_c"].sum()
+        inventory = stocks[stocks["by"] == "inventory"].set_index(["survey", "pool"])
+        assert strata_sum.to_numpy() == pytest.approx(inventory["stock_t_c"].reindex(strata_sum.index).to_numpy())
+        error = (
+            stocks[stocks["by"] == "stratum"].groupby(["survey", "pool"])["stock_se"].apply(lambda se: (se**2).sum())
+        )
+        assert error.to_numpy() == pytest.approx(inventory["stock_se"].reindex(error.index).to_numpy() ** 2)
+
+
+def test_clearly_better_slopes_of_a_stratum_serve_unasked():
+    plots, values, means, strata = two_strata(low=-5.0)
+    one, two = (assist(plots, ONE, values, means, strata, by_stratum=own) for own in (False, True))
+    assert one.report["used"].all()
+    pd.testing.assert_frame_equal(one.plot_parts, two.plot_parts)
+
+
+def test_strata_of_few_plots_are_judged_together():
+    plots, values, means, strata = two_strata(12)
+    found = assist(plots, ONE, values, means, strata)
+    rows = found.report[(found.report["stratum"] != "") & (found.report["pool"] != "all")]
+    assert rows["why"].str.contains("together with other strata").all()
+    assert rows["used"].nunique() == 1
+    few = plots["plot"].isin([f"p{at:02d}" for at in (0, 1, 2, 6, 7, 8)])
+    found = assist(plots[few].reset_index(drop=True), ONE, values, means, strata)
+    assert not found.report["used"].any()
 
 
 def test_parcels_take_their_own_mean():
@@ -245,7 +313,7 @@ def test_a_raster_without_relation_is_not_used():
 def test_a_constant_raster_is_not_used():
     plots, values, means, strata, parcels = simple()
     found, stocks = simple_stocks(plots, values.assign(height=15.0), means.assign(height=15.0), strata, parcels)
-    assert "raster constant on plots" in set(found.findings["rule"])
+    assert found.findings["rule"].tolist().count("raster constant on plots") == 1
     assert not found.report["used"].any()
     assert not stocks["method"].str.contains("assisted").any()
 

@@ -71,7 +71,7 @@ def test_intervals_of_stocks_hold_the_true_mean(number, least):
     assert ((rows["density_low"] <= truth) & (truth <= rows["density_high"])).mean() == pytest.approx(0.95, abs=0.03)
     assert ((rows["density_low"] <= truth) & (truth <= rows["density_high"])).mean() >= least
     assert abs(estimate.mean() - truth) < 3 * estimate.std() / np.sqrt(DRAWS)
-    assert estimate.std() < 0.75 * plots.groupby("stratum")["above_ground.trees"].mean().std()
+    assert estimate.std() < 0.8 * plots.groupby("stratum")["above_ground.trees"].mean().std()
     assert (rows["density_se"] ** 2).mean() == pytest.approx(estimate.var(), rel=0.12)
 
 
@@ -80,7 +80,7 @@ def test_intervals_of_change_hold_the_true_change():
     plots, values, means = draws(30, 2, seed=5)
     given = options(plots)
     made = assist(plots, ONE, values, means, given["strata"], by_stratum=True)
-    assert made.report["rasters"].iloc[0] == "height 2, height 1"
+    assert made.report["rasters"].iloc[0] == "height 1, height 2"
     change, _ = state_change(made.plot_parts, ONE, "1", "2", **given)
     rows = of_draws(add_change_offsets(change, made, ONE, confidence=0.95))
     _, first, _, second = land()
@@ -108,3 +108,42 @@ def test_the_raise_for_slopes_makes_up_for_small_samples():
     assert (plain * factor).mean() == pytest.approx(estimate.var(), rel=0.06)
     half = np.sqrt(plain * factor) * t_quantile(9 * share, 0.975)
     assert (np.abs(estimate - carbon.mean()) <= half).mean() == pytest.approx(0.945, abs=0.012)
+
+
+@pytest.mark.parametrize("by_stratum", [False, True])
+def test_intervals_where_one_stratum_has_no_relation(by_stratum):
+    """Identity: true means of three strata, 150 samples of ten plots each; in one carbon has nothing to do with height.
+
+    The choice is made from the sample at hand, so intervals are a little short: 92 to 98 % must hold the truth.
+    """
+    height, carbon, _, _ = land()
+    cells = {"A": carbon, "B": 0.6 * carbon + 10, "C": np.random.default_rng(4).permutation(0.3 * carbon)}
+    truth = pd.Series({name: values.mean() for name, values in cells.items()})
+    rng = np.random.default_rng(9)
+    strata = pd.DataFrame({"stratum": list(cells), "area_ha": [40.0, 30.0, 30.0]})
+    means = pd.DataFrame({"survey": "1", "by": "stratum", "unit": list(cells), "height": height.mean()})
+    held, inventory, used = [], [], []
+    for _ in range(150):
+        at = rng.integers(0, SIDE * SIDE, (3, 10))
+        plots = pd.DataFrame(
+            {
+                "survey": "1",
+                "plot": [f"p{one}" for one in range(30)],
+                "stratum": np.repeat(list(cells), 10),
+                "parcel": "",
+            }
+        ).assign(inside=True, date=pd.Timestamp("2014-06-01"), size=1.0)
+        plots["above_ground.trees"] = np.concatenate([cells[name][one] for name, one in zip(cells, at, strict=True)])
+        values = plots[["survey", "plot"]].assign(height=height[at].ravel())
+        made = assist(plots, ONE, values, means.assign(share_covered=1.0), strata, by_stratum=by_stratum)
+        stocks, _ = state_stocks(made.plot_parts, ONE, ["1"], **{**options(plots), "strata": strata})
+        rows = of_draws(add_offsets(stocks, made, ONE, confidence=0.95)).set_index("unit")
+        held.append((rows["density_low"] <= truth[rows.index]) & (truth[rows.index] <= rows["density_high"]))
+        whole = add_offsets(stocks, made, ONE, confidence=0.95).query("by == 'inventory' and pool == 'all'").iloc[0]
+        inventory.append(whole["density_low"] <= truth @ [0.4, 0.3, 0.3] <= whole["density_high"])
+        report = made.report[made.report["pool"] == "all"].set_index("stratum")["used"]
+        used.append(report[list(cells)].astype(float))
+    share = pd.DataFrame(used).mean()
+    assert share["C"] < 0.25 < 0.5 < share["A"]
+    assert 0.92 <= np.mean(held) <= 0.98
+    assert 0.91 <= np.mean(inventory) <= 0.99  # known to +-1.8 % (standard error)

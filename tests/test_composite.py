@@ -19,6 +19,7 @@ from landcarbon.demo import copy_demo
 from landcarbon.errors import UserError
 from landcarbon.estimate.composite import REPLACED_RULES, composite_change, composite_parcels
 from landcarbon.estimate.composite_core import sum_of_pools
+from landcarbon.estimate.small_area import fit_fay_herriot
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.statements import state_change, state_stocks
 
@@ -204,6 +205,134 @@ def test_intervals_hold_if_parcels_do_not_differ() -> None:
         assert (rows["density_se"] > 0).all()
     assert zero > 0
     assert np.mean(held) > 0.93  # simulated, seeded
+
+
+def uneven(seed: int, means: Sequence[float], changing: Sequence[float], each: int) -> dict[str, Any]:
+    """Invented strata of very different density: parcels differ by 20 % of it, their plots by 45 %, with a skew.
+
+    Growth is a fifth of the density; that of plots in the same parcel differs by ``changing`` of it.
+    """
+    rng = np.random.default_rng(seed)
+    stratum = np.repeat(np.arange(len(means)), each)
+    count = len(stratum)
+    level = np.asarray(means)[stratum]
+    truth = level * (1 + 0.2 * rng.normal(size=count)).clip(0.2)
+    growth = 0.2 * level * (1 + 0.3 * rng.normal(size=count))
+    area = rng.lognormal(2.0, 0.3, count)
+    number = rng.integers(2, 7, count)
+    at = np.repeat(np.arange(count), number)
+    shape = 1 / 0.45**2
+    wood = truth[at] * rng.gamma(shape, 1 / shape, len(at))
+    later = wood + growth[at] + 0.2 * level[at] * np.asarray(changing)[stratum[at]] * rng.normal(size=len(at))
+    common = {
+        "plot": [f"p{i:04d}" for i in range(len(at))],
+        "parcel": [f"P{i:03d}" for i in at],
+        "stratum": [f"S{i}" for i in stratum[at]],
+        "size": 1.0,
+        "inside": True,
+    }
+    frames = [
+        pd.DataFrame({**common, "survey": survey, "date": pd.Timestamp(date), "above_ground": value, "all": value})
+        for survey, date, value in (("t1", "2014-07-01", wood), ("t2", "2024-07-01", later))
+    ]
+    labels = [f"P{i:03d}" for i in range(count)]
+    parcels = pd.DataFrame({"parcel": labels, "stratum": [f"S{i}" for i in stratum], "area_ha": area})
+    return {
+        "plots": pd.concat(frames, ignore_index=True),
+        "parcels": parcels,
+        "strata": parcels.groupby("stratum", as_index=False)["area_ha"].sum(),
+        "truth": pd.Series(truth, index=labels),
+        "grown": pd.Series(growth, index=labels),
+    }
+
+
+def by_stratum(
+    means: Sequence[float], changing: Sequence[float], seeds: int, *, of_change: bool, each: int = 6
+) -> pd.DataFrame:
+    """Share of intervals that hold, errors, and stated errors to those of direct figures, by stratum."""
+    found = []
+    sums = {"above_ground": ["above_ground"], "all": ["above_ground"]}
+    for seed in range(seeds):
+        land = uneven(seed, means, changing, each)
+        area = land["parcels"].set_index("parcel")["area_ha"]
+        if of_change:
+            direct, made, _, _ = compose_change(land)
+            truth, names = land["grown"] * area, ("change_t_c", "change_se", "change_low", "change_high")
+        else:
+            plots = land["plots"][land["plots"]["survey"] == "t1"]
+            direct, _ = stocks(plots, land["strata"], land["parcels"], ["t1"], ["above_ground"], sums=sums)
+            made, _, _ = composite_parcels(direct, land["parcels"], plots, sums, confidence=0.95)
+            truth, names = land["truth"], ("density_t_c_ha", "density_se", "density_low", "density_high")
+        one, two = (pick(frame, "parcel", "above_ground") for frame in (made, direct))
+        value, se, low, high = names
+        unit = area if of_change else pd.Series(1.0, index=area.index)
+        found.append(
+            pd.DataFrame(
+                {
+                    "stratum": land["parcels"].set_index("parcel")["stratum"],
+                    "held": (one[low] <= truth) & (truth <= one[high]),
+                    "square": ((one[value] - truth) / unit) ** 2,
+                    "direct_square": ((two[value] - truth) / unit) ** 2,
+                    "se": one[se] / unit,
+                    "direct_se": two[se] / unit,
+                }
+            )
+        )
+    mean = pd.concat(found).astype({"held": float}).groupby("stratum").mean()
+    return mean.assign(error=np.sqrt(mean["square"] / mean["direct_square"]), stated=mean["se"] / mean["direct_se"])
+
+
+@pytest.mark.parametrize("of_change", [False, True])
+@pytest.mark.parametrize("means", [(90.0, 50.0, 6.0), (90.0, 6.0)])
+def test_each_of_few_uneven_strata_keeps_its_own_error(means: tuple[float, ...], of_change: bool) -> None:
+    found = by_stratum(means, [0.5] * len(means), 40, of_change=of_change)
+    # simulated, seeded: 240 parcels a stratum, so that the share is told to 1.4 %
+    assert found["held"].between(0.90, 0.98).all()
+    assert (found["error"] <= 1.0).all()
+    assert (found["stated"] <= 1.5).all()
+
+
+def test_few_parcels_of_uneven_strata_keep_their_own_error() -> None:
+    """Without a model parcels are taken to differ as much as single plots of their own stratum do."""
+    found = by_stratum((90.0, 6.0), (0.5, 0.5), 40, of_change=False, each=2)
+    assert (found["held"] >= 0.88).all()  # simulated, seeded: 80 parcels a stratum
+    assert (found["error"] <= 1.0).all()
+    assert (found["stated"] <= 1.5).all()
+
+
+def test_bare_land_does_not_make_woods_certain() -> None:
+    found = by_stratum((90.0, 0.0), (0.5, 0.5), 20, of_change=False)
+    assert 0.90 <= found.loc["S0", "held"] <= 0.99  # simulated, seeded: 120 parcels
+    assert found.loc["S0", "error"] <= 1.0
+    assert found.loc["S1", "held"] == 1.0
+    assert 0 < found.loc["S1", "se"] < 0.05 * found.loc["S0", "se"]
+
+
+def test_a_calm_stratum_does_not_take_the_error_of_an_unruly_one() -> None:
+    found = by_stratum((90.0, 90.0), (5.0, 0.3), 12, of_change=True)
+    # simulated, seeded: change differs between plots 17 times as much in one stratum as in the other of equal density
+    assert (found["held"] >= 0.90).all()
+    assert (found["error"] <= 1.05).all()
+    assert (found["stated"] <= 2.2).all()
+
+
+def test_strata_of_one_density_are_modelled_as_one() -> None:
+    land = woodland(2)
+    plots = land["plots"][land["plots"]["survey"] == "t1"]
+    above = plots["above_ground"].clip(lower=1.0)
+    above = above * 100 / above.groupby(plots["stratum"]).transform("mean")
+    plots = plots.assign(above_ground=above, all=above)
+    sums = {"above_ground": ["above_ground"], "all": ["above_ground"]}
+    direct, _ = stocks(plots, land["strata"], land["parcels"], ["t1"], ["above_ground"], sums=sums)
+    _, detail, _ = composite_parcels(direct, land["parcels"], plots, sums, confidence=0.95)
+    rows = detail.parcels[(detail.parcels["pool"] == "above_ground") & (detail.parcels["weight_direct"] > 0)]
+    code = rows["parcel"].map(land["parcels"].set_index("parcel")["stratum"]).to_numpy()
+    groups = (code[:, None] == np.unique(code)).astype(float)
+    given = rows["direct"].to_numpy(), rows["smoothed_se"].to_numpy() ** 2, groups
+    plain = fit_fay_herriot(*given)
+    plain = plain if plain.refvar[0] > 0 else fit_fay_herriot(*given, method="adjusted REML")
+    np.testing.assert_allclose(rows["composite"], plain.eblup, rtol=1e-7)  # identity: one variance for all parcels
+    assert detail.models.loc[0, "model_variance"] == pytest.approx(plain.refvar[0], rel=1e-7)
 
 
 def test_change_errs_less_than_direct_change() -> None:

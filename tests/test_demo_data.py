@@ -11,7 +11,6 @@ import tomllib
 from pathlib import Path
 
 import geopandas as gpd
-import numpy as np
 import pandas as pd
 import pytest
 import shapely

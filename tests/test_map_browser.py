@@ -75,6 +75,12 @@ def test_parcels_and_plots_are_visible_and_nothing_else_is_fetched(page_file):
         quiet(watched, path)
 
 
+def test_opens_on_the_latest_survey(page_file):
+    with open_page(page_file()) as watched:
+        assert watched.page.locator("#layer-title").inner_text() == "Carbon density, survey 2024"
+        assert watched.page.locator("input[name=layer]:checked").get_attribute("value").startswith("density")
+
+
 def test_layers_switch_fill_and_legend(page_file):
     path = page_file()
     with open_page(path) as watched:
@@ -118,6 +124,7 @@ def test_legend_colours_are_those_of_the_parcels(page_file):
 def test_tooltips_carry_the_figures(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
+        choose(page, 0)
         page.uncheck("#plots-on")
         # Invented figures of the sample: 118.4 t C/ha at 12.5 ha, standard error 8 %, interval 15 % either side.
         text = hover(page, PARCEL_PATHS, 0)
@@ -140,6 +147,7 @@ def test_tooltips_carry_the_figures(page_file):
 def test_plots_have_their_own_switch_and_say_what_they_are(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
+        choose(page, 0)
         sizes = [page.locator(PLOT_PATHS).nth(at).bounding_box()["width"] for at in range(12)]
         assert sizes[8] == max(sizes)  # P9, the densest plot of the sample
         choose(page, 1)
@@ -172,6 +180,7 @@ def test_keyboard_and_screen_reader(page_file):
 def test_table_follows_the_layer(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
+        choose(page, 0)
         page.locator("#figures summary").click()
         page.wait_for_selector("#figures tbody tr")  # the rows come with the event after the click
         assert page.locator("#figures tbody tr").count() == 5
@@ -241,6 +250,7 @@ def test_more_names_come_with_a_closer_look(page_file):
 def test_pools_can_be_chosen(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
+        choose(page, 0)
         assert page.locator("#pool option").all_inner_texts() == [
             "all counted pools", "above-ground biomass", "below-ground biomass",
         ]  # fmt: skip
@@ -261,6 +271,7 @@ def test_pools_can_be_chosen(page_file):
 def test_table_of_strata_follows_the_layer(page_file):
     with open_page(page_file()) as watched:
         page = watched.page
+        choose(page, 0)
         rows = page.locator("#strata-figures tbody tr")
         assert rows.count() == 3
         # Invented figures of the sample: 118.4 t C/ha on 12.5 ha and 96.0 on 7.25 ha are 2,176 t C of oak.
@@ -341,7 +352,7 @@ def test_plots_only(page_file):
         assert page.locator(PARCEL_PATHS).count() == 0
         assert page.locator(PLOT_PATHS).count() == 13
         before = page.eval_on_selector_all(PLOT_PATHS, "paths => paths.map(path => path.getAttribute('fill'))")
-        choose(page, 2)
+        choose(page, 0)
         after = page.eval_on_selector_all(PLOT_PATHS, "paths => paths.map(path => path.getAttribute('fill'))")
         assert before != after
         quiet(watched, path)

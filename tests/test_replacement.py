@@ -98,7 +98,9 @@ def test_theory_with_known_variances(number: int) -> None:
     assert second[0] == pytest.approx(case["weight_matched_t1"], rel=CLOSED_FORM)
     by_plots = np.array([-m, m - n, m, n - m]) / n
     assert by_plots @ matrix @ by_plots == pytest.approx(case["var_change_difference_of_means"], rel=CLOSED_FORM)
-    assert (MATCHED[1] - MATCHED[0]) @ matrix @ (MATCHED[1] - MATCHED[0]) == pytest.approx(case["var_change_paired_only"])
+    assert (MATCHED[1] - MATCHED[0]) @ matrix @ (MATCHED[1] - MATCHED[0]) == pytest.approx(
+        case["var_change_paired_only"]
+    )
 
 
 def current_variance(matched: float, rho: float) -> float:

@@ -14,6 +14,7 @@ from hypothesis import strategies as st
 from scipy.optimize import minimize_scalar
 
 from landcarbon.errors import UserError
+from landcarbon.estimate.composite_model import fit_to_scale
 from landcarbon.estimate.small_area import (
     METHODS,
     FayHerriot,
@@ -176,6 +177,40 @@ def test_groups_may_be_written_as_contrasts(seed: int) -> None:
     one, two = fit_fay_herriot(y, psi, x), fit_fay_herriot(y, psi, contrasts)
     np.testing.assert_allclose(one.eblup, two.eblup, rtol=1e-7)
     np.testing.assert_allclose(one.mse, two.mse, rtol=1e-5, atol=1e-6 * np.median(psi))
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_variance_proportional_to_a_scale(seed: int) -> None:
+    y, psi, x = parcels(seed, spread=25.0)
+    scale = x[:, :3] @ np.array([1.5, 0.8, 0.1])
+    fit = fit_to_scale(y, psi, x, scale, 3)
+
+    def parts(refvar: float) -> tuple[np.ndarray, np.ndarray, float]:
+        return dense_parts(0.0, y, psi + refvar * scale**2, x)
+
+    # independent: bounded scalar search of scipy over the restricted likelihood with V = A scale^2 + psi
+    best = minimize_scalar(lambda a: -parts(a)[2], bounds=(0, 20000), method="bounded", options={"xatol": 1e-9})
+    refvar = fit.refvar / scale**2
+    np.testing.assert_allclose(refvar, refvar[0], rtol=1e-12)
+    assert refvar[0] == pytest.approx(best.x, rel=1e-4)
+    beta, cov, _ = parts(refvar[0])
+    np.testing.assert_allclose(fit.beta, beta, rtol=1e-8)
+    np.testing.assert_allclose(fit.beta_cov, cov, rtol=1e-7)
+    gamma = refvar[0] * scale**2 / (refvar[0] * scale**2 + psi)
+    np.testing.assert_allclose(fit.eblup, gamma * y + (1 - gamma) * (x @ beta), rtol=1e-8)
+    # identity: g1 + g2 + 2 g3, with the derivatives of g by A in g3
+    relative = psi / scale**2
+    asymptotic = 2 / ((relative + refvar[0]) ** -2.0).sum()
+    g2 = (1 - gamma) ** 2 * np.einsum("ij,jk,ik->i", x, cov, x)
+    g3 = relative**2 / (relative + refvar[0]) ** 3 * asymptotic * scale**2
+    np.testing.assert_allclose(fit.mse, gamma * psi + g2 + 2 * g3, rtol=1e-8)
+
+
+def test_one_scale_for_all_is_the_plain_model() -> None:
+    y, psi, x = parcels(4)
+    plain, scaled = fit_fay_herriot(y, psi, x), fit_to_scale(y, psi, x, np.ones(len(y)), 3)
+    for name in ("beta", "beta_cov", "refvar", "gamma", "synthetic", "eblup", "mse", "total"):
+        np.testing.assert_array_equal(getattr(scaled, name), getattr(plain, name), err_msg=name)
 
 
 def test_a_given_variance_is_kept() -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -57,6 +58,7 @@ def test_rules_state_where_they_come_from() -> None:
 
 def test_pooled_variance_is_the_mean_square_within_parcels() -> None:
     layer = plots(1)
+    layer = replace(layer, level=np.ones_like(layer.level))
     unit = unit_variance(layer)
     trust = rule("stratum_variance_df")
     for column in range(2):
@@ -69,11 +71,12 @@ def test_pooled_variance_is_the_mean_square_within_parcels() -> None:
                 free += len(mine) - 1
             within.append(square)
             df.append(free)
-        # identity: analysis of variance; two strata are too few for a power, so the function is the pooled variance
+        # identity: analysis of variance; strata of one level have one variance, so the function is the pooled variance
         pooled = sum(within) / sum(df)
         expected = [(square + trust * pooled) / (free + trust) for square, free in zip(within, df, strict=True)]
         np.testing.assert_allclose(unit.variance[:2, column], expected, rtol=1e-10)
         assert unit.variance[2, column] == pytest.approx(max(expected))
+        np.testing.assert_allclose(unit.function[:, column], pooled)
     assert unit.within.all()
 
 
@@ -104,7 +107,7 @@ def test_variance_of_one_stratum_leans_on_the_others() -> None:
 
 
 @pytest.mark.parametrize("power", [0.5, 1.0, 1.7])
-def test_power_of_the_mean_is_the_best_of_the_quasi_likelihood(power: float) -> None:
+def test_power_of_the_mean_is_the_best_of_the_penalised_likelihood(power: float) -> None:
     rng = np.random.default_rng(7)
     level = rng.uniform(20, 200, 12)
     df = rng.integers(5, 40, 12).astype(float)
@@ -113,20 +116,59 @@ def test_power_of_the_mean_is_the_best_of_the_quasi_likelihood(power: float) -> 
 
     def loss(given: np.ndarray) -> float:
         log_fit = given[0] + given[1] * np.log(level)
-        return float((df * (log_fit + squares / df / np.exp(log_fit))).sum())
+        apart = (given[1] - rule("expected_power")) / rule("expected_power_sd")
+        return float((df * (log_fit + squares / df / np.exp(log_fit))).sum()) + apart**2
 
-    # independent: scipy's minimiser of the gamma quasi-likelihood
+    # independent: scipy's minimiser of the gamma quasi-likelihood and the penalty
     best = minimize(loss, [0.0, 1.0], method="Nelder-Mead", options={"xatol": 1e-8, "fatol": 1e-10, "maxiter": 4000})
     assert found[0] == pytest.approx(np.clip(best.x[1], 0, rule("greatest_power")), abs=0.02)
     np.testing.assert_allclose(function[:, 0], np.exp(best.x[0]) * level ** best.x[1], rtol=0.03)
 
 
-def test_few_strata_are_pooled_and_an_empty_one_leans_on_them() -> None:
+def test_strata_of_one_level_are_pooled_and_an_empty_one_leans_on_them() -> None:
     squares, df = np.array([[300.0], [100.0], [0.0]]), np.array([[3.0], [5.0], [0.0]])
-    function, power = power_of_mean(squares, df, np.array([[50.0], [150.0], [0.0]]))
-    np.testing.assert_allclose(function[:, 0], 50.0)  # 400 / 8
-    assert power[0] == 0
+    function, power = power_of_mean(squares, df, np.array([[80.0], [80.0], [0.0]]))
+    np.testing.assert_allclose(function[:, 0], 50.0)  # by hand: 400 / 8
+    assert power[0] == pytest.approx(rule("expected_power"))
     np.testing.assert_allclose(shrink_to_function(squares, df, function)[2], 50.0)
+
+
+def test_one_stratum_alone_tells_the_others_by_the_expected_power() -> None:
+    squares, df = np.array([[900.0], [0.0]]), np.array([[9.0], [0.0]])
+    function, power = power_of_mean(squares, df, np.array([[90.0], [10.0]]))
+    assert power[0] == pytest.approx(rule("expected_power"))
+    np.testing.assert_allclose(function[:, 0], [100.0, 100.0 / 9 ** rule("expected_power")])  # by hand
+
+
+@pytest.mark.parametrize("factor", [1e-3, 44 / 12, 1e4])
+def test_power_does_not_depend_on_the_unit(factor: float) -> None:
+    squares, df = np.array([[30000.0], [9000.0], [150.0]]), np.array([[12.0], [9.0], [11.0]])
+    level = np.array([[90.0], [50.0], [6.0]])
+    function, power = power_of_mean(squares, df, level)
+    again, same = power_of_mean(factor**2 * squares, df, factor * level)
+    assert same[0] == power[0]
+    np.testing.assert_allclose(again, factor**2 * function, rtol=1e-10)
+
+
+def test_two_strata_of_very_different_density_keep_their_variances() -> None:
+    rng = np.random.default_rng(12)
+    stratum = np.repeat([0, 1], 12)
+    mean = np.array([90.0, 6.0])[stratum]
+    value = (mean * (1 + 0.45 * rng.normal(size=24)))[:, None]
+    unit = unit_variance(layer_of(value, np.arange(24), stratum))
+    own = [value[stratum == code].var(ddof=1) for code in (0, 1)]
+    # simulated, seeded: a common variance would be 60 times that of the low stratum
+    np.testing.assert_allclose(unit.variance[:2, 0], own, rtol=0.25)
+    assert 1.0 <= unit.power[0] <= 2.0
+
+
+def test_plots_without_anything_have_a_small_variance_but_some() -> None:
+    rng = np.random.default_rng(13)
+    value = np.concatenate([rng.normal(90, 40, 12), np.zeros(9)])[:, None]
+    unit = unit_variance(layer_of(value, np.arange(21), np.repeat([0, 1], [12, 9])))
+    assert 0 < unit.variance[1, 0] < 0.03 * unit.variance[0, 0]
+    one = unit_variance(layer_of(value[:13], np.arange(13), np.repeat([0, 1], [12, 1])))
+    assert one.variance[1, 0] > 10 * unit.variance[1, 0]  # one plot says far less than nine
 
 
 def test_nothing_known_stays_unknown() -> None:

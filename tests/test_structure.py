@@ -34,6 +34,8 @@ ROOMS = {
     "landcarbon.publish": 9,
     "landcarbon.statements": 10,
     "landcarbon.trace": 9,
+    "landcarbon.reckon_notes": 10,
+    "landcarbon.reckon_plan": 10,
     "landcarbon.reckon": 11,
     "landcarbon.pipeline": 12,
     "landcarbon.assemble": 13,

@@ -106,7 +106,7 @@ def test_pools_without_trees_say_so(demo):
         plots, stocks = demo.plots, demo.stocks
     trace = trace_unit(dataclasses.replace(demo, plots=plots, stocks=stocks), survey="2014", pool="litter")
     assert trace.trees.empty
-    assert any("No tree enters" in note for note in trace.notes)
+    assert any("Not from trees" in note for note in trace.notes)
 
 
 def test_parts_are_listed_where_there_are_any(demo):

@@ -126,7 +126,7 @@ def test_sums_of_parts_agree_with_columns() -> None:
 
 
 def test_growth_in_step_with_time_has_an_exact_rate() -> None:
-    """Identity: every plot grows by 2 t C/ha/yr, whatever its interval: no error of the rate, an error of the change."""
+    """Identity: every plot grows by 2 t C/ha/yr, whatever its interval: an error of the change, none of the rate."""
     rng = np.random.default_rng(4)
     first, years = rng.normal(100, 20, 12), rng.uniform(3, 14, 12)
     row = whole(change(repeated(first, first + 2 * years, np.zeros(12), years * DAYS), strata_table({"S": 1}))[0])

@@ -12,6 +12,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from functools import cache
 from importlib.resources import files
+from importlib.resources.abc import Traversable
 from types import MappingProxyType
 
 import numpy as np
@@ -210,8 +211,21 @@ def rules_page() -> str:
             f"| {item.name} | {item.severity} | {item.table}, {item.column} | {'yes' if item.used else 'no'} "
             f"| {limit} | {source} | {message} | {remedy} |"
         )
-    lines += ["", "## Findings of dead wood", "", *_table_of("dead_wood_findings.csv", "rule")]
-    lines += ["", "## Findings of soil", "", *_table_of("soil_limits.csv", "name")]
+    factors = files("landcarbon.factors")
+    lines += ["", "## Findings of dead wood", "", *_table_of(factors.joinpath("dead_wood_findings.csv"), "rule")]
+    lines += ["", "## Findings of soil", "", *_table_of(factors.joinpath("soil_limits.csv"), "name")]
+    rasters = files("landcarbon.read").joinpath("raster_rules.csv")
+    lines += ["", "## Findings of rasters", "", *_table_of(rasters, "rule")]
+    lines += [
+        "",
+        "## Findings of the estimates",
+        "",
+        "What could not be estimated, what rests on another figure, and what looks too good: strata and parcels with",
+        "too few plots or none, pools left out of a sum, equal values on all plots, parcels that do not differ or have",
+        "too few plots for a model, rasters that do not serve, plots visited in another season or that changed their",
+        "stratum, lines that are not straight, units without land at both surveys. The texts stand beside the",
+        "estimators; each names the units, what it does to the figure and what to do.",
+    ]
     lines += [
         "",
         "Frames (litter, ground vegetation) and saplings are checked for masses, areas, shares and counts that cannot",
@@ -220,9 +234,9 @@ def rules_page() -> str:
     return "\n".join(lines) + "\n"
 
 
-def _table_of(name: str, key: str) -> list[str]:
-    """Rows of a table of the pools that are findings, as Markdown."""
-    with files("landcarbon.factors").joinpath(name).open(encoding="utf-8") as handle:
+def _table_of(table: Traversable, key: str) -> list[str]:
+    """Rows of a data file that are findings, as Markdown."""
+    with table.open(encoding="utf-8") as handle:
         rows = [row for row in csv.DictReader(handle) if row["severity"]]
     head = ["| rule | severity | column | what it means | what to do |", "| --- | --- | --- | --- | --- |"]
     return head + [

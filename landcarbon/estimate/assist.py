@@ -16,10 +16,13 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from landcarbon.estimate.assist_gain import Gain, decide, measure_gain
+from landcarbon.estimate.assist_choice import choose
+from landcarbon.estimate.assist_gain import measure_gain
 from landcarbon.estimate.assist_limits import assist_limits
-from landcarbon.estimate.assist_lines import Lines, fit_survey, model_rows, offset_rows
+from landcarbon.estimate.assist_lines import Lines, fit_survey
 from landcarbon.estimate.assist_phases import first_phase_variances
+from landcarbon.estimate.assist_report import REPORT_COLUMNS, not_used, worth
+from landcarbon.estimate.assist_rows import model_rows, offset_rows
 from landcarbon.estimate.auxiliary import auxiliaries
 from landcarbon.estimate.auxiliary_tables import Given, long_means, long_values, read_given
 from landcarbon.estimate.groups import label_codes
@@ -31,17 +34,6 @@ __all__ = ["MODEL_COLUMNS", "OFFSET_COLUMNS", "REPORT_COLUMNS", "Assisted", "ass
 
 OFFSET_COLUMNS = ["survey", "by", "unit", "part", "offset", "inflation", "df_share"]
 MODEL_COLUMNS = ["survey", "of", "stratum", "term", "source", "coefficient", "centre", "r2", "n", "se_residual"]
-REPORT_COLUMNS = [
-    "survey",
-    "pool",
-    "stratum",
-    "rasters",
-    "plots",
-    "slopes",
-    "relative_efficiency",
-    "used",
-    "why",
-]
 
 
 @dataclass(frozen=True)
@@ -59,7 +51,7 @@ class Assisted:
     models : DataFrame
         ``MODEL_COLUMNS``: lines by survey, part or pool (``of``) and stratum, a row per term ("intercept" or raster)
         [t C/ha, and per unit of the raster]; ``source`` is the survey whose raster serves, ``centre`` the mean of the
-        raster in the stratum. Every part that was measured has a line, without slope if it is not assisted.
+        raster in the stratum. Every part that was measured has a line, with slopes of 0 where it is not assisted.
     report : DataFrame
         ``REPORT_COLUMNS``: what the rasters bring; stratum "" is the inventory. ``why`` is a sentence.
     phases : DataFrame
@@ -107,7 +99,7 @@ def assist(  # noqa: PLR0913  (the plots, two tables of raster values, units, an
     strata : DataFrame
         stratum, area_ha.
     by_stratum : bool
-        Fit slopes to each stratum that has plots enough; the others take those of all strata together.
+        Slopes of its own for each stratum that has plots enough; otherwise only where they are clearly better.
     post_stratum : tuple of DataFrame, optional
         Classes of a map, of plots and as areas, as for ``class_rasters``; they count like rasters.
     parcels : DataFrame, optional
@@ -122,9 +114,9 @@ def assist(  # noqa: PLR0913  (the plots, two tables of raster values, units, an
     Notes
     -----
     Slopes are fitted by weighted least squares with an intercept per stratum; the weight of a plot is the area it
-    stands for. Which pools are assisted is decided once, for all surveys together, so that changes are differences of
-    stocks and what repeated plots have in common is not lost. A pool is assisted if the variance summed over surveys
-    shrinks by the factor given in ``assist.toml`` or more, after raising that of the assisted estimates.
+    stands for. Whether a pool is assisted in a stratum is decided once, for all surveys together, so that changes are
+    differences of stocks and what repeated plots have in common is not lost; ``assist_choice`` has the rules, with the
+    limits of ``assist.toml``. Where it is not, the plots stay as they are.
 
     References
     ----------
@@ -143,25 +135,18 @@ def assist(  # noqa: PLR0913  (the plots, two tables of raster values, units, an
     area = strata.set_index(strata["stratum"].astype("str"))["area_ha"].reindex(labels).to_numpy(dtype=float)
     columns = [str(column) for column in sums["all"]]
     table = plot_parts.reset_index(drop=True)
-    lines = _fit(table, given, columns, area, by_stratum=by_stratum, found=found)
-    lines, lacking = _same_parts(lines, columns)
+    lines, lacking = _same_parts(_fit(table, given, columns, area, found=found), columns)
     points = _points(given)
+    choice = choose(lines, sums, area, points, by_stratum=by_stratum)
+    lines = choice.lines
     phases = first_phase_variances(lines, points, sums, area)
-    options = dict(engine or {})
     adjusted = _adjusted(table, lines, columns)
-    gain = measure_gain(table, adjusted, sums, strata, lines, options, phases=phases)
-    used = decide(gain, sums, lines, assist_limits())
-    if not all(used.values()):
-        keep = [column for pool, names in sums.items() if pool != "all" and used[pool] for column in names]
-        lines = {survey: line.only(keep) for survey, line in lines.items()}
-        phases = first_phase_variances(lines, points, sums, area)
-        adjusted = _adjusted(table, lines, columns)
-        gain = measure_gain(table, adjusted, sums, strata, lines, options, phases=phases, beside=gain)
-    report = _report(gain, used, lacking, lines, sums)
-    found += [_not_used(report), _parcels_unknown(table, lines)]
+    gain = measure_gain(table, adjusted, sums, strata, lines, dict(engine or {}), phases=phases, area=area)
+    report = worth(gain, choice, lacking, sums)
+    found += [not_used(report), _parcels_unknown(table, lines)]
     return Assisted(
         plot_parts=adjusted.set_index(plot_parts.index),
-        offsets=_frame([offset_rows(survey, line) for survey, line in lines.items()], OFFSET_COLUMNS),
+        offsets=_frame([offset_rows(survey, line, area) for survey, line in lines.items()], OFFSET_COLUMNS),
         models=_frame([model_rows(survey, line, sums) for survey, line in lines.items()], MODEL_COLUMNS),
         report=report,
         phases=phases,
@@ -175,17 +160,14 @@ def _fit(
     columns: list[str],
     area: np.ndarray,
     *,
-    by_stratum: bool,
     found: list[pd.DataFrame],
 ) -> dict[str, Lines]:
     """Fit the lines of every survey; what is to be said goes to ``found``."""
-    rows = {survey: _rows(table, survey, given.strata) for survey in _in_time(table)}
+    units = _unit_keys(table)
+    rows = {survey: _rows(table, survey, given.strata, units) for survey in _in_time(table)}
     variables, findings = auxiliaries(given, rows, assist_limits())
     found.append(findings)
-    return {
-        survey: fit_survey(table, plots, columns, variables[survey], area, by_stratum=by_stratum)
-        for survey, plots in rows.items()
-    }
+    return {survey: fit_survey(table, plots, columns, variables[survey], area) for survey, plots in rows.items()}
 
 
 def _points(given: Given) -> pd.DataFrame:
@@ -210,7 +192,17 @@ def _stratum_labels(plot_parts: pd.DataFrame, strata: pd.DataFrame) -> list[str]
     return listed + sorted({str(name) for name in named} - set(listed) - {""})
 
 
-def _rows(table: pd.DataFrame, survey: str, labels: list[str]) -> pd.DataFrame:
+def _unit_keys(table: pd.DataFrame) -> np.ndarray:
+    """Return the number of the sampling unit of each row: of its cluster, else of its plot."""
+    plot, names = pd.factorize(table["plot"])
+    if "cluster" not in table:
+        return np.asarray(plot, dtype=np.int64)
+    cluster = pd.factorize(table["cluster"].astype("str").where(table["cluster"].notna(), ""))
+    blank = np.append(np.asarray(cluster[1], dtype=object) == "", True)[cluster[0]]
+    return np.where(blank, plot, len(names) + cluster[0]).astype(np.int64)
+
+
+def _rows(table: pd.DataFrame, survey: str, labels: list[str], units: np.ndarray) -> pd.DataFrame:
     """Take the plots of a survey that count: position in the table, plot, stratum code, size and sampling unit."""
     code = label_codes(table["stratum"], labels)
     size = table["size"].to_numpy(dtype=float)
@@ -218,14 +210,16 @@ def _rows(table: pd.DataFrame, survey: str, labels: list[str]) -> pd.DataFrame:
         size = size * table["weight"].to_numpy(dtype=float)
     counts = (label_codes(table["survey"], [survey]) == 0) & table["inside"].to_numpy(dtype=bool)
     position = np.flatnonzero(counts & (code >= 0) & (size > 0))
-    rows = table.iloc[position]
-    plot = rows["plot"].astype("str").to_numpy(dtype=object)
-    unit = np.arange(len(position))
-    if "cluster" in rows:
-        cluster = rows["cluster"].astype("str").to_numpy(dtype=object)
-        unit = pd.factorize(np.where(rows["cluster"].isna() | (cluster == ""), plot, cluster))[0]
+    key = units[position]
     return pd.DataFrame(
-        {"position": position, "plot": plot, "code": code[position], "size": size[position], "unit": unit}
+        {
+            "position": position,
+            "plot": table["plot"].iloc[position].astype("str").to_numpy(dtype=object),
+            "code": code[position],
+            "size": size[position],
+            "key": key,
+            "unit": pd.factorize(key)[0] if "cluster" in table else np.arange(len(position)),
+        }
     )
 
 
@@ -255,7 +249,8 @@ def _same_parts(lines: dict[str, Lines], columns: list[str]) -> tuple[dict[str, 
             if measured and why:
                 lacking.setdefault(column, f"{survey}: {why}")
     keep = [column for column in columns if column not in lacking]
-    return {survey: line.only(keep) for survey, line in lines.items()}, lacking
+    mask = np.isin(np.array(columns, dtype=object), keep)[:, None]
+    return {survey: line.only(mask) for survey, line in lines.items()}, lacking
 
 
 def _adjusted(table: pd.DataFrame, lines: dict[str, Lines], columns: list[str]) -> pd.DataFrame:
@@ -271,72 +266,14 @@ def _frame(parts: list[pd.DataFrame], columns: list[str]) -> pd.DataFrame:
     return pd.concat(kept, ignore_index=True)[columns] if kept else pd.DataFrame(columns=columns)
 
 
-def _report(
-    gain: Gain,
-    used: dict[str, bool],
-    lacking: dict[str, str],
-    lines: dict[str, Lines],
-    sums: Mapping[str, Sequence[str]],
-) -> pd.DataFrame:
-    """Put into rows what the rasters bring, by survey, pool and stratum."""
-    table = gain.table
-    whys = {pool: _why(pool, used, gain, lacking, names) for pool, names in sums.items()}
-    slopes = {
-        (survey, pool): max((line.number[line.columns.index(name)] for name in names), default=0)
-        for survey, line in lines.items()
-        for pool, names in sums.items()
-    }
-    of = list(zip(table["survey"], table["pool"], strict=True))
-    rasters = {survey: ", ".join(line.auxiliary.rasters) for survey, line in lines.items()}
-    return table.assign(
-        rasters=[rasters[survey] if used[pool] else "" for survey, pool in of],
-        slopes=[int(slopes[one]) for one in of],
-        used=[used[pool] for _, pool in of],
-        why=[whys[pool] for _, pool in of],
-    )[REPORT_COLUMNS]
-
-
-def _why(pool: str, used: dict[str, bool], gain: Gain, lacking: dict[str, str], names: Sequence[str]) -> str:
-    if pool == "all":
-        helped = [name for name, yes in used.items() if yes and name != "all"]
-        return f"pools assisted: {', '.join(helped)}" if helped else "no pool is assisted"
-    ratio = gain.over_surveys.get(pool, np.nan)
-    reasons = [f"{name}, {lacking[name]}" for name in names if name in lacking]
-    if not np.isfinite(ratio) and not used[pool]:
-        return "; ".join(reasons) or "not measured"
-    limit = assist_limits().relative_efficiency
-    told = f"relative efficiency {ratio:.2f} over all surveys, {'at least' if used[pool] else 'below'} {limit:g}"
-    return "; ".join([told, *reasons])
-
-
-def _not_used(report: pd.DataFrame) -> pd.DataFrame:
-    """Report pools that fall back to the plain estimator."""
-    if report.empty:
-        return empty_findings()
-    plain = report[~report["used"].astype(bool) & (report["pool"] != "all")].drop_duplicates("pool")
-    found = []
-    for pool, why in zip(plain["pool"], plain["why"], strict=True):
-        found.append(
-            make_findings(
-                "rasters not used",
-                severity="note",
-                table="estimate",
-                column=str(pool),
-                message=f"Rasters do not serve for pool {pool} ({why}): its figures are the plain estimates.",
-                remedy="Nothing, if the raster tells little about this pool; else more plots.",
-            )
-        )
-    return join_findings(found)
-
-
 def _parcels_unknown(table: pd.DataFrame, lines: dict[str, Lines]) -> pd.DataFrame:
     """Report parcels with adjusted plots but without a mean of their own: their figures must be plain."""
     names: set[str] = set()
     for line in lines.values():
-        if line.assisted.any():
+        if line.used.any():
             known = line.auxiliary.parcels
             listed = set(known["unit"][known["stratum"] >= 0].astype("str"))
-            inside = table["parcel"].iloc[line.position][line.auxiliary.serves[line.code]]
+            inside = table["parcel"].iloc[line.position][line.used.any(axis=0)[line.code]]
             names |= {str(name) for name in inside.dropna().unique()} - listed - {""}
     if not names:
         return empty_findings()

@@ -3,36 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
-from landcarbon.estimate.assist_limits import AssistLimits
 from landcarbon.estimate.assist_lines import Lines
 from landcarbon.estimate.stocks import estimate_stocks
 
-__all__ = ["Gain", "decide", "measure_gain"]
+__all__ = ["measure_gain"]
 
 _CONFIDENCE = 0.95  # the intervals are not looked at
-
-
-@dataclass(frozen=True)
-class Gain:
-    """Variances side by side.
-
-    Attributes
-    ----------
-    table : DataFrame
-        survey, pool, stratum ("" for the inventory), plots, plain and assisted variance (raised for the slopes) and
-        relative_efficiency.
-    over_surveys : dict
-        Ratio of the variances of the inventory, summed over surveys, by pool.
-    """
-
-    table: pd.DataFrame
-    over_surveys: dict[str, float]
 
 
 def measure_gain(
@@ -44,8 +25,8 @@ def measure_gain(
     engine: dict[str, Any],
     *,
     phases: pd.DataFrame,
-    beside: Gain | None = None,
-) -> Gain:
+    area: np.ndarray,
+) -> pd.DataFrame:
     """Compare the estimates from plain and adjusted plot values.
 
     Parameters
@@ -62,46 +43,31 @@ def measure_gain(
         Further options of ``estimate_stocks``.
     phases : DataFrame
         Variance to add for raster means from a first phase of points.
-    beside : Gain, optional
-        An earlier comparison of all pools; then only ``all`` is compared anew.
+    area : ndarray
+        Of the strata of the lines [ha].
+
+    Returns
+    -------
+    DataFrame
+        survey, pool, stratum ("" for the inventory), plots, plain and assisted variance (raised for the slopes) and
+        relative_efficiency.
     """
     blocks = []
+    none = not any(line.used.any() for line in lines.values())
     for survey, line in lines.items():
-        if beside is None:
-            before = _variances(plain, sums, strata, line, survey, engine)
-        else:
-            before = beside.table[(beside.table["survey"] == survey) & (beside.table["pool"] == "all")]
-        after = _variances(adjusted, sums, strata, line, survey, engine, only_all=beside is not None)
+        before = _variances(plain, sums, strata, line, survey, engine)
+        after = before if none else _variances(adjusted, sums, strata, line, survey, engine)
         if before.empty or after.empty:
             continue
         joined = before[["pool", "stratum", "plots", "plain"]].merge(
             after[["pool", "stratum", "plain"]].rename(columns={"plain": "assisted"}), on=["pool", "stratum"]
         )
-        raised = joined["assisted"] * _raised(joined, sums, line) + _of_points(joined, phases, survey)
+        raised = joined["assisted"] * _raised(joined, sums, line, area) + _of_points(joined, phases, survey)
         blocks.append(joined.assign(survey=survey, assisted=raised))
     columns = ["survey", "pool", "stratum", "plots", "plain", "assisted"]
     table = pd.concat(blocks, ignore_index=True)[columns] if blocks else pd.DataFrame(columns=columns)
     efficiency = [_ratio(one, two) for one, two in zip(table["plain"], table["assisted"], strict=True)]
-    table = table.assign(relative_efficiency=np.array(efficiency, dtype=float))
-    if beside is not None:
-        # the other pools keep what was found for them, whether they are assisted in the end or not
-        others = beside.table[beside.table["pool"] != "all"]
-        return Gain(pd.concat([others, table], ignore_index=True), beside.over_surveys)
-    whole = table[table["stratum"] == ""].groupby("pool", sort=False)[["plain", "assisted"]].sum(min_count=1)
-    return Gain(table, {str(pool): _ratio(one, two) for pool, one, two in whole.itertuples()})
-
-
-def decide(
-    gain: Gain, sums: Mapping[str, Sequence[str]], lines: dict[str, Lines], limits: AssistLimits
-) -> dict[str, bool]:
-    """Pools that rasters assist, and whether ``all`` is touched by that."""
-    used = {}
-    for pool, names in sums.items():
-        if pool == "all":
-            continue
-        some = any(line.assisted[line.columns.index(name)] for line in lines.values() for name in names)
-        used[pool] = some and gain.over_surveys.get(pool, np.nan) >= limits.relative_efficiency
-    return {**used, "all": any(used.values())}
+    return table.assign(relative_efficiency=np.array(efficiency, dtype=float))
 
 
 def _ratio(plain: float, assisted: float) -> float:
@@ -117,8 +83,6 @@ def _variances(
     line: Lines,
     survey: str,
     engine: dict[str, Any],
-    *,
-    only_all: bool = False,
 ) -> pd.DataFrame:
     """Variance of the density by pool, of the strata and (stratum "") of the inventory."""
     measured = {name for name, yes in zip(line.columns, line.measured, strict=True) if yes}
@@ -131,14 +95,11 @@ def _variances(
     given: dict[str, list[str]] | None = {**kept, "all": columns}
     pools = list(kept)
     if not part[columns].isna().to_numpy().any():
-        pools = [] if only_all else pools
         totals = {pool: part[kept.get(pool, columns)].sum(axis=1) for pool in (*pools, "all")}
         part, given = part.drop(columns=columns).assign(**totals), None
     stocks, _ = estimate_stocks(
         part, strata, None, [survey], pools=pools, confidence=_CONFIDENCE, inventory_name="", sums=given, **engine
     )
-    if only_all:
-        stocks = stocks[stocks["pool"] == "all"]
     rows = stocks.assign(plain=stocks["density_se"] ** 2, stratum=stocks["unit"].where(stocks["by"] == "stratum", ""))
     if not (rows["by"] == "inventory").any():
         whole = rows.groupby("pool", sort=False).agg(plain=("plain", "sum"), plots=("plots", "sum")).reset_index()
@@ -154,14 +115,15 @@ def _of_points(joined: pd.DataFrame, phases: pd.DataFrame, survey: str) -> np.nd
     return table.reindex(keys).fillna(0.0).to_numpy(dtype=float)
 
 
-def _raised(joined: pd.DataFrame, sums: Mapping[str, Sequence[str]], line: Lines) -> np.ndarray:
+def _raised(joined: pd.DataFrame, sums: Mapping[str, Sequence[str]], line: Lines, area: np.ndarray) -> np.ndarray:
     """Return the factor of the variance for the fitted slopes: the largest of the parts of a pool."""
     factors = np.ones(len(joined))
     where = {"": -1} | {name: at for at, name in enumerate(line.labels)}
     at = joined["stratum"].map(where).to_numpy()
+    whole, _ = line.whole(area)
     for pool, names in sums.items():
         parts = [line.columns.index(name) for name in names]
-        table = np.column_stack([line.inflation[parts], line.whole_inflation[parts]])  # the last column: the inventory
+        table = np.column_stack([line.inflation[parts], whole[parts]])  # the last column: the inventory
         mine = (joined["pool"] == pool).to_numpy()
         factors[mine] = table.max(axis=0, initial=1.0)[at[mine]]
     return factors

@@ -17,14 +17,20 @@ class AssistLimits:
     Attributes
     ----------
     relative_efficiency : float
-        Least variance of the plain estimate over that of the assisted one.
+        Least variance of the plain estimates over that of the assisted ones, stocks and changes together.
+    growth_of_change : float
+        Most variance of the assisted change over that of the plain one.
+    own_slopes : float
+        Least variance with common slopes over that with slopes of the stratum, for the latter to serve.
     plots_per_slope : float
-        Plots beyond one per stratum, for each raster.
+        Plots beyond one per stratum, for each raster; a stratum with fewer is not judged by itself.
     missing_share : float
         Largest share of a stratum without raster value.
     """
 
     relative_efficiency: float
+    growth_of_change: float
+    own_slopes: float
     plots_per_slope: float
     missing_share: float
 

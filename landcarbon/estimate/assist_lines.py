@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -12,9 +11,44 @@ from landcarbon.estimate.assist_limits import assist_limits
 from landcarbon.estimate.auxiliary import Auxiliary, within_strata
 from landcarbon.estimate.groups import group_sum
 from landcarbon.estimate.ratio import MIN_PLOTS
-from landcarbon.estimate.regression import fit_lines, independent_columns
+from landcarbon.estimate.regression import independent_columns
 
-__all__ = ["Lines", "fit_survey", "model_rows", "offset_rows", "slope_loss"]
+__all__ = ["Group", "Lines", "columns_alike", "fit_survey", "refit", "slope_loss"]
+
+
+@dataclass(frozen=True)
+class Group:
+    """What lines of parts that were measured on the same plots rest on: products of deviations by stratum.
+
+    Rasters are turned into uncorrelated ones of equal spread first (over all strata together), so that products may be
+    added up and inverted without loss of digits.
+
+    Attributes
+    ----------
+    parts : ndarray of int
+        Positions of the parts.
+    plots : ndarray of int
+        Sampling units by stratum, 0 where fewer than two; shape (H,).
+    back : ndarray
+        Slopes of the rasters per slope of the turned ones; shape (p, q), q the number of independent rasters.
+    squares, crossed : ndarray
+        Products of the turned rasters with themselves (H, q, q) and with the parts (H, q, K).
+    why : list of str
+        Why a part has no line; "" if it may have one.
+    """
+
+    parts: np.ndarray
+    plots: np.ndarray
+    back: np.ndarray
+    squares: np.ndarray
+    crossed: np.ndarray
+    why: list[str]
+
+    @property
+    def room(self) -> np.ndarray:
+        """Strata with plots enough for slopes of their own; shape (H,)."""
+        slopes = self.back.shape[1]
+        return np.asarray((slopes > 0) & (self.plots - 1.0 >= assist_limits().plots_per_slope * slopes))
 
 
 @dataclass(frozen=True)
@@ -31,6 +65,10 @@ class Lines:
         Stratum of each; shape (n,).
     size : ndarray
         Size of each; shape (n,).
+    key : ndarray of int
+        Sampling unit of each, the same number at all surveys; shape (n,).
+    alone : bool
+        Whether every plot is a sampling unit.
     labels : list of str
         Strata.
     columns : list of str
@@ -39,14 +77,16 @@ class Lines:
         Values before adjustment; shape (n, K), NaN where not measured.
     auxiliary : Auxiliary
         Rasters.
+    groups : list of Group
+        What the slopes are fitted from.
     slope : ndarray
         [t C/ha per unit]; 0 where a part is not assisted; shape (K, H, p).
+    used, own : ndarray of bool
+        Strata in which slopes serve, and those with slopes of their own; shape (K, H).
     number : ndarray of int
         Slopes fitted to each part; shape (K,).
     inflation, df_share : ndarray
         What the fitted slopes do to variances and degrees of freedom, by stratum; shape (K, H).
-    whole_inflation, whole_df_share : ndarray
-        The same for the inventory; shape (K,).
     measured : ndarray of bool
         Shape (K,).
     why : list of str
@@ -57,16 +97,19 @@ class Lines:
     plot: np.ndarray
     code: np.ndarray
     size: np.ndarray
+    key: np.ndarray
+    alone: bool
     labels: list[str]
     columns: list[str]
     value: np.ndarray
     auxiliary: Auxiliary
+    groups: list[Group]
     slope: np.ndarray
+    used: np.ndarray
+    own: np.ndarray
     number: np.ndarray
     inflation: np.ndarray
     df_share: np.ndarray
-    whole_inflation: np.ndarray
-    whole_df_share: np.ndarray
     measured: np.ndarray
     why: list[str]
 
@@ -75,42 +118,86 @@ class Lines:
         """Parts that have slopes; shape (K,)."""
         return np.asarray(self.number > 0)
 
+    @property
+    def room(self) -> np.ndarray:
+        """Strata with plots enough for slopes of their own, by part; shape (K, H)."""
+        found = np.zeros(self.used.shape, dtype=bool)
+        for group in self.groups:
+            found[group.parts] = group.room & self.auxiliary.serves
+        return found
+
+    @property
+    def seen(self) -> np.ndarray:
+        """Strata with two plots or more, by part; shape (K, H)."""
+        found = np.zeros(self.used.shape, dtype=bool)
+        for group in self.groups:
+            found[group.parts] = group.plots > 0
+        return found
+
     def explained(self) -> np.ndarray:
         """Return what the rasters explain of the difference to the stratum mean; shape (n, K)."""
         found = np.zeros_like(self.value)
-        for raster in range(self.slope.shape[2]):  # few rasters; keeps the working memory at one table
-            found += self.auxiliary.value[:, [raster]] * self.slope[:, self.code, raster].T
+        for raster in np.flatnonzero(self.slope.any(axis=(0, 1))):  # few; keeps the working memory at one table
+            found += self.auxiliary.value[:, [raster]] * self.slope[:, :, raster].T[self.code]
         return found
 
-    def only(self, columns: Sequence[str]) -> Lines:
-        """Leave slopes to these parts alone."""
-        keep = np.isin(np.array(self.columns, dtype=object), list(columns))
+    def only(self, keep: np.ndarray) -> Lines:
+        """Leave slopes to these parts and strata alone; shape (K, H)."""
+        used = self.used & keep
         return replace(
             self,
-            slope=np.where(keep[:, None, None], self.slope, 0.0),
-            number=np.where(keep, self.number, 0),
-            inflation=np.where(keep[:, None], self.inflation, 1.0),
-            df_share=np.where(keep[:, None], self.df_share, 1.0),
-            whole_inflation=np.where(keep, self.whole_inflation, 1.0),
-            whole_df_share=np.where(keep, self.whole_df_share, 1.0),
+            slope=np.where(used[:, :, None], self.slope, 0.0),
+            used=used,
+            own=self.own & used,
+            number=np.where(used.any(axis=1), self.number, 0),
+            inflation=np.where(used, self.inflation, 1.0),
+            df_share=np.where(used, self.df_share, 1.0),
         )
 
+    def beside(self, other: Lines) -> Lines:
+        """Take the slopes of other lines where these have none."""
+        return replace(
+            self,
+            slope=np.where(self.used[:, :, None], self.slope, other.slope),
+            used=self.used | other.used,
+            own=np.where(self.used, self.own, other.own),
+            number=np.maximum(self.number, other.number),
+            inflation=np.where(self.used, self.inflation, other.inflation),
+            df_share=np.where(self.used, self.df_share, other.df_share),
+        )
 
-@dataclass(frozen=True)
-class _Line:
-    """Line of one part; ``slope`` (H, p), ``loss`` and ``share`` (H,), then those of the inventory."""
+    @property
+    def unit_key(self) -> np.ndarray:
+        """Number of the sampling unit and stratum of each plot, the same at all surveys; shape (n,)."""
+        return self.key * len(self.labels) + self.code
 
-    slope: np.ndarray
-    number: int
-    loss: np.ndarray
-    share: np.ndarray
-    whole: tuple[float, float]
-    why: str
+    def contributions(self) -> np.ndarray:
+        """Return what each plot brings into the error of the mean of its stratum (linearised); shape (n, K)."""
+        rest = self.value - self.explained()
+        strata = len(self.labels)
+        there = np.isfinite(rest)
+        if there.all():
+            held = np.bincount(self.code, weights=self.size, minlength=strata)
+            return within_strata(rest, self.code, self.size, strata) * (self.size / held[self.code])[:, None]
+        held = group_sum(there * self.size[:, None], self.code, strata)
+        held = np.where(held > 0, held, 1.0)
+        sized = np.where(there, rest, 0.0) * self.size[:, None]
+        mean = group_sum(sized, self.code, strata) / held
+        return (sized - there * self.size[:, None] * mean[self.code]) / held[self.code]
 
-    @classmethod
-    def none(cls, why: str, strata: int, number: int) -> _Line:
-        """Without slope."""
-        return cls(np.zeros((strata, number)), 0, np.ones(strata), np.ones(strata), (1.0, 1.0), why)
+    def whole(self, area: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Factor of the variance and share of the degrees of freedom of the inventory, by part."""
+        strata = len(self.labels)
+        held = np.bincount(self.code, weights=self.size, minlength=strata)
+        plots = np.bincount(self.code, minlength=strata).astype(float)
+        scale = (area if np.isfinite(area).all() else held) ** 2 * plots / np.maximum(plots - 1.0, 1.0)
+        spread = (group_sum(self.contributions() ** 2, self.code, strata) * scale[:, None]).T
+        total = spread.sum(axis=1, keepdims=True)
+        even = self.used / np.maximum(self.used.sum(axis=1, keepdims=True), 1)
+        weight = np.where(total > 0, spread / np.where(total > 0, total, 1.0), even)
+        none = ~self.used.any(axis=1)
+        inflation, share = (weight * self.inflation).sum(axis=1), (weight * self.df_share).sum(axis=1)
+        return np.where(none, 1.0, inflation), np.where(none, 1.0, share)
 
 
 def slope_loss(free: np.ndarray | float, slopes: np.ndarray | float) -> tuple[np.ndarray, np.ndarray]:
@@ -135,70 +222,103 @@ def slope_loss(free: np.ndarray | float, slopes: np.ndarray | float) -> tuple[np
 
 
 def fit_survey(
-    table: pd.DataFrame,
-    rows: pd.DataFrame,
-    columns: list[str],
-    auxiliary: Auxiliary,
-    area: np.ndarray,
-    *,
-    by_stratum: bool,
+    table: pd.DataFrame, rows: pd.DataFrame, columns: list[str], auxiliary: Auxiliary, area: np.ndarray
 ) -> Lines:
-    """Fit a line to each part.
+    """Fit a line to each part, with slopes that all strata have in common.
 
     Parameters
     ----------
     table : DataFrame
         All plots and surveys.
     rows : DataFrame
-        Plots of the survey: position in ``table``, code of the stratum, size, unit (number of the sampling unit).
+        Plots of the survey: position in ``table``, plot, code of the stratum, size, key (number of the sampling unit).
     columns : list of str
         Parts.
     auxiliary : Auxiliary
         Rasters of the survey.
     area : ndarray
         Of the strata [ha].
-    by_stratum : bool
-        Slopes of each stratum, where it has plots enough.
     """
     position, code = rows["position"].to_numpy(), rows["code"].to_numpy()
     value = table[columns].to_numpy(dtype=float)[position]
-    measured = np.isfinite(value).any(axis=0)
-    made = _fit_parts(value, rows, auxiliary, area, by_stratum=by_stratum)
-    strata, number = auxiliary.centre.shape
-    empty = np.zeros((0, strata, number))
-    return Lines(
+    there = np.isfinite(value)
+    groups = [_gather(value[:, parts], parts, rows, auxiliary, area) for parts in columns_alike(there)]
+    parts, (strata, number) = len(columns), auxiliary.centre.shape
+    nowhere = np.zeros((parts, strata), dtype=bool)
+    bare = Lines(
         position=position,
-        plot=rows["plot"].to_numpy(dtype=object).astype(str),
+        plot=rows["plot"].to_numpy(dtype=object),
         code=code,
         size=rows["size"].to_numpy(dtype=float),
+        key=rows["key"].to_numpy(),
+        alone=len(rows) == int(rows["unit"].max() if len(rows) else -1) + 1,
         labels=auxiliary.strata,
         columns=columns,
         value=value,
         auxiliary=auxiliary,
-        slope=np.stack([one.slope for one in made]) if made else empty,
-        number=np.array([one.number for one in made], dtype=np.int64),
-        inflation=np.array([one.loss for one in made]),
-        df_share=np.array([one.share for one in made]),
-        whole_inflation=np.array([one.whole[0] for one in made]),
-        whole_df_share=np.array([one.whole[1] for one in made]),
-        measured=measured,
-        why=[one.why for one in made],
+        groups=groups,
+        slope=np.zeros((parts, strata, number)),
+        used=nowhere,
+        own=nowhere,
+        number=np.zeros(parts, dtype=np.int64),
+        inflation=np.ones((parts, strata)),
+        df_share=np.ones((parts, strata)),
+        measured=there.any(axis=0),
+        why=[""] * parts,
     )
+    return refit(bare, np.ones((parts, strata), dtype=bool), nowhere)
 
 
-def _fit_parts(
-    value: np.ndarray, rows: pd.DataFrame, auxiliary: Auxiliary, area: np.ndarray, *, by_stratum: bool
-) -> list[_Line]:
-    """Fit all parts, those measured on the same plots together."""
-    made: list[_Line] = []
-    place = np.zeros(value.shape[1], dtype=np.int64)
-    for parts in _alike(np.isfinite(value)):
-        place[parts] = len(made) + np.arange(len(parts))
-        made += _fit_group(value[:, parts], rows, auxiliary, area, by_stratum=by_stratum)
-    return [made[at] for at in place]
+def refit(lines: Lines, common: np.ndarray, own: np.ndarray) -> Lines:
+    """Fit slopes anew.
+
+    Parameters
+    ----------
+    lines : Lines
+        Of the survey.
+    common : ndarray of bool
+        Strata that common slopes are fitted from and serve in; shape (K, H).
+    own : ndarray of bool
+        Strata with slopes of their own, where they have plots enough; shape (K, H).
+
+    Returns
+    -------
+    Lines
+        Other strata have no slope. Where the strata of the common slopes have too few plots for them, neither.
+    """
+    slope, used = np.zeros_like(lines.slope), np.zeros_like(lines.used)
+    number, why = np.zeros_like(lines.number), list(lines.why)
+    loss, share, apart = np.ones(used.shape), np.ones(used.shape), np.zeros_like(used)
+    serves = lines.auxiliary.serves
+    for group in lines.groups:
+        slopes, room = group.back.shape[1], group.room
+        each = _own_slopes(group) if own[group.parts].any() else None
+        for at, part in enumerate(group.parts):  # over parts
+            why[part] = group.why[at]
+            if group.why[at]:
+                continue
+            number[part] = slopes
+            lent = common[part] & serves & (group.plots > 0)
+            free = float(group.plots[lent].sum() - lent.sum())
+            if free >= assist_limits().plots_per_slope * slopes:
+                turned = np.linalg.pinv(group.squares[lent].sum(axis=0), hermitian=True)
+                slope[part][lent] = group.back @ (turned @ group.crossed[lent, :, at].sum(axis=0))
+                loss[part][lent], share[part][lent] = slope_loss(free, slopes)
+                used[part] |= lent
+            if each is not None:
+                mine = own[part] & room & serves
+                slope[part][mine] = each[mine, :, at]
+                loss[part][mine], share[part][mine] = slope_loss(group.plots[mine] - 1.0, slopes)
+                used[part] |= mine
+                apart[part] = mine
+            if not used[part].any():
+                number[part], why[part] = 0, f"{int(free + lent.sum())} plots are too few for common slopes"
+    return replace(
+        lines, slope=slope, used=used, own=apart, number=number, inflation=loss, df_share=share, why=why
+    )  # fmt: skip
 
 
-def _alike(measured: np.ndarray) -> list[np.ndarray]:
+def columns_alike(measured: np.ndarray) -> list[np.ndarray]:
     """Columns that are true on the same rows."""
     groups: dict[bytes, list[int]] = {}
     packed = np.packbits(measured, axis=0)
@@ -207,55 +327,54 @@ def _alike(measured: np.ndarray) -> list[np.ndarray]:
     return [np.array(columns) for columns in groups.values()]
 
 
-def _fit_group(
-    value: np.ndarray, rows: pd.DataFrame, auxiliary: Auxiliary, area: np.ndarray, *, by_stratum: bool
-) -> list[_Line]:
-    """Fit parts on the plots where they were all measured."""
+def _gather(value: np.ndarray, parts: np.ndarray, rows: pd.DataFrame, auxiliary: Auxiliary, area: np.ndarray) -> Group:
+    """Products of rasters and parts on the plots where these parts were all measured."""
     strata, number = auxiliary.centre.shape
-    parts = value.shape[1]
     code, size, unit = (rows[name].to_numpy() for name in ("code", "size", "unit"))
-    measured = np.isfinite(value).all(axis=1)
+    measured = np.isfinite(value[:, 0])  # the parts of a group have the same plots
     plots = _units(code, unit, measured, strata)
     used = measured & (plots >= MIN_PLOTS)[code]
     plots = np.where(plots >= MIN_PLOTS, plots, 0)
     if not number or not used.any():
-        return [_Line.none("no raster serves" if used.any() else "no stratum with two plots", strata, number)] * parts
+        return _no_lines(parts, plots, number, "no raster serves" if used.any() else "no stratum with two plots")
     code, size, y = code[used], size[used].astype(float), value[used]
     held = np.bincount(code, weights=size, minlength=strata)
     known = area if np.isfinite(area).all() else held
-    weight = size * (known / np.where(held > 0, held, 1.0))[code]
-    across = within_strata(auxiliary.value[used], code, size, strata)
+    root = np.sqrt(size * (known / np.where(held > 0, held, 1.0))[code])[:, None]
+    across = within_strata(auxiliary.value[used], code, size, strata) * root
     deviation = within_strata(y, code, size, strata)
-    free, limit = float(plots.sum() - (plots > 0).sum()), assist_limits().plots_per_slope
-    kept = independent_columns(across * np.sqrt(weight)[:, None])
-    kept &= np.cumsum(kept) <= free // limit
-    slopes = int(kept.sum())
-    if not slopes:
+    serving = auxiliary.serves & (plots > 0)
+    free = float(plots[serving].sum() - serving.sum())
+    kept = independent_columns(across)
+    kept &= np.cumsum(kept) <= free // assist_limits().plots_per_slope
+    if not kept.any():
         few = f"{int(plots.sum())} plots are too few, or the rasters are constant on them"
-        return [_Line.none(few, strata, number)] * parts
-    slope = np.zeros((parts, strata, number))
-    slope[:, :, kept] = fit_lines(across[:, kept], deviation, weight).T[:, None]
-    loss, share = (np.full(strata, float(one)) for one in slope_loss(free, slopes))
-    if by_stratum:
-        own = (plots - 1.0) >= limit * slopes
-        slope[np.ix_(np.arange(parts), own, kept)] = _own_slopes(across[:, kept], deviation, weight, code, strata)[
-            :, own
-        ]
-        loss[own], share[own] = slope_loss(plots[own] - 1.0, slopes)
-    serves = auxiliary.serves & (plots > 0)
-    slope = np.where(serves[:, None], slope, 0.0)
-    loss, share = np.where(serves, loss, 1.0), np.where(serves, share, 1.0)
+        return _no_lines(parts, plots, number, few)
+    turned, triangle = np.linalg.qr(across[:, kept])
+    back = np.zeros((number, int(kept.sum())))
+    back[kept] = np.linalg.inv(triangle)
     flat = ~np.any(np.abs(deviation) > np.finfo(float).eps * np.abs(y).max(axis=0), axis=0)
-    lines = []
-    for part in range(parts):
-        if flat[part]:
-            lines.append(_Line.none("the same value on all plots of a stratum", strata, number))
-            continue
-        residual = deviation[:, part] - np.einsum("np,np->n", across, slope[part][code])
-        spread = np.bincount(code, weights=(weight * residual) ** 2, minlength=strata)
-        weighed = spread / spread.sum() if spread.sum() > 0 else np.where(serves, 1.0 / max(serves.sum(), 1), 0.0)
-        lines.append(_Line(slope[part], slopes, loss, share, (float(weighed @ loss), float(weighed @ share)), ""))
-    return lines
+    squares, crossed = _products(turned, deviation * root, code, strata)
+    why = ["the same value on all plots of a stratum" if one else "" for one in flat]
+    return Group(parts, plots, back, squares, crossed, why)
+
+
+def _no_lines(parts: np.ndarray, plots: np.ndarray, number: int, why: str) -> Group:
+    nothing = np.zeros((len(plots), 0, 0))
+    return Group(parts, plots, np.zeros((number, 0)), nothing, nothing, [why] * len(parts))
+
+
+def _products(x: np.ndarray, y: np.ndarray, code: np.ndarray, strata: int) -> tuple[np.ndarray, np.ndarray]:
+    """Products of columns, added up by stratum; shapes (H, q, q) and (H, q, K)."""
+    order = np.argsort(code, kind="stable")
+    ends = np.cumsum(np.bincount(code, minlength=strata))
+    x, y = x[order], y[order]
+    squares = np.zeros((strata, x.shape[1], x.shape[1]))
+    crossed = np.zeros((strata, x.shape[1], y.shape[1]))
+    for one, (first, last) in enumerate(zip(np.append(0, ends[:-1]), ends, strict=True)):  # over strata
+        squares[one] = x[first:last].T @ x[first:last]
+        crossed[one] = x[first:last].T @ y[first:last]
+    return squares, crossed
 
 
 def _units(code: np.ndarray, unit: np.ndarray, used: np.ndarray, strata: int) -> np.ndarray:
@@ -266,121 +385,6 @@ def _units(code: np.ndarray, unit: np.ndarray, used: np.ndarray, strata: int) ->
     return np.bincount(pairs // (int(unit.max()) + 1), minlength=strata)
 
 
-def _own_slopes(
-    across: np.ndarray, deviation: np.ndarray, weight: np.ndarray, code: np.ndarray, strata: int
-) -> np.ndarray:
-    """Slopes of each stratum by its own plots; shape (K, H, p)."""
-    number = across.shape[1]
-    squares = (across[:, :, None] * across[:, None, :] * weight[:, None, None]).reshape(len(across), -1)
-    moments = group_sum(squares, code, strata).reshape(strata, number, number)
-    crossed = (across[:, :, None] * (weight[:, None] * deviation)[:, None, :]).reshape(len(across), -1)
-    crossed = group_sum(crossed, code, strata).reshape(strata, number, -1)
-    return np.asarray(np.einsum("hpq,hqk->khp", np.linalg.pinv(moments, hermitian=True), crossed))
-
-
-def offset_rows(survey: str, lines: Lines) -> pd.DataFrame:
-    """Offsets of one survey, by unit and part."""
-    parts = np.flatnonzero(lines.assisted)
-    if not len(parts):
-        return pd.DataFrame()
-    names = np.array(lines.columns, dtype=object)[parts]
-    there = np.flatnonzero(lines.auxiliary.serves & (np.bincount(lines.code, minlength=len(lines.labels)) > 0))
-    nothing = np.zeros((len(there), len(parts)))
-    blocks = [
-        _offset_block("inventory", [""], nothing[:1] if len(there) else np.zeros((1, len(parts))), names).assign(
-            inflation=lines.whole_inflation[parts], df_share=lines.whole_df_share[parts]
-        ),
-        _offset_block("stratum", [lines.labels[one] for one in there], nothing, names).assign(
-            inflation=lines.inflation[np.ix_(parts, there)].T.ravel(),
-            df_share=lines.df_share[np.ix_(parts, there)].T.ravel(),
-        ),
-    ]
-    table = lines.auxiliary.parcels
-    table = table[table["stratum"].isin(there)]
-    if len(table):
-        unit, units = pd.factorize(table["unit"])
-        code = table["stratum"].to_numpy()
-        shift = table[[f"shift.{name}" for name in lines.auxiliary.rasters]].to_numpy(dtype=float)
-        each = np.einsum("rp,krp->rk", shift, lines.slope[parts][:, code])
-        each = each * table["share"].to_numpy(dtype=float)[:, None]
-        worst = np.zeros((len(units), len(parts)))
-        least = np.ones((len(units), len(parts)))
-        np.maximum.at(worst, unit, lines.inflation[np.ix_(parts, code)].T)
-        np.minimum.at(least, unit, lines.df_share[np.ix_(parts, code)].T)
-        block = _offset_block("parcel", list(units), group_sum(each, unit, len(units)), names)
-        blocks.append(block.assign(inflation=worst.ravel(), df_share=least.ravel()))
-    return pd.concat(blocks, ignore_index=True).assign(survey=survey)
-
-
-def _offset_block(by: str, units: list[str], offset: np.ndarray, names: np.ndarray) -> pd.DataFrame:
-    return pd.DataFrame(
-        {
-            "by": by,
-            "unit": np.repeat(np.array(units, dtype=object), len(names)),
-            "part": np.tile(names, len(units)),
-            "offset": offset.ravel(),
-        }
-    )
-
-
-def model_rows(survey: str, lines: Lines, sums: Mapping[str, Sequence[str]]) -> pd.DataFrame:
-    """Lines of parts and of their sums, by stratum, a row per term."""
-    named = {name: [name] for name in lines.columns} | {pool: list(names) for pool, names in sums.items()}
-    member = np.array([[name in names for name in lines.columns] for names in named.values()]) & lines.measured
-    labels = np.array(list(named), dtype=object)[member.any(axis=1)]
-    member = member[member.any(axis=1)]
-    if not len(member):
-        return pd.DataFrame()
-    measured = np.isfinite(lines.value)
-    value = np.where(measured, lines.value, 0.0) @ member.T
-    rest = value - lines.explained() @ member.T
-    there = (measured @ member.T.astype(float)) == member.sum(axis=1)
-    blocks: list[pd.DataFrame] = []
-    for chosen in _alike(there):
-        blocks += _model_blocks(
-            labels[chosen], member[chosen], value[:, chosen], rest[:, chosen], lines, there[:, chosen[0]]
-        )
-    order = {name: at for at, name in enumerate(named)}
-    blocks.sort(key=lambda block: order[str(block["of"].iloc[0])])
-    made = pd.concat(blocks, ignore_index=True)
-    sources = dict(zip(lines.auxiliary.rasters, lines.auxiliary.sources, strict=True))
-    return made.assign(survey=survey, source=[sources.get(term, survey) for term in made["term"]])
-
-
-def _model_blocks(
-    labels: np.ndarray, member: np.ndarray, value: np.ndarray, rest: np.ndarray, lines: Lines, used: np.ndarray
-) -> list[pd.DataFrame]:
-    """Lines of sums that were measured on the same plots."""
-    if not used.any():
-        return []
-    strata, columns = len(lines.labels), len(labels)
-    code, size = lines.code[used], lines.size[used]
-    apart = within_strata(np.concatenate([value[used], rest[used]], axis=1), code, size, strata)
-    squares = size @ apart**2
-    whole, left = squares[:columns], squares[columns:]
-    plots = np.bincount(code, minlength=strata)
-    there = np.flatnonzero(plots)
-    held = np.bincount(code, weights=size, minlength=strata)
-    level = group_sum(rest[used] * size[:, None], code, strata)[there] / held[there][:, None]
-    centre = lines.auxiliary.centre[there]
-    terms = np.array(["intercept", *lines.auxiliary.rasters], dtype=object)
-    blocks = []
-    for at in range(columns):
-        slope = lines.slope[member[at]].sum(axis=0)[there]
-        base = level[:, at] - (np.nan_to_num(centre) * slope).sum(axis=1)
-        free = used.sum() - len(there) - lines.number[member[at]].max(initial=0)
-        blocks.append(
-            pd.DataFrame(
-                {
-                    "of": labels[at],
-                    "stratum": np.repeat(np.array(lines.labels, dtype=object)[there], len(terms)),
-                    "term": np.tile(terms, len(there)),
-                    "coefficient": np.column_stack([base, slope]).ravel(),
-                    "centre": np.column_stack([np.full(len(there), np.nan), centre]).ravel(),
-                    "r2": 1.0 - left[at] / whole[at] if whole[at] > 0 else np.nan,
-                    "n": np.repeat(plots[there], len(terms)),
-                    "se_residual": np.sqrt(left[at] / size.mean() / free) if free > 0 else np.nan,
-                }
-            )
-        )
-    return blocks
+def _own_slopes(group: Group) -> np.ndarray:
+    """Slopes of each stratum by its own plots; shape (H, p, K)."""
+    return np.asarray(group.back @ (np.linalg.pinv(group.squares, hermitian=True) @ group.crossed))

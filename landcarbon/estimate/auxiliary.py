@@ -97,14 +97,18 @@ def auxiliaries(
     """
     variables = given.variables(list(plots))
     found, made, usable = [], {}, np.ones(len(variables), dtype=bool)
+    whys: dict[tuple[str, str], list[str]] = {}
     for survey, rows in plots.items():
         made[survey], about = _of_survey(given, variables, survey, rows, limits)
-        fit, why = _usable(made[survey], rows, survey)
+        fit, why = _usable(made[survey], rows)
         usable &= fit
-        found += [about, why, _lent(given, variables, survey)]
+        for one in why:
+            whys.setdefault(one, []).append(survey)
+        found += [about, _lent(given, variables, survey)]
+    found += [_left(*one, [] if len(at) == len(plots) else at) for one, at in whys.items()]
     room = min((int(_free(rows) // limits.plots_per_slope) for rows in plots.values() if len(rows)), default=0)
     kept = np.flatnonzero(usable)
-    found += [_left("too few plots for raster", variables[at].label, "") for at in kept[room:]]
+    found += [_left("too few plots for raster", variables[at].label, []) for at in kept[room:]]
     kept = kept[:room]
     return {survey: one.keep(kept) for survey, one in made.items()}, join_findings(found)
 
@@ -260,7 +264,7 @@ def _parcel_shifts(given: Given, variables: list[Variable], centre: np.ndarray) 
     return joined.drop(columns="area_ha").assign(share=share)
 
 
-def _usable(auxiliary: Auxiliary, plots: pd.DataFrame, survey: str) -> tuple[np.ndarray, pd.DataFrame]:
+def _usable(auxiliary: Auxiliary, plots: pd.DataFrame) -> tuple[np.ndarray, list[tuple[str, str]]]:
     """Variables that tell plots of a stratum apart, each something that those before do not."""
     code, size = plots["code"].to_numpy(), plots["size"].to_numpy(dtype=float)
     strata = len(auxiliary.centre)
@@ -273,9 +277,9 @@ def _usable(auxiliary: Auxiliary, plots: pd.DataFrame, survey: str) -> tuple[np.
     own = independent_columns(spread[:, standing] / length[standing])
     usable = np.zeros(len(flat), dtype=bool)
     usable[standing[own]] = True
-    found = [_left("raster constant on plots", auxiliary.rasters[at], survey) for at in np.flatnonzero(flat & some)]
-    found += [_left("raster redundant", auxiliary.rasters[at], survey) for at in standing[~own]]
-    return usable, join_findings(found)
+    why = [("raster constant on plots", auxiliary.rasters[at]) for at in np.flatnonzero(flat & some)]
+    why += [("raster redundant", auxiliary.rasters[at]) for at in standing[~own]]
+    return usable, why
 
 
 _WHY = {
@@ -285,14 +289,15 @@ _WHY = {
 }
 
 
-def _left(rule: str, raster: str, survey: str) -> pd.DataFrame:
-    where = f" at {survey}" if survey else ""
+def _left(rule: str, raster: str, surveys: list[str]) -> pd.DataFrame:
+    """Report a raster that is left out; once, with the surveys at fault unless it is all of them."""
+    where = f" at {name_list(surveys)}" if surveys else ""
     return make_findings(
         rule,
         severity="warning",
         table="estimate",
         column=raster,
-        survey=survey,
+        survey=surveys[0] if len(surveys) == 1 else "",
         message=f"Raster {raster} {_WHY[rule]}{where}; the estimates do without it.",
         remedy="Leave it out, or name the more useful raster first.",
     )

@@ -10,6 +10,7 @@ import pandas as pd
 from landcarbon.estimate.best_change import BestChange, best_change
 from landcarbon.estimate.change_notes import BEST, best_methods, no_best_change
 from landcarbon.estimate.difference import Difference, difference_of_ratios
+from landcarbon.estimate.moved_plots import find_moved, moved_variance
 from landcarbon.estimate.ratio import Sample
 from landcarbon.estimate.systematic import say_neighbours
 from landcarbon.estimate.tables import Units
@@ -17,7 +18,7 @@ from landcarbon.estimate.two_phase import first_phase_area_se, say_two_phase, wi
 from landcarbon.estimate.visit_times import late_samples, rate_variance
 from landcarbon.findings import empty_findings
 
-__all__ = ["ChangeLevel", "designed", "with_best", "with_own_dates", "without_noise"]
+__all__ = ["ChangeLevel", "designed", "with_best", "with_moved_plots", "with_own_dates", "without_noise"]
 
 _ROUNDING = 1e-12  # a standard error below this share of the largest density is rounding noise
 
@@ -28,7 +29,8 @@ class ChangeLevel:
 
     ``area_ha``, ``method``, ``rate`` [t C/ha/d] and ``rate_variance`` have shape (D, S), as what ``change`` holds;
     ``scale`` says what each column counts in each sum, shape (S, D, K), and ``own`` which domains rest on plots of
-    their own alone. ``area_se`` [ha] has shape (D,), None where areas are known.
+    their own alone. ``area_se`` [ha] has shape (D,), None where areas are known; ``moved`` says
+    which domains hold plots that changed their stratum or domain, None if none does.
     """
 
     by: str
@@ -42,6 +44,7 @@ class ChangeLevel:
     scale: np.ndarray
     own: np.ndarray
     area_se: np.ndarray | None = None
+    moved: np.ndarray | None = None
 
 
 def with_own_dates(
@@ -79,6 +82,43 @@ def with_own_dates(
     return replace(level, rate_variance=np.where(there, variance, level.rate_variance))
 
 
+def with_moved_plots(
+    level: ChangeLevel, samples: tuple[Sample, Sample], units: Units, allowed: np.ndarray
+) -> ChangeLevel:
+    """Take plots as one unit that changed their stratum or domain between the dates.
+
+    Parameters
+    ----------
+    level : ChangeLevel
+        Change of one level, in which such plots count as two.
+    samples : tuple of Sample
+        Earlier and later survey.
+    units : Units
+        Strata and parcels.
+    allowed : ndarray of bool
+        Strata that count, by column.
+
+    Notes
+    -----
+    See :func:`landcarbon.estimate.moved_plots.moved_variance`. Plots in clusters are left as they are.
+    """
+    found = find_moved(samples, level.domains)
+    if not len(found.first) or not level.labels or samples[0].unit is not None:
+        return level
+    moved = found.domains(level.domains, len(level.labels))
+    variance, df = moved_variance(samples, level.domains, units.stratum_area_ha, allowed, level.scale)
+    change = level.change
+    hit = moved[:, None] & np.isfinite(change.variance) & level.own[:, None]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        grown = np.where(hit & (change.variance > 0), variance / change.variance, 1.0)
+    change = replace(
+        change,
+        variance=np.where(hit, variance, change.variance),
+        df=np.where(hit, df, change.df),
+    )
+    return replace(level, change=change, rate_variance=level.rate_variance * grown, moved=moved)
+
+
 def with_best(
     levels: list[ChangeLevel],
     samples: tuple[Sample, Sample],
@@ -88,8 +128,10 @@ def with_best(
 ) -> tuple[list[ChangeLevel], pd.DataFrame]:
     """Put best combinations in place of differences where there are plots enough for them."""
     made, whole = [], None
+    moved = any(level.moved is not None for level in levels if level.by == "inventory")
+    moved |= any(level.moved is not None for level in levels if level.by == "stratum")
     for level in levels:
-        if not level.labels:
+        if not level.labels or (moved and level.by != "parcel"):
             made.append(level)
             continue
         best = best_change(
@@ -109,6 +151,7 @@ def with_best(
 
 def _put(level: ChangeLevel, best: BestChange, surveys: tuple[str, str]) -> ChangeLevel:
     used = best.used & np.isfinite(level.change.density) & level.own[:, None]
+    used = used if level.moved is None else used & ~level.moved[:, None]
     if not used.any():
         return level
     best = replace(best, used=used)

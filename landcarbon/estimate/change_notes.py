@@ -10,11 +10,20 @@ import pandas as pd
 from landcarbon.estimate.best_change import BestChange
 from landcarbon.estimate.difference import Difference
 from landcarbon.estimate.notes import name_list
-from landcarbon.estimate.ratio import MIN_PLOTS
+from landcarbon.estimate.ratio import MIN_PLOTS, Sample
 from landcarbon.estimate.replacement import OTHERS, REPEATED
 from landcarbon.findings import empty_findings, join_findings, make_findings
 
-__all__ = ["BEST", "DIFFERENCE", "best_methods", "change_methods", "missing_dates", "no_best_change", "single_pairs"]
+__all__ = [
+    "BEST",
+    "DIFFERENCE",
+    "best_methods",
+    "change_methods",
+    "missing_dates",
+    "moved_plots",
+    "no_best_change",
+    "single_pairs",
+]
 
 DIFFERENCE = "difference of ratio means"
 BEST = "best combination"
@@ -115,4 +124,28 @@ def single_pairs(labels: Sequence[str], change: Difference, since: str, until: s
             "are taken as independent there, which usually overstates the standard error."
         ),
         remedy="Revisit more of the earlier plots.",
+    )
+
+
+def moved_plots(samples: tuple[Sample, Sample], names: pd.Series, surveys: tuple[str, str]) -> pd.DataFrame:
+    """Report plots that changed their stratum; ``names`` are those of the plots of the later sample."""
+    one, two = samples
+    _, first, second = np.intersect1d(one.plot, two.plot, assume_unique=True, return_indices=True)
+    which = second[one.stratum[first] != two.stratum[second]]
+    if not len(which):
+        return empty_findings()
+    told = name_list([str(name) for name in names.iloc[which]])
+    return make_findings(
+        "plot changed its stratum",
+        severity="warning",
+        table="change",
+        column="stratum",
+        value=str(len(which)),
+        survey=surveys[1],
+        message=(
+            f"{len(which)} of {len(first)} plots measured in both {surveys[0]} and {surveys[1]} lie in another stratum "
+            f"at the later one: {told}. Change of a stratum then mixes growth with what moved in and out, on areas "
+            "that are taken as the same at both dates; standard errors hold that these plots moved."
+        ),
+        remedy="Read the change of the inventory, or state it for land that stayed in its stratum.",
     )

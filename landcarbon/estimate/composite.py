@@ -19,7 +19,7 @@ from landcarbon.estimate.composite_detail import Detail, detail_of, join_details
 from landcarbon.estimate.composite_plots import Evidence, Places, plot_evidence
 from landcarbon.estimate.composite_text import REPLACED_RULES, composite_findings, composite_methods
 from landcarbon.estimate.groups import label_codes
-from landcarbon.estimate.interval import check_confidence, check_kind, limits, t_half_width
+from landcarbon.estimate.interval import check_confidence, check_kind, df_of_interval, limits, t_half_width
 from landcarbon.estimate.tables import ALL
 from landcarbon.findings import join_findings
 
@@ -246,7 +246,7 @@ def _published(
         df = block.take(table["df"], block.group)
         plots = block.take(table["plots"].astype(float), block.group)
     else:
-        df = _df_of_interval(block, table, confidence or 0.0)
+        df = _df_of_change(block, table, confidence or 0.0)
         plots = np.minimum(*(block.take(table[f"plots_{at}"].astype(float), block.group) for at in ("since", "until")))
     return Published(
         density=block.take(density, block.parcel),
@@ -260,14 +260,9 @@ def _published(
     )
 
 
-def _df_of_interval(block: _Block, table: pd.DataFrame, confidence: float) -> np.ndarray:
-    """Degrees of freedom that the published half width of a change has been made with."""
-    from scipy.special import stdtridf  # heavy; the package must import without it
-
+def _df_of_change(block: _Block, table: pd.DataFrame, confidence: float) -> np.ndarray:
     half = block.take(table["change_high"] - table["change_t_c"], block.group)
-    se = block.take(table["change_se"], block.group)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.asarray(stdtridf(0.5 + 0.5 * confidence, half / se))
+    return df_of_interval(half, block.take(table["change_se"], block.group), confidence)
 
 
 def _change_density(change: pd.DataFrame) -> tuple[pd.Series, pd.Series]:

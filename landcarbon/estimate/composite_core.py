@@ -148,6 +148,7 @@ def compose(
             df=evidence.df[:, pool],
             plots=evidence.plots[:, pool],
             between=np.where(evidence.between[:, pool] > 0, evidence.between[:, pool], np.nan),
+            scale=_scale_of_groups(evidence.scale[:, pool], group),
             group=group,
             area_ha=places.area_ha,
             level=published.level[:, pool],
@@ -260,6 +261,15 @@ def _direct(
     correction = np.where(np.isfinite(correction) & (correction > 1.0), correction, 1.0)
     smoothed, scale = smooth_variance(own, np.maximum(plots - 1.0, 0.0), evidence.variance, correction)
     return direct, own, np.where(smoothed > 0, smoothed, np.nan), scale
+
+
+def _scale_of_groups(scale: np.ndarray, group: np.ndarray) -> np.ndarray:
+    """Scale of the group of each parcel, root mean square over its parcels; 1 where none is known."""
+    known = np.isfinite(scale) & (scale > 0)
+    number = np.bincount(group, weights=known)
+    total = np.bincount(group, weights=np.where(known, scale, 0.0) ** 2)
+    mean = np.sqrt(np.divide(total, number, out=np.ones_like(total), where=number > 0))
+    return np.asarray(mean[group])
 
 
 def _flat(published: Published, evidence: Evidence, smoothed: np.ndarray) -> np.ndarray:

@@ -20,8 +20,9 @@ from landcarbon.estimate.small_area import (
 )
 from landcarbon.estimate.smoothing import rule
 
-__all__ = ["Direct", "Fitted", "Pool", "compose_pool"]
+__all__ = ["Direct", "Fitted", "Pool", "compose_pool", "fit_to_scale"]
 
+_ALIKE = 1e-3  # scale of groups that do not differ at all, so that they do not tell how much others do
 _LEAST = 1e-9  # a smoothed variance below this share of the typical one is raised to it
 
 
@@ -39,6 +40,9 @@ class Direct:
         Plots of each parcel; shape (P,).
     between : ndarray
         Variance between single plots of the parcel's stratum; shape (P,).
+    scale : ndarray
+        What differences between parcels of a group are proportional to, above 0 and the same for all parcels of a
+        group; in any unit; shape (P,).
     group : ndarray of int
         Group of each parcel; shape (P,).
     area_ha : ndarray
@@ -56,6 +60,7 @@ class Direct:
     df: np.ndarray
     plots: np.ndarray
     between: np.ndarray
+    scale: np.ndarray
     group: np.ndarray
     area_ha: np.ndarray
     level: np.ndarray
@@ -79,6 +84,8 @@ class Fitted:
         Parcels it predicts, those of ``rows`` first where it predicts them.
     design : ndarray
         Covariates of ``served``.
+    refvar : ndarray
+        Variance between parcels of the groups of ``served``.
     columns : list of str
         Names of the coefficients.
     bound : bool
@@ -91,6 +98,7 @@ class Fitted:
     rows: np.ndarray
     served: np.ndarray
     design: np.ndarray
+    refvar: np.ndarray
     columns: list[str]
     bound: bool
     dropped: list[str] = field(default_factory=list)
@@ -201,13 +209,69 @@ def _fitted(given: Direct, has: np.ndarray, serve: np.ndarray, names: list[str])
         design, columns = wide[:, kept], [(columns + names)[at] for at in kept]
     y, psi = given.density[rows], given.variance[rows]
     few = len(rows) - design.shape[1] < rule("residual_df")
+    refvar = given.between[served]
     if few:
         fit = fit_with_variance(y, psi, design[rows], given.between[rows])
     else:
-        fit = fit_fay_herriot(y, psi, design[rows])
-        if fit.refvar[0] <= 0:
-            fit = fit_fay_herriot(y, psi, design[rows], method="adjusted REML")
-    return Fitted(fit, rows, served, design[served], columns, few, dropped)
+        scale = np.where(_alike(given, rows), _ALIKE, 1.0) * given.scale
+        scale = scale / np.sqrt((scale[rows] ** 2).mean())
+        fit = fit_to_scale(y, psi, design[rows], scale[rows], len(groups))
+        refvar = fit.refvar[0] * (scale[served] / scale[rows[0]]) ** 2
+    return Fitted(fit, rows, served, design[served], refvar, columns, few, dropped)
+
+
+def _alike(given: Direct, rows: np.ndarray) -> np.ndarray:
+    """Parcels of groups in which all direct figures are the same, as on bare land, if such parcels are many."""
+    groups = len(given.level)
+    number = np.bincount(given.group[rows], minlength=groups)
+    high, low = np.full(groups, -np.inf), np.full(groups, np.inf)
+    np.maximum.at(high, given.group[rows], given.density[rows])
+    np.minimum.at(low, given.group[rows], given.density[rows])
+    alike = (number >= rule("residual_df")) & (high - low <= _LEAST * np.abs(high))
+    return np.asarray(alike[given.group])
+
+
+def fit_to_scale(
+    direct: np.ndarray, variance: np.ndarray, design: np.ndarray, scale: np.ndarray, groups: int
+) -> FayHerriot:
+    """Fit the model with a variance A scale^2 of each area, by REML, or adjusted REML where that gives zero.
+
+    Parameters
+    ----------
+    direct, variance, design
+        As for :func:`fit_fay_herriot`; the leading columns of ``design`` are groups.
+    scale : ndarray
+        Above 0, the same for all areas of a group; shape (m,).
+    groups : int
+        Number of groups.
+
+    Returns
+    -------
+    FayHerriot
+        In the unit of ``direct``; ``refvar`` is A scale^2, ``refvar_variance`` is that of A.
+
+    Notes
+    -----
+    direct / scale has sampling variance variance / scale^2, covariates design / scale and one variance A, so that the
+    plain model holds for it. Columns of groups are left at 1; their coefficients take the scale instead.
+    """
+    relative = np.column_stack([design[:, :groups], design[:, groups:] / scale[:, None]])
+    fit = fit_fay_herriot(direct / scale, variance / scale**2, relative)
+    if fit.refvar[0] <= 0:
+        fit = fit_fay_herriot(direct / scale, variance / scale**2, relative, method="adjusted REML")
+    factor = np.ones(design.shape[1])
+    factor[:groups] = scale[design[:, :groups].argmax(axis=0)]
+    return replace(
+        fit,
+        refvar=fit.refvar * scale**2,
+        beta=fit.beta * factor,
+        beta_cov=fit.beta_cov * np.outer(factor, factor),
+        synthetic=fit.synthetic * scale,
+        eblup=fit.eblup * scale,
+        mse=fit.mse * scale**2,
+        design=design,
+        total=fit.total * scale**2,
+    )
 
 
 def _predicted(given: Direct, has: np.ndarray, models: list[Fitted], by_model: np.ndarray) -> Pool:
@@ -219,7 +283,7 @@ def _predicted(given: Direct, has: np.ndarray, models: list[Fitted], by_model: n
     for number, model in enumerate(models):
         fit, mine = model.fit, by_model[model.served] == number
         served = model.served[mine]
-        own = given.between[served] if model.bound else fit.refvar[0]
+        own = model.refvar[mine]
         synthetic[served], mse[served] = predict_areas(fit, model.design[mine], own)
         value[served], refvar[served] = synthetic[served], own
         if not model.bound:

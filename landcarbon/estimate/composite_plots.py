@@ -59,6 +59,8 @@ class Evidence:
         Sampling variance of ``density`` that the variance between plots makes likely; NaN without plots; shape (P, J).
     between : ndarray
         Variance between single plots of the parcel's stratum; shape (P, J).
+    scale : ndarray
+        Standard deviation between single plots that the variance function gives for the parcel's stratum; shape (P, J).
     df : ndarray
         Degrees of freedom of ``variance``; shape (P, J).
     correlation : ndarray
@@ -80,6 +82,7 @@ class Evidence:
     whole: np.ndarray
     variance: np.ndarray
     between: np.ndarray
+    scale: np.ndarray
     df: np.ndarray
     correlation: np.ndarray
     lacking: np.ndarray
@@ -241,15 +244,17 @@ def _layers(tables: list[_Table], strata: int) -> list[Layer]:
     same = (one.parcel[first] == two.parcel[second]) & (one.stratum[first] == two.stratum[second])
     first, second = first[same], second[same]
     both = one.used[first] & two.used[second]
+    change = np.where(both, two.value[second] - one.value[first], 0.0)
     repeated = Layer(
         parcel=one.parcel[first],
         stratum=one.stratum[first],
         strata=strata,
-        value=np.where(both, two.value[second] - one.value[first], 0.0),
+        value=change,
         used=both,
         size=np.where(both, 0.5 * (one.size[first] + two.size[second]), 0.0),
         share=np.where(both, two.share[second], 0.0),
-        level=np.where(both, 0.5 * (np.abs(one.value[first]) + np.abs(two.value[second])), 0.0),
+        # strata of one density may grow, or be felled, very differently
+        level=np.abs(change),
     )
     early, late = one.share.copy(), two.share.copy()
     # w2 y2 - w1 y1 = w2 (y2 - y1) + (w2 - w1) y1 on repeated units
@@ -288,7 +293,8 @@ def _evidence(
         plots=np.where(np.isfinite(fewest), fewest, 0).astype(np.int64),
         whole=np.stack([(number >= MIN_PLOTS)[:, row].all(axis=1) & row.any() for row in member], axis=1),
         variance=np.where(some, variance, np.nan),
-        between=_of_pools(main, member)[here],
+        between=_of_pools(main, main.total, member)[here],
+        scale=np.sqrt(_of_pools(main, main.function, member))[here],
         df=wide[0][here][:, largest],
         correlation=unit_variance(layers[at].summed(member)).correlation,
         lacking=lacking,
@@ -308,12 +314,13 @@ def _units(layers: list[Layer]) -> list[UnitVariance]:
     both, one, two = units
     variance = np.where(np.isfinite(both.variance), both.variance, one.variance + two.variance)
     total = np.where(np.isfinite(both.total), both.total, one.total + two.total)
-    return [replace(both, variance=variance, total=total), one, two]
+    function = np.where(np.isfinite(both.function), both.function, one.function + two.function)
+    return [replace(both, variance=variance, total=total, function=function), one, two]
 
 
-def _of_pools(unit: UnitVariance, member: np.ndarray) -> np.ndarray:
-    """Variance between single plots of a stratum, of pools; shape (H + 1, J)."""
-    deviation = np.sqrt(unit.total)
+def _of_pools(unit: UnitVariance, variance: np.ndarray, member: np.ndarray) -> np.ndarray:
+    """Variance between single plots of a stratum, from that of parts to that of pools; shape (H + 1, J)."""
+    deviation = np.sqrt(variance)
     found = np.zeros((len(deviation), len(member)))
     for pool, row in enumerate(member):
         inner = unit.correlation[np.ix_(row, row)]

@@ -18,6 +18,7 @@ __all__ = [
     "check_confidence",
     "check_kind",
     "check_side",
+    "df_of_interval",
     "limits",
     "log_limits",
     "satterthwaite",
@@ -107,6 +108,28 @@ def t_half_width(se: np.ndarray, df: np.ndarray, confidence: float) -> np.ndarra
         Same unit as ``se``; NaN where either is NaN.
     """
     return se * t_quantile(df, 0.5 + 0.5 * confidence)
+
+
+def df_of_interval(half: np.ndarray, se: np.ndarray, confidence: float) -> np.ndarray:
+    """Degrees of freedom that the half width of an interval by Student's t has been made with.
+
+    Parameters
+    ----------
+    half, se : ndarray
+        Half widths and standard errors.
+    confidence : float
+        Of the two-sided interval.
+
+    Returns
+    -------
+    ndarray
+        Infinite where the standard error is zero, as any number gives that interval; NaN where either is missing.
+    """
+    from scipy.special import stdtridf  # heavy; the package must import without it
+
+    with np.errstate(divide="ignore", invalid="ignore"):
+        found = np.asarray(stdtridf(0.5 + 0.5 * confidence, half / se), dtype=float)
+    return np.where(se == 0, np.inf, found)
 
 
 def t_quantile(df: ArrayLike, probability: float) -> np.ndarray:

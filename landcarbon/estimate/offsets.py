@@ -234,17 +234,14 @@ def _texts(table: pd.DataFrame, report: pd.DataFrame, dates: list[str]) -> pd.Se
     later = dates[-1]
     keys = ["survey", "pool", "stratum"]
     told = report.assign(**{key: report[key].astype("str") for key in keys}).set_index(keys)
-    rasters, gain = told["rasters"], told["relative_efficiency"]
-    whole = pd.MultiIndex.from_arrays(
-        [table[later].astype("str"), table["pool"].astype("str"), np.full(len(table), "")]
-    )
-    names = rasters[~rasters.index.duplicated()].reindex(whole).fillna("").to_numpy(dtype=object)
+    told = told[~told.index.duplicated()]
+    stratum = table["unit"].astype("str").where(table["by"] == "stratum", "")
+    own = pd.MultiIndex.from_arrays([table[later].astype("str"), table["pool"].astype("str"), stratum])
+    names = told["rasters"].reindex(own).fillna("").to_numpy(dtype=object)
     text = pd.Series(", model-assisted by " + names, index=table.index)
     if len(dates) > 1:
         return text
-    stratum = table["unit"].astype("str").where(table["by"] == "stratum", "")
-    own = pd.MultiIndex.from_arrays([table[later].astype("str"), table["pool"].astype("str"), stratum])
-    value = gain[~gain.index.duplicated()].reindex(own).to_numpy(dtype=float)
+    value = told["relative_efficiency"].reindex(own).to_numpy(dtype=float)
     stated = np.isfinite(value) & (table["by"] != "parcel").to_numpy()
     ratio = np.full(len(table), "", dtype=object)
     ratio[stated] = [f" (relative efficiency {one:.1f})" for one in value[stated]]

@@ -29,12 +29,7 @@ class Weighted:
 
 
 def overlap_table(
-    sides: tuple[Side, ...],
-    domains: tuple[np.ndarray, ...],
-    cells: Cells,
-    tellers: tuple[Side, ...] | None = None,
-    *,
-    moved: bool = False,
+    sides: tuple[Side, ...], domains: tuple[np.ndarray, ...], cells: Cells, tellers: tuple[Side, ...] | None = None
 ) -> Overlap:
     """Put the deviations of several estimates side by side.
 
@@ -48,48 +43,31 @@ def overlap_table(
         Cells of the domains, of all samples.
     tellers : tuple of Side, optional
         Sides of the same samples, whose plots tell how much the plots of an estimate vary; else its own.
-    moved : bool
-        Keep plots that changed their stratum together. They were drawn in the first; those of later surveys are then
-        domains of it.
     """
     tellers = tellers or sides
     strata, count = max(cells.strata, 1), cells.domains + 1
-    keys = [_units(side.sample) * (1 if moved else strata) + (0 if moved else side.sample.stratum) for side in sides]
+    keys = [_units(side.sample) * strata + side.sample.stratum for side in sides]
     distinct = np.unique(np.concatenate(keys))
     units = [np.searchsorted(distinct, key) for key in keys]
-    here = np.full((len(distinct), len(sides)), -1)  # stratum by estimate
-    for place, (side, row) in enumerate(zip(sides, units, strict=True)):
-        here[row, place] = side.sample.stratum
-    stratum = here[np.arange(len(here)), np.argmax(here >= 0, axis=1)]
     split = [unit * count + domain + 1 for unit, domain in zip(units, domains, strict=True)]
     both = np.unique(np.concatenate([key[domain >= 0] for key, domain in zip(split, domains, strict=True)]))
-    unit, domain_of = both // count, both % count - 1
-    made = Cells.of(cells.domains, cells.strata, (domain_of, stratum[unit])) if moved else cells
+    unit = both // count
     shape = (len(sides), sides[0].sample.value.shape[1])
     size, value = np.zeros((len(distinct), shape[0])), np.zeros((len(both), *shape))
     used, tells = (np.zeros((len(distinct), *shape), dtype=bool) for _ in range(2))
-    beside = np.zeros((len(made.domain), *shape))
-    same, known = _lookup(cells, made.domain, made.stratum)
+    beside = np.zeros((len(cells.domain), *shape))
+    cell = cells.find(both % count - 1, distinct[unit] % strata)
     for place, (side, teller, row, key) in enumerate(zip(sides, tellers, units, split, strict=True)):
         size[:, place] = np.bincount(row, weights=side.sample.size, minlength=len(distinct))
         used[:, place] = group_sum(side.counted, row, len(distinct)) > 0
         tells[:, place] = group_sum(teller.counted, row, len(distinct)) > 0
-        inside, at = teller.mean.rows, teller.mean.cell
+        inside = teller.mean.rows
         weight, slope = np.nan_to_num(side.mean.weight), np.nan_to_num(teller.spread.slope)
-        apart = np.where(teller.counted[inside], np.nan_to_num(teller.spread.inside), 0.0)
-        value[:, place] = group_sum(weight[at] * apart, np.searchsorted(both, key[inside]), len(both))
-        cell, there = _lookup(cells, domain_of, here[unit, place])
-        lost = np.where(there[:, None], (weight * slope)[cell], 0.0)
-        value[:, place] -= lost * size[unit, place][:, None] * tells[unit, place]
-        beside[:, place] = np.where(known[:, None], (weight * slope)[same], 0.0)
-    return Overlap(stratum, size, used, tells, unit, made.find(domain_of, stratum[unit]), value, beside, made)
-
-
-def _lookup(cells: Cells, domain: np.ndarray, stratum: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Find cells, and whether they are there."""
-    keys, sought = cells.domain * cells.strata + cells.stratum, domain * cells.strata + stratum
-    cell = np.minimum(np.searchsorted(keys, sought), max(len(keys) - 1, 0))
-    return cell, (stratum >= 0) & ((keys[cell] == sought) if len(keys) else np.zeros(len(sought), dtype=bool))
+        here = np.where(teller.counted[inside], np.nan_to_num(teller.spread.inside), 0.0)
+        beside[:, place] = weight * slope
+        value[:, place] = weight[cell] * group_sum(here, np.searchsorted(both, key[inside]), len(both))
+        value[:, place] -= beside[cell, place] * size[unit, place][:, None] * tells[unit, place]
+    return Overlap(distinct % strata, size, used, tells, unit, cell, value, beside, cells)
 
 
 def _units(sample: Sample) -> np.ndarray:
@@ -97,13 +75,7 @@ def _units(sample: Sample) -> np.ndarray:
 
 
 def survey_table(
-    samples: tuple[Sample, ...],
-    domains: tuple[np.ndarray, ...],
-    number: int,
-    area_ha: np.ndarray,
-    allowed: np.ndarray,
-    *,
-    moved: bool = False,
+    samples: tuple[Sample, ...], domains: tuple[np.ndarray, ...], number: int, area_ha: np.ndarray, allowed: np.ndarray
 ) -> tuple[Overlap, np.ndarray]:
     """Means of several surveys, and what each plot brings into them.
 
@@ -119,8 +91,6 @@ def survey_table(
         Area of each stratum [ha].
     allowed : ndarray of bool
         Strata that take part, by column, shape (H, K), or by survey too, (T, H, K).
-    moved : bool
-        As for :func:`overlap_table`.
 
     Returns
     -------
@@ -132,7 +102,7 @@ def survey_table(
     cells = Cells.of(number, strata, *((d, s.stratum) for d, s in zip(domains, samples, strict=True)))
     every = np.broadcast_to(allowed, (len(samples), *allowed.shape[-2:]))
     sides = tuple(side_of(s, d, cells, area_ha, a) for s, d, a in zip(samples, domains, every, strict=True))
-    return overlap_table(sides, domains, cells, moved=moved), np.stack([side.mean.density for side in sides], axis=1)
+    return overlap_table(sides, domains, cells), np.stack([side.mean.density for side in sides], axis=1)
 
 
 def covariance(table: Overlap, scale: np.ndarray) -> np.ndarray:

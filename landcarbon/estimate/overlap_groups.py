@@ -104,6 +104,7 @@ class Columns:
 
     @classmethod
     def of(cls, table: Overlap, held: np.ndarray) -> Columns:
+        """Take the columns that a sum holds."""
         number, same = table.used.shape[1], alike(table)
         chosen = held[:1] if same else held
         wide = (len(table.stratum), number * len(chosen))

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from landcarbon.estimate.interval import limits
+from landcarbon.estimate.interval import df_of_interval, limits
 
 __all__ = ["with_interval"]
 
@@ -18,7 +18,7 @@ def with_interval(table: pd.DataFrame, *, confidence: float, kind: str, lower: f
     Parameters
     ----------
     table : DataFrame
-        Stocks or change as estimated, with standard errors and df.
+        Stocks with standard errors and df, or change with standard errors and intervals.
     confidence : float
         Of the two-sided intervals.
     kind : str
@@ -34,7 +34,7 @@ def with_interval(table: pd.DataFrame, *, confidence: float, kind: str, lower: f
     """
     if table.empty or (kind == "t" and lower is None):
         return table
-    return _stocks(table, confidence, kind, lower) if "stock_t_c" in table else _change(table, lower)
+    return _stocks(table, confidence, kind, lower) if "stock_t_c" in table else _change(table, confidence, lower)
 
 
 def _stocks(table: pd.DataFrame, confidence: float, kind: str, lower: float | None) -> pd.DataFrame:
@@ -54,8 +54,9 @@ def _stocks(table: pd.DataFrame, confidence: float, kind: str, lower: float | No
     return table.assign(**made)
 
 
-def _change(table: pd.DataFrame, lower: float | None) -> pd.DataFrame:
+def _change(table: pd.DataFrame, confidence: float, lower: float | None) -> pd.DataFrame:
     if lower is None:
         return table
-    change, se, df = (table[name].to_numpy(dtype=float) for name in ("change_t_c", "change_se", "df"))
+    change, se, high = (table[name].to_numpy(dtype=float) for name in ("change_t_c", "change_se", "change_high"))
+    df = df_of_interval(high - change, se, confidence)
     return table.assign(change_at_least=limits(change, se, df, confidence=lower, side="lower").low)

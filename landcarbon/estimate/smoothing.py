@@ -61,7 +61,7 @@ class Layer:
     share : ndarray
         Weight of the plot in the mean of its parcel.
     level : ndarray
-        Density that the variance between plots is a function of [t C/ha].
+        What the variance between plots is a function of: density, or size of the change [t C/ha].
     """
 
     parcel: np.ndarray
@@ -112,6 +112,8 @@ class UnitVariance:
         Whether plots were compared within parcels; else about the mean of their stratum; shape (K,).
     power : ndarray
         Power of the mean in the variance function; shape (K,).
+    function : ndarray
+        What the variance function gives for each stratum, its own plots or not; shape (H + 1, K).
     """
 
     variance: np.ndarray
@@ -120,6 +122,7 @@ class UnitVariance:
     correlation: np.ndarray
     within: np.ndarray
     power: np.ndarray
+    function: np.ndarray
 
 
 def unit_variance(layer: Layer) -> UnitVariance:
@@ -129,8 +132,8 @@ def unit_variance(layer: Layer) -> UnitVariance:
     -----
     Sums of squares are pooled within parcels (and strata), so that differences between parcels do not count; if too few
     plots share a parcel, or none differ within it, about the mean of the stratum. The variance function is
-    log v = a + b log m, m the mean of the stratum, by gamma quasi-likelihood with 0 <= b <= the greatest power; b = 0
-    if strata are few. The variance of a stratum and the function are averaged by degrees of freedom.
+    log v = a + b log m, m the mean of the stratum, by gamma quasi-likelihood with 0 <= b <= the greatest power, b drawn
+    to an expected power. The variance of a stratum and the function are averaged by degrees of freedom.
     """
     strata = layer.strata
     cell = (layer.parcel + 1) * strata + layer.stratum
@@ -151,12 +154,13 @@ def unit_variance(layer: Layer) -> UnitVariance:
     trusted = np.minimum(free + rule("stratum_variance_df"), free.sum(axis=0))
     apart = np.where(within, deviation, deviation_total)
     return UnitVariance(
-        variance=np.concatenate([variance, variance.max(axis=0, keepdims=True)]),
-        total=np.concatenate([total, total.max(axis=0, keepdims=True)]),
+        variance=_with_largest(variance),
+        total=_with_largest(total),
         df=np.concatenate([trusted, trusted.min(axis=0, keepdims=True)]),
         correlation=_correlation(layer, apart, variance, free.sum(axis=0)),
         within=within,
         power=power,
+        function=_with_largest(function),
     )
 
 
@@ -169,7 +173,7 @@ def correlations(layer: Layer) -> np.ndarray:
 
 
 def power_of_mean(squares: np.ndarray, df: np.ndarray, level: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Fit a variance function log v = a + b log m by gamma quasi-likelihood, one for each column.
+    """Fit a variance function log v = a + b log m by penalised gamma quasi-likelihood, one for each column.
 
     Parameters
     ----------
@@ -183,12 +187,18 @@ def power_of_mean(squares: np.ndarray, df: np.ndarray, level: np.ndarray) -> tup
     variance : ndarray
         Of the function, by stratum and column; shape (H, K).
     power : ndarray
-        b; 0 if strata with a variance are fewer than the rule asks for; shape (K,).
+        b; the expected power if no more than one stratum has a variance, or all have the same mean; shape (K,).
+
+    Notes
+    -----
+    The penalty is that of a normal prior on b about the expected power. Strata of the same mean have the same variance
+    whatever b is. Strata whose plots are all alike have no part in the fit.
     """
     positive = np.where(level > 0, level, np.inf)
     least = positive.min(axis=0, initial=np.inf)
     log_level = np.log(np.where(level > 0, level, np.where(np.isfinite(least), least, 1.0)))
-    enough = (df > 0).sum(axis=0) >= rule("variance_function_strata")
+    # plots that are all alike (bare land) do not tell how variance goes with the mean
+    df = np.where((squares > 0) | ~(squares > 0).any(axis=0), df, 0.0)
     tried = np.linspace(0.0, rule("greatest_power"), _POWERS)[:, None, None]
     log_shape = tried * (log_level - log_level.max(axis=0, initial=-np.inf))
     total = df.sum(axis=0)
@@ -196,8 +206,8 @@ def power_of_mean(squares: np.ndarray, df: np.ndarray, level: np.ndarray) -> tup
         base = (squares / np.exp(log_shape)).sum(axis=1) / total
         # minus twice the quasi-likelihood, with a at its best: sum df (log v_function) + sum df
         loss = total * np.log(base) + (df * log_shape).sum(axis=1)
-    loss = np.where(np.isfinite(loss), loss, np.inf)
-    best = np.where(enough, loss.argmin(axis=0), 0)
+    penalty = ((tried[:, 0] - rule("expected_power")) / rule("expected_power_sd")) ** 2
+    best = (np.where(np.isfinite(loss), loss, 0.0) + penalty).argmin(axis=0)
     column = np.arange(df.shape[1])
     shape = np.exp(log_shape[best, :, column].T)
     scale = np.where(total > 0, base[best, column], np.nan)
@@ -295,10 +305,26 @@ def _deviations(layer: Layer, code: np.ndarray, groups: int) -> tuple[np.ndarray
 
 
 def _levels(layer: Layer) -> np.ndarray:
-    """Mean level of each stratum and column; 0 without plots."""
+    """Mean level of each stratum and column, drawn to that of all by a plot's worth; 0 without plots.
+
+    Plots without anything say that the level is low, not how low: a further plot might be like those of the lowest
+    stratum.
+    """
     number = group_sum(layer.used, layer.stratum, layer.strata)
     total = group_sum(np.where(layer.used, np.abs(layer.level), 0.0), layer.stratum, layer.strata)
-    return np.divide(total, number, out=np.zeros_like(total), where=number > 0)
+    own = np.divide(total, number, out=np.zeros_like(total), where=number > 0)
+    lowest = np.where(own > 0, own, np.inf).min(axis=0, initial=np.inf)
+    own = np.where((own <= 0) & (number > 0), np.where(np.isfinite(lowest), lowest, 0.0) / (number + 1.0), own)
+    whole = total.sum(axis=0) / np.maximum(number.sum(axis=0), 1.0)
+    trust = rule("level_plots")
+    with np.errstate(divide="ignore"):
+        drawn = own * (whole / np.where(own > 0, own, 1.0)) ** (trust / (number + trust))
+    return np.where(own > 0, drawn, 0.0)
+
+
+def _with_largest(values: np.ndarray) -> np.ndarray:
+    """Add a last row with the largest of each column."""
+    return np.concatenate([values, values.max(axis=0, keepdims=True)])
 
 
 def _correlation(layer: Layer, deviation: np.ndarray, variance: np.ndarray, df: np.ndarray) -> np.ndarray:

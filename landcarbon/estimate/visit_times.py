@@ -5,8 +5,11 @@ Symbols are those of ``docs/estimation.md``.
 
 from __future__ import annotations
 
+import tomllib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import cache
+from importlib import resources
 
 import numpy as np
 import pandas as pd
@@ -39,8 +42,22 @@ _SECONDS_PER_DAY = 86400.0
 
 
 def dates_vary(samples: Sequence[Sample]) -> bool:
-    """Whether some survey has visits on different dates."""
-    return any(np.ptp(day[np.isfinite(day)]) > 0 for day in (s.day for s in samples) if np.isfinite(day).any())
+    """Whether the visits of a survey are spread so far that elapsed times differ between plots.
+
+    The limit is in ``visit_times.toml``; below it, elapsed time is as good as exact.
+    """
+    known = [day[np.isfinite(day)] for day in (sample.day for sample in samples)]
+    if not all(len(day) for day in known):
+        return False
+    spread = np.sqrt(sum(float(np.var(day)) for day in known))
+    span = abs(float(np.mean(known[-1])) - float(np.mean(known[0])))
+    return bool(spread > _least_spread() * span)
+
+
+@cache
+def _least_spread() -> float:
+    text = resources.files("landcarbon.estimate").joinpath("visit_times.toml").read_text(encoding="utf-8")
+    return float(tomllib.loads(text)["spread"]["value"])
 
 
 def mean_days(sample: Sample, domain: np.ndarray, cells: Cells, area_ha: np.ndarray, allowed: np.ndarray) -> np.ndarray:

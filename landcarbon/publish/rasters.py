@@ -120,7 +120,7 @@ def raster_grid(request: RasterRequest) -> Grid:
     if grid.cells > raster_limit("cells_most"):
         raise SettingsError(
             f"maps of {grid.rows} x {grid.columns} cells would be too large",
-            where="[rasters] cell_m",
+            where="[estimation] map_cell_m",
             remedy=f"State cells larger than {grid.cell_x:g} m.",
         )
     return grid

@@ -87,8 +87,11 @@ def _composed(rows: pd.DataFrame) -> Table:
     """Show the arithmetic of a composite figure: weight x own + (1 - weight) x model + adjustment."""
     title = "Composed per pool: weight x own plots + (1 - weight) x model of the stratum + adjustment to its total"
     names = ["plots", "own plots", "weight", "model", "adjustment", "t C/ha", "SE"]
-    table = table_of(title, [("pool", "left"), *((name, "right") for name in names)])
     columns = ["direct", "weight_direct", "synthetic", "adjustment", "density", "density_se"]
+    if "raster_shift" in rows and rows["raster_shift"].fillna(0.0).ne(0.0).any():
+        names.insert(2, "of it by raster")
+        columns.insert(1, "raster_shift")
+    table = table_of(title, [("pool", "left"), *((name, "right") for name in names)])
     for row in rows.itertuples(index=False):
         cells = [figure(number_of(row, name), _DECIMALS) for name in columns]
         table.add_row(plain_text(str(row.pool).replace("_", " ")), figure(number_of(row, "plots"), 0), *cells)

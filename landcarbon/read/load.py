@@ -162,7 +162,8 @@ def _area_method(strata: pd.DataFrame, parcels: ParcelTable | None) -> str:
     if parcels is not None and parcels.dated:
         parts.append("of parcels within the boundaries in force at each survey")
     if (strata["area_source"] == "stated").any():
-        parts.append("of strata as stated by the user")
+        by_points = "first_phase" in strata
+        parts.append("of strata by points of a first phase" if by_points else "of strata as stated by the user")
     if (strata["area_source"] == "unknown").any():
         unknown = strata.loc[strata["area_source"] == "unknown", "stratum"]
         parts.append(f"not known for {len(unknown)} of {len(strata)} strata")

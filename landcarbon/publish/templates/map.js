@@ -117,12 +117,13 @@ function drawCarbonMap(place, data) {
   map.createPane("plots").style.zIndex = 450;
   map.createPane("names").style.zIndex = 460;
   map.getPane("names").style.pointerEvents = "none";
-  let shown = pool.layers[0];
+  // The map opens on what stands there now: the density at the latest survey.
+  let shown = pool.layers.filter((layer) => layer.kind === "density").pop() || pool.layers[0];
 
   function parcelStyle(feature) {
     const i = feature.properties.i, value = shade(shown, i), open = spansZero(shown, i), model = fromModel(shown, i);
-    return {fill: true, fillOpacity: (data.tiles ? 0.8 : 1) * (model ? 0.55 : 1), fillColor: known(value) ? colour(shown, value) : HATCH,
-      color: "#2b332f", weight: open ? 2 : 1, dashArray: open ? "5 4" : null, opacity: 0.9};
+    return {fill: true, fillOpacity: data.tiles ? 0.8 : 1, fillColor: known(value) ? colour(shown, value) : HATCH,
+      color: "#2b332f", weight: open || model ? 2 : 1, dashArray: model ? "1 5" : open ? "5 4" : null, opacity: 0.9};
   }
   const parcels = L.geoJSON(data.shapes, {
     style: parcelStyle,
@@ -248,7 +249,7 @@ function drawCarbonMap(place, data) {
   function parcelKeys() {
     const all = data.parcels.map((_, i) => i), keys = [];
     if (all.some((i) => spansZero(shown, i))) keys.push(key(swatch({fill: "none", "stroke-dasharray": "4 3", "stroke-width": 2}), data.interval + " includes zero"));
-    if (all.some((i) => fromModel(shown, i))) keys.push(key(swatch({fill: shown.colours[Math.floor(shown.colours.length / 2)], "fill-opacity": 0.55}), "paler: no plots, level of the stratum"));
+    if (all.some((i) => fromModel(shown, i))) keys.push(key(swatch({fill: "none", "stroke-dasharray": "1 4", "stroke-width": 2}), "no plots: level of the stratum"));
     if (all.some((i) => !known(shade(shown, i)))) keys.push(key(swatch({fill: HATCH}), "not estimable"));
     return keys;
   }
