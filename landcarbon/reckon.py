@@ -140,7 +140,7 @@ def reckon_change(
         )[0])  # fmt: skip
         change = add_change_offsets(change, plan.assisted, plan.sums, confidence=plan.confidence, plain=plain)
     detail = None
-    if plan.settings.estimation.parcels == "composite" and parcels is not None and len(change):
+    if plan.composite and parcels is not None and len(change):
         at = table[table["survey"].isin([since, until])]
         change, detail, told = composite_change(change, parcels, at, plan.sums, **_composing(plan))
         found = _with_replaced(found, told)
@@ -209,7 +209,7 @@ def _compose_stocks(
     plan: Plan, stocks: pd.DataFrame, found: pd.DataFrame
 ) -> tuple[pd.DataFrame, Detail | None, pd.DataFrame]:
     """Composite figures of the parcels in place of direct ones."""
-    if plan.settings.estimation.parcels != "composite" or plan.parcels is None:
+    if not plan.composite or plan.parcels is None:
         return stocks, None, found
     options = _composing(plan)
     if not plan.moving:
@@ -252,7 +252,7 @@ def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
         return pd.DataFrame(), empty_findings()
     pools = [pool for pool in plan.sums if pool != "all"]
     # Own plots alone would stand beside composite change and contradict it.
-    parcels = plan.parcels if plan.settings.estimation.parcels == "direct" else None
+    parcels = None if plan.composite else plan.parcels
     return estimate_trend(
         table,
         plan.inputs.strata,

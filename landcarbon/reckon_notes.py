@@ -9,7 +9,13 @@ import pandas as pd
 from landcarbon.estimate.common_area import CommonArea
 from landcarbon.findings import empty_findings, make_findings
 
-__all__ = ["many_replaced", "rasters_with_moving_boundaries", "reckoning_marks", "units_without_change"]
+__all__ = [
+    "direct_because_of_clusters",
+    "many_replaced",
+    "rasters_with_moving_boundaries",
+    "reckoning_marks",
+    "units_without_change",
+]
 
 _FEW = 3  # plots given up and new ones, from which a hint is worth while
 
@@ -23,6 +29,18 @@ def rasters_with_moving_boundaries() -> pd.DataFrame:
         message="Rasters and classes of known area assist only where boundaries stay the same; these estimates rest on "
         "the plots alone.",
         remedy="Leave out valid_from and valid_to, or the rasters.",
+    )
+
+
+def direct_because_of_clusters() -> pd.DataFrame:
+    """Say that parcels are stated from their own plots alone where plots stand in clusters."""
+    return make_findings(
+        "parcels from own plots",
+        severity="note",
+        table="estimate",
+        message="Plots stand in clusters: parcels are stated from their own plots alone, as composite figures would "
+        "take plots of one cluster for independent ones. They do not sum to their strata.",
+        remedy="Nothing if the clusters are right; few plots make wide intervals.",
     )
 
 

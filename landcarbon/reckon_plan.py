@@ -14,7 +14,7 @@ from landcarbon.estimate.common_area import place_by_survey
 from landcarbon.estimate.visit_times import common_dates, to_common_date
 from landcarbon.findings import empty_findings, join_findings
 from landcarbon.read.rasters import RasterPlace
-from landcarbon.reckon_notes import rasters_with_moving_boundaries
+from landcarbon.reckon_notes import direct_because_of_clusters, rasters_with_moving_boundaries
 
 if TYPE_CHECKING:
     import geopandas as gpd
@@ -100,7 +100,13 @@ class Plan:
     @property
     def composite(self) -> bool:
         """Whether parcels have composite figures."""
-        return self.settings.estimation.parcels == "composite" and self.inputs.parcels is not None
+        wanted = self.settings.estimation.parcels == "composite" and self.inputs.parcels is not None
+        return wanted and not self.clustered
+
+    @property
+    def clustered(self) -> bool:
+        """Whether plots stand in clusters; the plots of a cluster are alike, which composite figures do not know."""
+        return "cluster" in self.plot_parts and bool(self.plot_parts["cluster"].fillna("").ne("").any())
 
     @property
     def confidence(self) -> float:
@@ -153,6 +159,8 @@ def make_plan(
         plot_parts, moved = to_common_date(plot_parts, dates)
         found.append(moved)
     plan = Plan(inputs, settings, plot_parts, sums, None, auxiliary, empty_findings(), dates)
+    if plan.clustered and settings.estimation.parcels == "composite" and inputs.parcels is not None:
+        found.append(direct_because_of_clusters())
     if auxiliary is not None or classes is not None:
         if plan.moving:
             found.append(rasters_with_moving_boundaries())

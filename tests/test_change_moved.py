@@ -160,7 +160,7 @@ def test_standard_errors_over_many_samples(strata: float, parcels: float) -> Non
     land = moving(1, plots=8000, strata=strata, parcels=parcels, size=False)
     one, two = (land[land["survey"] == name].reset_index(drop=True) for name in ("t1", "t2"))
     share = [(rows["stratum"] == "a").mean() for rows in (one, two)]
-    made, repeats = [], 250
+    made, repeats = [], 120
     for _ in range(repeats):
         drawn = rng.choice(8000, 60, replace=False)
         areas = strata_table({"a": 100 * np.mean(share), "b": 100 * (1 - np.mean(share))})

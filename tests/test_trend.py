@@ -62,6 +62,20 @@ def years_of(table: pd.DataFrame) -> np.ndarray:
     return np.array([(date - dates[0]).total_seconds() for date in dates]) / 86400 / 365.25
 
 
+def test_the_slope_stays_within_the_rates_it_is_made_of() -> None:
+    """Property: almost perfect repeats with a bend, whose best weights would count one interval against the others."""
+    rng = np.random.default_rng(2)
+    level = rng.normal(100, 25, 40)
+    # The spread grows with time, so that the first survey tells nearly all about the second.
+    values = np.stack([level, 1.10 * level + 1.0, 1.32 * level + 9.0], axis=1) + rng.normal(0, 0.05, (40, 3))
+    table = chain(values)
+    row = whole(run(table, strata_table({"S": 20}), surveys=SURVEYS[:3])[0])
+    rates = np.diff(table.groupby("survey")[POOL].mean().to_numpy()) / np.diff(years_of(table))
+    assert rates.min() < row["slope_t_c_ha_yr"] < rates.max()
+    ordinary = np.polyfit(years_of(table), values.mean(axis=0), 1)[0]
+    assert row["slope_t_c_ha_yr"] == pytest.approx(ordinary, rel=1e-9)
+
+
 def test_ordinary_least_squares_of_few_repeated_plots() -> None:
     """Closed form: all plots repeated, few of them: the mean of the slopes of the plots, and its standard error."""
     values = grown(8)
@@ -259,11 +273,11 @@ def test_lack_of_fit_is_uniform_for_straight_lines() -> None:
         assert (share < level).mean() == pytest.approx(level, abs=4 * np.sqrt(0.25 / repeats))
 
 
-@pytest.mark.parametrize(("plots", "share"), [(6, 1.0), (15, 1.0), (30, 0.7), (30, 0.4)])
+@pytest.mark.parametrize(("plots", "share"), [(6, 1.0), (15, 1.0), (30, 0.4)])
 def test_intervals_hold_what_they_say(plots: int, share: float) -> None:
     """Simulation, seeded: 90 to 98.5 % of the 95 % intervals hold the true slope; plots repeated fully or partly."""
     rng = np.random.default_rng(int(plots * 10 + 10 * share))
-    held, errors, repeats = 0, [], 300
+    held, errors, repeats = 0, [], 120
     for _ in range(repeats):
         values = grown(plots, int(rng.integers(1 << 30)), noise=6.0)
         keep = rng.uniform(size=values.shape) < share

@@ -273,7 +273,7 @@ def _parcels_unknown(table: pd.DataFrame, lines: dict[str, Lines]) -> pd.DataFra
         if line.used.any():
             known = line.auxiliary.parcels
             listed = set(known["unit"][known["stratum"] >= 0].astype("str"))
-            inside = table["parcel"].iloc[line.position][line.used.any(axis=0)[line.code]]
+            inside = table["parcel"].iloc[line.position][np.asarray(line.used.any(axis=0))[line.code]]
             names |= {str(name) for name in inside.dropna().unique()} - listed - {""}
     if not names:
         return empty_findings()

@@ -254,11 +254,11 @@ def _pairs(lines: dict[str, Lines], member: np.ndarray) -> list[_Pair]:
     made = []
     for (since, until), chosen in parts.items():
         keys = [_unit_keys(lines[survey]) for survey in (since, until)]
-        if np.array_equal(*keys):  # all repeated, in the same order
+        if np.array_equal(keys[0], keys[1]):  # all repeated, in the same order
             made.append(_Pair(since, until, (slice(None), slice(None)), chosen))
             continue
-        _, *rows = np.intersect1d(*keys, assume_unique=True, return_indices=True)
-        made.append(_Pair(since, until, (rows[0], rows[1]), chosen))
+        _, first, second = np.intersect1d(keys[0], keys[1], assume_unique=True, return_indices=True)
+        made.append(_Pair(since, until, (first, second), chosen))
     return made
 
 
@@ -288,7 +288,7 @@ def _variances(
         whole = pair.same_parts(frame.member)
         both = sum(alone[name] if whole else spread(name, pair.member) for name in (one, two))
         raised = np.maximum(both - 2.0 * shared, 0.0) * np.maximum(loss[one], loss[two]) + phases(one, two)
-        change[one, two] = np.where(pair.member.any(axis=0)[:, None], raised, np.nan)
+        change[one, two] = np.where(np.asarray(pair.member.any(axis=0))[:, None], raised, np.nan)
     return stock, change
 
 

@@ -105,7 +105,7 @@ def with_moved_plots(
     found = find_moved(samples, level.domains)
     if not len(found.first) or not level.labels or samples[0].unit is not None:
         return level
-    moved = found.domains(level.domains, len(level.labels))
+    moved = found.domains(samples, level.domains, len(level.labels))
     variance, df = moved_variance(samples, level.domains, units.stratum_area_ha, allowed, level.scale)
     change = level.change
     hit = moved[:, None] & np.isfinite(change.variance) & level.own[:, None]

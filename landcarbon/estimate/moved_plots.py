@@ -27,11 +27,14 @@ class Moved:
     second: np.ndarray
     strata: np.ndarray
 
-    def domains(self, domains: tuple[np.ndarray, np.ndarray], number: int) -> np.ndarray:
-        """Whether a domain holds such plots at either date."""
+    def domains(
+        self, samples: tuple[Sample, Sample], domains: tuple[np.ndarray, np.ndarray], number: int
+    ) -> np.ndarray:
+        """Whether a domain lies in a stratum that holds such plots at either date: they count there as plots beside."""
+        touched = [sample.stratum[rows] for sample, rows in zip(samples, (self.first, self.second), strict=True)]
         marks = np.zeros(number + 1, dtype=bool)  # the last place takes plots outside all domains
-        for domain, rows in zip(domains, (self.first, self.second), strict=True):
-            marks[domain[rows]] = True
+        for sample, domain in zip(samples, domains, strict=True):
+            marks[domain[np.isin(sample.stratum, np.concatenate(touched))]] = True
         return marks[:-1]
 
 

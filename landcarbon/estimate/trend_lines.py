@@ -21,6 +21,7 @@ from landcarbon.estimate.visit_times import mean_days, timed
 __all__ = ["FEWEST", "Line", "TrendPlan", "line_weights", "misfit", "plan_trend", "trend_lines"]
 
 FEWEST = 3  # surveys that a trend needs
+_ROUNDING = 1e-9
 _ROOM = 6.0  # degrees of freedom for each estimated weight below which ordinary least squares serves
 
 
@@ -179,6 +180,8 @@ def plan_trend(samples: tuple[Sample, ...], sums: Sums, area_ha: np.ndarray) -> 
     -----
     One covariance matrix of the survey means of the whole serves all units: a single stratum or parcel has too few
     plots to tell its own. The weights are right for any matrix; the standard errors come from the plots of the unit.
+    Where plots repeat almost perfectly, generalised least squares can give an interval between surveys a negative
+    weight, and the slope then lies outside all the rates it is made of; ordinary least squares serves there.
     """
     strata, member = len(area_ha), sums.member
     units = np.stack([unit_counts(sample, strata) for sample in samples])
@@ -202,9 +205,23 @@ def plan_trend(samples: tuple[Sample, ...], sums: Sums, area_ha: np.ndarray) -> 
         df = counted.min(axis=1, initial=np.inf).mean()
         if df < _ROOM * estimated:
             continue
-        matrix[mine] = covariance(table, held.astype(float)[None])[0]
+        found = covariance(table, held.astype(float)[None])[0]
+        if not _within_range(found, samples, pattern):
+            continue
+        matrix[mine] = found
         factor[mine], general[mine] = small_sample_factor(np.array(df), np.array(estimated)), True
     return TrendPlan(samples, sums, area_ha, surveys, units, allowed, matrix, factor, general)
+
+
+def _within_range(found: np.ndarray, samples: tuple[Sample, ...], pattern: np.ndarray) -> bool:
+    """Whether the slope is a mean of the rates between surveys, none of which counts against the others."""
+    days = [sample.day[np.isfinite(sample.day)] for sample in samples]
+    if not all(len(day) for day, there in zip(days, pattern, strict=True) if there):
+        return True
+    years = np.array([float(day.mean()) if len(day) else 0.0 for day in days]) / DAYS_PER_YEAR
+    weights = line_weights(years[None], pattern[None], found)[0][pattern]
+    of_intervals = -np.cumsum(weights)[:-1] * np.diff(years[pattern])
+    return bool(np.isfinite(of_intervals).all() and (of_intervals >= -_ROUNDING).all())
 
 
 def trend_lines(plan: TrendPlan, domains: tuple[np.ndarray, ...], number: int, *, parts: bool = False) -> Line:

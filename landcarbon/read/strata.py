@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from landcarbon.errors import InputFileError
+from landcarbon.errors import InputFileError, SettingsError
 from landcarbon.inventory.models import Settings
 from landcarbon.inventory.units import convert
 from landcarbon.read.limits import limit
@@ -112,6 +112,7 @@ def make_strata(
     source = np.where(said.notna(), "stated", np.where(drawn.notna(), "polygons", "unknown"))
     frame["area_source"] = pd.Series(source, dtype="str")
     if first_phase is not None:
+        _check_first_phase(frame["stratum"], of_plots, first_phase)
         frame["first_phase"] = frame["stratum"].map(first_phase).astype("float64")
     off = (said / drawn - 1).abs() > limit("area", "stated_difference")
     words = pd.DataFrame({"stated": said[off].map("{:.4f}".format), "measured": drawn[off].map("{:.4f}".format)})
@@ -121,6 +122,30 @@ def make_strata(
         note("stratum area unknown", unknown, value=unknown["stratum"].to_numpy(dtype=object)),
     ]
     return frame, findings
+
+
+def _check_first_phase(strata: pd.Series, of_plots: set[str], first_phase: pd.Series) -> None:
+    """Refuse strata that the first phase does not tell the area of.
+
+    Raises
+    ------
+    SettingsError
+        If a stratum is not listed, or has plots and no point.
+    """
+    unlisted = sorted(set(strata) - set(first_phase.index))
+    if unlisted:
+        raise SettingsError(
+            f"the first phase does not name stratum {', '.join(unlisted)}",
+            where="[strata] first_phase",
+            remedy="Give the points found in every stratum; 0 where there was none.",
+        )
+    empty = sorted(of_plots & set(first_phase.index[first_phase <= 0]))
+    if empty:
+        raise SettingsError(
+            f"stratum {', '.join(empty)} has plots and no point of the first phase, so its area would be zero",
+            where="[strata] first_phase",
+            remedy="Check the points, or fold the stratum into another with merge.",
+        )
 
 
 def read_species(settings: Settings, codes: Sequence[str], log: FileLog) -> tuple[pd.DataFrame, list[pd.DataFrame]]:
