@@ -22,7 +22,7 @@ from landcarbon.estimate.common_area import (
     tables_at,
 )
 from landcarbon.estimate.composite import REPLACED_RULES, Detail, composite_change, composite_parcels
-from landcarbon.estimate.offsets import add_change_offsets, add_offsets
+from landcarbon.estimate.offsets import add_change_offsets, add_offsets, raise_trend
 from landcarbon.estimate.report import with_interval
 from landcarbon.estimate.trend import estimate_trend
 from landcarbon.findings import empty_findings, join_findings
@@ -245,7 +245,8 @@ def _final(plan: Plan, table: pd.DataFrame) -> pd.DataFrame:
 
 def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Trend lines, where three surveys have plots and boundaries stay."""
-    table = plan.plot_parts
+    # Adjusted by rasters, strata and the inventory need no offset; parcels would.
+    table = plan.used_parts if plan.composite else plan.plot_parts
     seen = set(table.loc[table["inside"].to_numpy(dtype=bool), "survey"].astype("str"))
     surveys = [name for name in plan.surveys if name in seen]
     if len(surveys) < 3 or plan.moving:
@@ -253,7 +254,7 @@ def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
     pools = [pool for pool in plan.sums if pool != "all"]
     # Own plots alone would stand beside composite change and contradict it.
     parcels = None if plan.composite else plan.parcels
-    return estimate_trend(
+    trend, found = estimate_trend(
         table,
         plan.inputs.strata,
         parcels,
@@ -263,6 +264,12 @@ def _trend(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
         confidence=plan.confidence,
         inventory_name=plan.settings.inventory.name,
     )
+    if plan.assisted is not None:
+        if plan.composite:
+            trend = raise_trend(trend, plan.assisted.offsets)
+        else:
+            trend = trend.assign(method=trend["method"] + "; plots alone, without rasters")
+    return trend, found
 
 
 def _detail_tables(plan: Plan, detail: Detail | None, of: str) -> dict[str, pd.DataFrame]:

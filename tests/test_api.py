@@ -8,6 +8,7 @@ import pytest
 
 import landcarbon
 from landcarbon.demo import copy_demo
+from landcarbon.errors import UserError
 
 
 @pytest.fixture(scope="module")

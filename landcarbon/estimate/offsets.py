@@ -11,7 +11,7 @@ from landcarbon.constants import CARBON_TO_CO2
 from landcarbon.estimate.assist import Assisted
 from landcarbon.estimate.interval import limits
 
-__all__ = ["add_change_offsets", "add_offsets"]
+__all__ = ["add_change_offsets", "add_offsets", "raise_trend"]
 
 _KEYS = ["by", "unit"]
 
@@ -146,6 +146,41 @@ def add_change_offsets(
     changed = {name: change[name].where(~hit, values) for name, values in new.items()}
     made = change.assign(**changed, method=change["method"].where(~hit, text).astype("str"))
     return _plain_parcels(made, hit, plain, [*_KEYS, *dates, "pool"])
+
+
+def raise_trend(trend: pd.DataFrame, offsets: pd.DataFrame) -> pd.DataFrame:
+    """Raise the errors of trend lines through adjusted values for the fitted slopes, and name the rasters' part.
+
+    Parameters
+    ----------
+    trend : DataFrame
+        Trend of the inventory and its strata, estimated from ``Assisted.plot_parts``.
+    offsets : DataFrame
+        ``Assisted.offsets``.
+
+    Returns
+    -------
+    DataFrame
+        Standard errors and intervals widened by the largest raise among the surveys and parts of the unit.
+    """
+    if trend.empty or offsets.empty:
+        return trend
+    named = offsets.assign(unit=offsets["unit"].where(offsets["by"] != "inventory", ""))  # there is only one
+    most = named.groupby(["by", "unit"])["inflation"].max()
+    units = trend["unit"].astype("str").where(trend["by"] != "inventory", "")
+    found = most.reindex(pd.MultiIndex.from_arrays([trend["by"].astype("str"), units]))
+    factor = np.sqrt(found.fillna(1.0).to_numpy(dtype=float))
+    pools = set(offsets["part"].str.split(".").str[0]) | {"all"}
+    there = found.notna().to_numpy() & trend["pool"].isin(pools).to_numpy() & trend["slope_t_c_yr"].notna().to_numpy()
+    factor = np.where(there, factor, 1.0)
+    slope = trend["slope_t_c_yr"]
+    return trend.assign(
+        slope_se=trend["slope_se"] * factor,
+        slope_low=slope - (slope - trend["slope_low"]) * factor,
+        slope_high=slope + (trend["slope_high"] - slope) * factor,
+        slope_t_c_ha_yr_se=trend["slope_t_c_ha_yr_se"] * factor,
+        method=trend["method"].where(~there, trend["method"] + "; model-assisted by rasters"),
+    )
 
 
 def _of_points(table: pd.DataFrame, assisted: Assisted, dates: list[str]) -> np.ndarray:

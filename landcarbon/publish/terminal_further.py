@@ -85,10 +85,11 @@ def _area_effect(effects: pd.DataFrame, by: str) -> Table:
 def _worth(worth: pd.DataFrame, by: str) -> Table:
     names = [("survey", "left"), ("pool", "left")] if by == "inventory" else [("stratum", "left"), ("survey", "left")]
     columns = [*names, ("rasters", "left"), ("plots", "right"), ("worth", "right"), ("used", "left"), ("why", "left")]
-    title = "Rasters: variance without them over that with them (2 is worth twice the plots)"
+    title = "Rasters at the latest survey: variance without them over that with them (2 is worth twice the plots)"
     table = table_of(title, columns)
     whole = worth["stratum"].fillna("").astype("str").eq("")
     rows = worth[whole] if by == "inventory" else worth[~whole & worth["pool"].astype("str").eq("all")]
+    rows = rows[rows["survey"].astype("str") == str(worth["survey"].iloc[-1])]
     for row in rows.itertuples(index=False):
         first = [row.survey, str(row.pool).replace("_", " ")] if by == "inventory" else [row.stratum, row.survey]
         used = "yes" if bool(row.used) else "no"
