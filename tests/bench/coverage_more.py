@@ -74,7 +74,6 @@ def raster_rows(stand: Stand, raster: Raster, radius: float, settings: dict[str,
             used = float((gain >= limits.relative_efficiency).mean())
             for method, made, share_used in (
                 ("plain", plain, 0.0),
-                ("assisted", helped, 1.0),
                 ("assisted where it pays", chosen, used),
             ):
                 yield rows_of(made, truth, **labels, method=method, used=share_used)

@@ -121,12 +121,11 @@ def _short_more(tables: dict[str, pd.DataFrame], settings: dict[str, Any]) -> li
     lines = []
     if len(tables["rasters"]):
         helped = of(tables["rasters"], method="assisted where it pays")
-        always = of(tables["rasters"], method="assisted")
         few = helped[helped["plots"] == helped["plots"].min()]
         lines.append(
-            f"""**Assisted by a raster:** {span(always)} if it is used whatever the sample says, {span(helped)} if only
-            where the sample sees a gain. That choice makes the program a little too sure with few plots: stated over
-            true error {few["se_ratio"].min():.2f} to {few["se_ratio"].max():.2f} at n = {few["plots"].iloc[0]}."""
+            f"""**Assisted by a raster:** {span(helped)}. It is used only where the sample sees a gain, and
+            that choice makes the program a little too sure with few plots: stated over true error
+            {few["se_ratio"].min():.2f} to {few["se_ratio"].max():.2f} at n = {few["plots"].iloc[0]}."""
         )
     if len(tables["parcels"]):
         table = of(tables["parcels"], truth="as plots see it", plots=-1)
