@@ -159,6 +159,9 @@ def trace(
     parcel: Annotated[str | None, typer.Option("--parcel", help="Parcel to trace.")] = None,
     stratum: Annotated[str | None, typer.Option("--stratum", help="Stratum to trace.")] = None,
     survey: Annotated[str | None, typer.Option("--survey", help="Survey; default: the last.")] = None,
+    since: Annotated[
+        str | None, typer.Option("--since", help="Earlier survey: trace the change from it instead of a stock.")
+    ] = None,
     pool: Annotated[str, typer.Option("--pool", help="Pool, or all.")] = "above_ground",
     plot: Annotated[str | None, typer.Option("--plot", help="Only this plot, with all its trees.")] = None,
     trees: Annotated[
@@ -171,6 +174,13 @@ def trace(
     from landcarbon.trace import trace_unit
 
     opened = open_results(results)
+    if since is not None:
+        from landcarbon.publish.terminal_trace import print_change_trace
+        from landcarbon.trace_change import trace_change
+
+        changed = trace_change(opened, since, parcel=parcel, stratum=stratum, survey=survey, pool=pool)
+        print_change_trace(changed, out)
+        return
     found = trace_unit(opened, parcel=parcel, stratum=stratum, survey=survey, pool=pool, plot=plot)
     all_of_plot = len(found.trees) if plot is not None else 10
     print_trace(found, out, all_of_plot if trees is None else trees)

@@ -16,7 +16,7 @@ from landcarbon.inventory.models import SAMPLE_TABLES
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.publish.results import Results, parts_of_plots, sums_of_plots
 
-__all__ = ["Trace", "trace_unit", "tree_shares"]
+__all__ = ["Trace", "match_name", "trace_unit", "tree_shares"]
 
 _MOST_NAMES = 12
 #: Parts of pools that are worked out from trees.
@@ -108,7 +108,7 @@ def trace_unit(
         here = here[here[by].astype("str") == unit]
     plots = sums_of_plots(here, pool).reset_index(drop=True)
     if plot is not None:
-        named = _match(plot, plots["plot"].astype("str"), f"plot of {by} {unit}, survey {when},")
+        named = match_name(plot, plots["plot"].astype("str"), f"plot of {by} {unit}, survey {when},")
         here, plots = here[here["plot"].astype("str") == named], plots[plots["plot"].astype("str") == named]
     names = plots["plot"].astype("str")
     trees = results.trees
@@ -338,10 +338,10 @@ def _published(results: Results, parcel: str | None, stratum: str | None, survey
     if given is None:
         by, unit = "inventory", results.name
     else:
-        unit = _match(given, rows.loc[rows["by"] == by, "unit"], by)
+        unit = match_name(given, rows.loc[rows["by"] == by, "unit"], by)
     surveys = [str(name) for name in results.surveys["survey"]]
-    when = surveys[-1] if survey is None else _match(str(survey), surveys, "survey")
-    named = _match(pool.replace("-", "_"), rows["pool"].astype("str"), "pool")
+    when = surveys[-1] if survey is None else match_name(str(survey), surveys, "survey")
+    named = match_name(pool.replace("-", "_"), rows["pool"].astype("str"), "pool")
     found = rows[(rows["by"] == by) & (rows["unit"] == unit) & (rows["survey"] == when) & (rows["pool"] == named)]
     if found.empty:
         raise UserError(
@@ -351,7 +351,7 @@ def _published(results: Results, parcel: str | None, stratum: str | None, survey
     return found.iloc[0]
 
 
-def _match(given: str, known: Iterable[str], what: str) -> str:
+def match_name(given: str, known: Iterable[str], what: str) -> str:
     """Return the name meant: as written, else the only one that differs in case or outer blanks alone."""
     names = list(dict.fromkeys(str(name) for name in known))
     if given in names:

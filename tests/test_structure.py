@@ -34,6 +34,7 @@ ROOMS = {
     "landcarbon.publish": 9,
     "landcarbon.statements": 10,
     "landcarbon.trace": 9,
+    "landcarbon.trace_change": 9,
     "landcarbon.reckon_notes": 10,
     "landcarbon.reckon_plan": 10,
     "landcarbon.reckon": 11,

@@ -19,8 +19,9 @@ from landcarbon.inventory import load_settings
 from landcarbon.pipeline import read_and_check
 from landcarbon.publish.folder import open_results, write_results
 from landcarbon.publish.results import SAMPLE_FILES, parts_of_plots, sums_of_plots
-from landcarbon.publish.terminal_trace import print_trace
+from landcarbon.publish.terminal_trace import print_change_trace, print_trace
 from landcarbon.trace import trace_unit, tree_shares
+from landcarbon.trace_change import trace_change
 
 ROOT = Path(__file__).resolve().parent.parent
 
@@ -301,3 +302,36 @@ def test_results_without_parcels(demo):
     stocks = demo.stocks[demo.stocks["by"] != "parcel"]
     with pytest.raises(UserError, match="no parcel in these results"):
         trace_unit(dataclasses.replace(demo, stocks=stocks), parcel="Owl Bank")
+
+
+def test_a_change_is_followed_to_its_plots(demo):
+    """Identity: own plots, weight, model and adjustment give the published change; all plots repeated here."""
+    found = trace_change(demo, "2014", parcel="Windy Acre", pool="above_ground")
+    row, parts = found.row, found.composition
+    assert (row["since"], row["until"], row["unit"]) == ("2014", "2024", "Windy Acre")
+    made = parts["weight_direct"] * parts["direct"] + (1 - parts["weight_direct"]) * parts["synthetic"]
+    assert (made + parts["adjustment"]).iloc[0] == pytest.approx(row["change_t_c"] / row["area_ha"], rel=1e-7)
+    plots = found.plots.dropna(subset="change_t_c_ha")
+    mean = (plots["change_t_c_ha"] * plots["size"]).sum() / plots["size"].sum()
+    assert mean + parts["raster_shift"].iloc[0] == pytest.approx(parts["direct"].iloc[0], rel=1e-6)
+    assert found.plots["years"].dropna().between(9.8, 10.2).all()
+    console = Console(file=io.StringIO(), width=160, color_system=None)
+    print_change_trace(found, console)
+    text = console.file.getvalue()
+    assert "Change 2014 to 2024, pool above_ground" in text
+    assert "Plots at both surveys" in text
+
+
+def test_the_change_of_a_stratum_without_rasters_is_its_plots(demo):
+    """Identity: all plots repeated, no raster in this stratum: the mean of their changes times the area."""
+    found = trace_change(demo, "2019", stratum="mixed", pool="above_ground")
+    plots = found.plots.dropna(subset="change_t_c_ha")
+    assert len(plots) == len(found.plots)
+    mean = (plots["change_t_c_ha"] * plots["size"]).sum() / plots["size"].sum()
+    assert mean * found.row["area_ha"] == pytest.approx(found.row["change_t_c"], rel=1e-7)
+    assert found.composition.empty
+
+
+def test_a_change_that_is_not_stated_is_refused(demo):
+    with pytest.raises(UserError, match=r"no change of inventory .* from 2024 to 2014.*"):
+        trace_change(demo, "2024", survey="2014")

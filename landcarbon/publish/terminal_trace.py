@@ -26,8 +26,9 @@ if TYPE_CHECKING:
     from rich.table import Table
 
     from landcarbon.trace import Trace
+    from landcarbon.trace_change import ChangeTrace
 
-__all__ = ["print_trace"]
+__all__ = ["print_change_trace", "print_trace"]
 
 _MOST_FINDINGS = 20
 _DECIMALS = 3  # of contributions: the same for all, so that a column adds up
@@ -70,6 +71,51 @@ def print_trace(trace: Trace, console: Console, trees: int) -> None:
             console.print(finding_line(finding))
         if len(trace.set_aside) > _MOST_FINDINGS:
             console.print(f"... and {len(trace.set_aside) - _MOST_FINDINGS} more in findings.csv.")
+
+
+def print_change_trace(trace: ChangeTrace, console: Console) -> None:
+    """Print what a change rests on: the figure, the plots of both surveys, and how a parcel's figure is composed.
+
+    Parameters
+    ----------
+    trace : ChangeTrace
+        The change with its plots.
+    console : rich.console.Console
+        Where to print.
+    """
+    row = trace.row
+    change, se = float(row["change_t_c"]), float(row["change_se"])
+    digits = decimals_for(se, change)
+    console.print(Text.assemble("\n", (f"{row['by']} ", ""), plain_text(row["unit"])), style="bold")
+    said = NOT_ESTIMABLE if pd.isna(change) else f"{figure(change, digits, sign=True)} t C, SE {figure(se, digits)}"
+    area = float(row["area_ha"])
+    per_ha = "" if pd.isna(change) or not area > 0 else f"; {figure(change / area, _DECIMALS, sign=True)} t C/ha"
+    console.print(plain_text(f"Change {row['since']} to {row['until']}, pool {row['pool']}: {said}{per_ha}"))
+    console.print(plain_text(f"Method: {row['method']}"))
+    headings = [("plot", "left"), ("stratum", "left"), ("since", "left"), ("until", "left"), ("years", "right")]
+    names = ["rel. area", "t C/ha since", "t C/ha until", "change", "per year"]
+    columns = ["size", "since_t_c_ha", "until_t_c_ha", "change_t_c_ha", "change_t_c_ha_yr"]
+    title = "Plots at both surveys" + (", values adjusted by rasters" if trace.adjusted else "")
+    table = table_of(title, [*headings, *((name, "right") for name in names)])
+    for plot in trace.plots.itertuples(index=False):
+        days = [_day(value) for value in (plot.since_date, plot.until_date)]
+        cells = [figure(number_of(plot, name), _DECIMALS, sign=name.startswith("change")) for name in columns]
+        first = [plain_text(plot.plot), plain_text(plot.stratum), *map(Text, days)]
+        table.add_row(*first, figure(number_of(plot, "years"), 2), *cells)
+    print_wide(table, console)
+    known = trace.plots.dropna(subset="change_t_c_ha")
+    if len(known):
+        mean = float((known["change_t_c_ha"] * known["size"]).sum() / known["size"].sum())
+        console.print(
+            f"Plots at both surveys: {len(known)} of {len(trace.plots)}; mean of their changes, weighted by relative "
+            f"area: {figure(mean, _DECIMALS, sign=True)} t C/ha."
+        )
+    if len(trace.composition):
+        print_wide(_composed(trace.composition), console)
+
+
+def _day(value: Any) -> str:
+    return "" if pd.isna(value) else f"{pd.Timestamp(value):%Y-%m-%d}"
 
 
 def _say_mean(trace: Trace, console: Console) -> None:
