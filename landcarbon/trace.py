@@ -121,16 +121,17 @@ def trace_unit(
     aside = findings[~findings["used"] & (findings["survey"] == when) & findings["plot"].isin(names)]
     aside = aside[~aside["table"].astype("str").isin(foreign)]
     table, columns = _with_figures(plots.reset_index(drop=True), here, pool, shares)
+    composition = _composition(results, row) if plot is None else pd.DataFrame()
     return Trace(
         row,
         table,
         columns,
         shares,
         aside.reset_index(drop=True),
-        _notes(pool, here, model),
+        (*_model_note(results, row, composition), *_notes(pool, here, model)),
         samples=_samples(results, tables, when, names),
         one_plot=plot is not None,
-        composition=_composition(results, row) if plot is None else pd.DataFrame(),
+        composition=composition,
     )
 
 
@@ -144,6 +145,18 @@ def _composition(results: Results, row: pd.Series) -> pd.DataFrame:
     pools = detail["pool"].astype("str")
     wanted = pools != "all" if row["pool"] == "all" else pools == row["pool"]
     return detail[mine & wanted].reset_index(drop=True)
+
+
+def _model_note(results: Results, row: pd.Series, composition: pd.DataFrame) -> tuple[str, ...]:
+    """Say where the model part of a composite figure comes from."""
+    if composition.empty or results.parcels is None:
+        return ()
+    own = results.parcels.loc[results.parcels["parcel"].astype("str") == str(row["unit"]), "stratum"]
+    name = str(own.iloc[0]) if len(own) else ""
+    return (
+        f"The model is the level of stratum {name} (trace it with --stratum), and of the rasters where they serve: its "
+        "terms are in parcel_models.csv, the spread of the own plots and the weight in parcel_detail.csv.",
+    )
 
 
 def tree_shares(trees: pd.DataFrame, pool: str, counted: Iterable[str], root_model: str = "") -> pd.DataFrame:
