@@ -189,7 +189,7 @@ def write_field(folder: Path, tables: dict[str, pd.DataFrame]) -> dict[str, Path
 def whole(path: Path) -> pd.DataFrame:
     """Read, check and estimate an inventory."""
     settings = load_settings(path)
-    return estimate(run_stage(settings), settings)[0]
+    return estimate(run_stage(settings), settings).stocks
 
 
 def main() -> None:
