@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -127,6 +127,61 @@ class Inventory:
 
             rows = reckon_change(estimation_plan(self.stage, self.settings), str(since), str(until))[0]
         return self._select(rows, by, pool)
+
+    def domains(
+        self, of: str | Mapping[str, str], *, areas: Mapping[str, float] | None = None, pool: str | None = None
+    ) -> pd.DataFrame:
+        """Stocks of domains that are neither strata nor parcels, such as land uses or owners.
+
+        Parameters
+        ----------
+        of : "land_use" or mapping
+            "land_use": that of the parcel each plot lies in. Or the name of the domain of each plot; plots that are not
+            named are in none.
+        areas : mapping, optional
+            Area of each domain [ha]. For land uses that of their parcels is taken; else areas are estimated from the
+            plots, with their error.
+        pool : str, optional
+            Only this pool.
+
+        Returns
+        -------
+        DataFrame
+            by, unit, survey, pool, area_ha with its standard error, plots, density_t_c_ha and stock_t_c with standard
+            errors and intervals, method. Domains may cut across strata and parcels; plots outside count in the
+            variance.
+
+        Raises
+        ------
+        UserError
+            If there are no parcels to take the land use from, or an area is missing.
+        """
+        from landcarbon.statements import state_domains
+
+        stage = self.stage
+        parcels, table = stage.inputs.parcels, stage.plot_parts
+        if isinstance(of, str):
+            if of != "land_use" or parcels is None:
+                raise UserError(
+                    f"{of!r} is no column of the parcels" if of != "land_use" else "there are no parcels",
+                    remedy='Use "land_use", or give the domain of each plot.',
+                )
+            use = parcels.set_index(parcels["parcel"].astype("str"))["land_use"].astype("str")
+            named, column = table["parcel"].astype("str").map(use).fillna(""), of
+            areas = parcels.groupby(use.to_numpy())["area_ha"].sum().to_dict() if areas is None else areas
+        else:
+            given = {str(plot): str(domain) for plot, domain in of.items()}
+            named, column = table["plot"].astype("str").map(given).fillna(""), "domain"
+        rows = state_domains(
+            table.assign(**{column: named.astype("str")}),
+            stage.sums,
+            self.surveys,
+            column,
+            strata=stage.inputs.strata,
+            areas=areas,
+            confidence=self.settings.inventory.confidence,
+        )
+        return rows if pool is None else rows[rows["pool"] == pool].reset_index(drop=True)
 
     def map(self, path: str | Path, *, base_tiles: bool = False) -> Path:
         """Write the carbon map as one page that works without a network.

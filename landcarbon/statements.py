@@ -13,11 +13,12 @@ import numpy as np
 import pandas as pd
 
 from landcarbon.change import estimate_change
+from landcarbon.estimate.domains import DOMAIN_COLUMNS, estimate_domains
 from landcarbon.estimate.stocks import estimate_stocks
 from landcarbon.findings import empty_findings, join_findings, make_findings
 from landcarbon.publish.results import CHANGE_COLUMNS
 
-__all__ = ["measured_columns", "state_change", "state_stocks"]
+__all__ = ["measured_columns", "state_change", "state_domains", "state_stocks"]
 
 _LEVELS = ("inventory", "stratum", "parcel")
 _STOCK_SPREAD = ["density_se", "density_low", "density_high", "stock_se", "stock_low", "stock_high", "df"]
@@ -101,6 +102,56 @@ def state_change(
     table = _with_gaps(_with_defaults(table, kept, _CHANGE_SPREAD), sums, kept, "not measured at both surveys")
     findings = _without_flat(findings, kept)
     return table, join_findings([findings, _gap_finding(sums, kept, since, until)])
+
+
+def state_domains(
+    plot_parts: pd.DataFrame,
+    sums: Mapping[str, Sequence[str]],
+    surveys: Sequence[str],
+    column: str,
+    *,
+    strata: pd.DataFrame,
+    areas: Mapping[str, float] | None,
+    confidence: float,
+) -> pd.DataFrame:
+    """Estimate densities and stocks of domains at every survey, from the parts measured there.
+
+    Parameters
+    ----------
+    plot_parts, sums, surveys
+        As for :func:`state_stocks`.
+    column : str
+        Column of the plot table that names the domains; blank where a plot is in none.
+    strata : DataFrame
+        stratum, area_ha.
+    areas : mapping or None
+        Area of each domain [ha]; estimated from the plots if it is None.
+    confidence : float
+        Of the intervals.
+
+    Returns
+    -------
+    DataFrame
+        ``DOMAIN_COLUMNS`` of ``landcarbon.estimate.domains``; pools of which nothing was measured have no row.
+    """
+    measured = measured_columns(plot_parts)
+    tables = []
+    for survey in surveys:  # over surveys
+        there = measured.get(survey, set())
+        kept = {
+            pool: [name for name in columns if name in there]
+            for pool, columns in sums.items()
+            if pool != "all" and there.intersection(columns)
+        }
+        if kept:
+            given = {**kept, "all": [name for columns in kept.values() for name in columns]}
+            part = plot_parts[(plot_parts["survey"] == survey).to_numpy(dtype=bool)]
+            table = estimate_domains(
+                part, strata, column, areas, surveys=[survey], pools=list(kept), confidence=confidence, sums=given
+            )
+            asked = {pool: sums[pool] for pool in kept}
+            tables.append(_with_gaps(table, asked, given, "not measured, or no usable rows"))
+    return pd.concat(tables, ignore_index=True) if tables else pd.DataFrame(columns=DOMAIN_COLUMNS)
 
 
 def measured_columns(plot_parts: pd.DataFrame) -> dict[str, set[str]]:

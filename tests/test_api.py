@@ -74,3 +74,21 @@ def test_a_missing_project_file_is_one_plain_error(tmp_path):
 def test_unknown_name_of_the_package():
     with pytest.raises(AttributeError, match="nosuch"):
         landcarbon.nosuch  # noqa: B018
+
+
+def test_domains_by_land_use_and_by_owner(inventory):
+    """Identity: one land use is the whole inventory; owners with estimated areas expand to the whole."""
+    whole = inventory.domains("land_use", pool="above_ground")
+    assert whole["unit"].unique().tolist() == ["forest land"]
+    assert whole["area_ha"].iloc[0] == pytest.approx(inventory.results.parcels["area_ha"].sum(), rel=1e-9)
+    plots = inventory.stage.inputs.plots["plot"].astype("str")
+    owners = {plot: "A" if plot < "F" else "B" for plot in plots}
+    split = inventory.domains(owners, pool="above_ground")
+    assert set(split["unit"]) == {"A", "B"}
+    assert (split["area_se"] > 0).all()
+    added = split.groupby("survey")[["area_ha", "stock_t_c"]].sum()
+    both = whole.set_index("survey")
+    assert added["area_ha"].to_numpy() == pytest.approx(both["area_ha"].to_numpy(), rel=1e-9)
+    assert added["stock_t_c"].to_numpy() == pytest.approx(both["stock_t_c"].to_numpy(), rel=1e-9)
+    with pytest.raises(UserError, match="'owner' is no column of the parcels"):
+        inventory.domains("owner")
