@@ -11,7 +11,7 @@ from estimate_frames import whole
 from landcarbon.errors import UserError
 from landcarbon.estimate.adjusted_means import two_phase_regression
 from landcarbon.estimate.assist import MODEL_COLUMNS, OFFSET_COLUMNS, REPORT_COLUMNS, assist
-from landcarbon.estimate.assist_lines import slope_loss
+from landcarbon.estimate.assist_lines import slope_loss, slope_price
 from landcarbon.estimate.post_strata import post_stratified_mean
 from landcarbon.estimate.regression import change_regression, regression_estimator, separate_design, stratum_weights
 
@@ -87,7 +87,7 @@ def test_inventory_equals_the_regression_estimator(made, survey):
     y = rows["above_ground.trees"].to_numpy()
     expected = regression_estimator(y, x, stratum_weights(code, area), code, x_mean)
     row = whole(stocks, "above_ground", survey=survey)
-    factor, _ = slope_loss(len(rows) - 4, 1)
+    factor, _ = slope_price(len(rows) - 4, 1)
     assert row["density_t_c_ha"] == pytest.approx(expected.mean[0], rel=1e-9)
     assert row["density_se"] ** 2 == pytest.approx(expected.variance_residuals[0] * factor, rel=1e-9)
     assert row["stock_t_c"] == pytest.approx(expected.mean[0] * 2000, rel=1e-9)
@@ -122,7 +122,7 @@ def test_slopes_by_stratum_equal_the_separate_estimator():
     expected = regression_estimator(plots["above_ground.trees"].to_numpy(), x, weight, code, x_mean)
     row = whole(stocks)
     assert row["density_t_c_ha"] == pytest.approx(expected.mean[0], rel=1e-9)
-    assert row["density_se"] ** 2 == pytest.approx(expected.variance_residuals[0] * slope_loss(19, 1)[0], rel=1e-9)
+    assert row["density_se"] ** 2 == pytest.approx(expected.variance_residuals[0] * slope_price(19, 1)[0], rel=1e-9)
 
 
 def two_strata(number=40, seed=3, low=5.0):
@@ -159,7 +159,7 @@ def test_change_equals_the_model_assisted_difference():
     row = whole(change, "above_ground")
     assert row["change_t_c"] == pytest.approx(expected.mean[0] * 100, rel=1e-9)
     assert (row["change_se"] / 100) ** 2 == pytest.approx(
-        expected.variance_residuals[0] * slope_loss(38, 1)[0], rel=1e-9
+        expected.variance_residuals[0] * slope_price(38, 1)[0], rel=1e-9
     )
 
 
@@ -554,7 +554,7 @@ def test_means_from_a_first_phase_of_points():
     expected = two_phase_regression(y, values["height"].to_numpy(), first, lost=1)
     row = whole(stocks)
     added = found.phases.set_index(["by", "pool"]).loc[("inventory", "all"), "variance"]
-    factor = slope_loss(29, 1)[0]
+    factor = slope_price(29, 1)[0]
     assert row["density_t_c_ha"] == pytest.approx(expected.mean, rel=1e-9)
     assert (row["density_se"] ** 2 - added) / factor + added == pytest.approx(expected.variance, rel=1e-9)
     wall_to_wall = assist(plots, ONE, values, means.drop(columns="points"), strata)
@@ -567,3 +567,4 @@ def test_what_slopes_cost():
     factor, share = slope_loss(9, 1)  # ten plots of one stratum
     assert factor == pytest.approx(9 / 8 * (1 + 1 / (10 - 3)))
     assert share == pytest.approx(8 / 9)
+    assert slope_price(9, 1)[0] == pytest.approx(factor * (1 + 1 / 9))  # chosen by the plots at hand: a working rule

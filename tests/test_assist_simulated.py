@@ -71,9 +71,10 @@ def test_intervals_of_stocks_hold_the_true_mean(number, least):
     assert ((rows["density_low"] <= truth) & (truth <= rows["density_high"])).mean() == pytest.approx(0.95, abs=0.03)
     assert ((rows["density_low"] <= truth) & (truth <= rows["density_high"])).mean() >= least
     assert abs(estimate.mean() - truth) < 3 * estimate.std() / np.sqrt(DRAWS)
-    assert estimate.std() < 0.8 * plots.groupby("stratum")["above_ground.trees"].mean().std()
-    # with ten plots the choice by the sample at hand leaves the variance a seventh too small on average
-    assert (rows["density_se"] ** 2).mean() == pytest.approx(estimate.var(), rel=0.16 if number == 10 else 0.12)
+    # with ten plots some samples see no gain and stay plain, so part of it is lost
+    gain = {10: 0.8, 30: 0.75}[number]
+    assert estimate.std() < gain * plots.groupby("stratum")["above_ground.trees"].mean().std()
+    assert (rows["density_se"] ** 2).mean() == pytest.approx(estimate.var(), rel=0.12)
 
 
 def test_intervals_of_change_hold_the_true_change():

@@ -26,6 +26,8 @@ class AssistLimits:
         Plots beyond one per stratum, for each raster; a stratum with fewer is not judged by itself.
     missing_share : float
         Largest share of a stratum without raster value.
+    price_of_choice : float
+        What the choice of rasters by the plots at hand adds to the variance, over the plots beyond one per stratum.
     """
 
     relative_efficiency: float
@@ -33,6 +35,7 @@ class AssistLimits:
     own_slopes: float
     plots_per_slope: float
     missing_share: float
+    price_of_choice: float
 
 
 @cache

@@ -13,7 +13,7 @@ from landcarbon.estimate.groups import group_sum
 from landcarbon.estimate.ratio import MIN_PLOTS
 from landcarbon.estimate.regression import independent_columns
 
-__all__ = ["Group", "Lines", "columns_alike", "fit_survey", "refit", "slope_loss"]
+__all__ = ["Group", "Lines", "columns_alike", "fit_survey", "refit", "slope_loss", "slope_price"]
 
 
 @dataclass(frozen=True)
@@ -221,6 +221,18 @@ def slope_loss(free: np.ndarray | float, slopes: np.ndarray | float) -> tuple[np
     return np.asarray(factor), np.asarray(left / free)
 
 
+def slope_price(free: np.ndarray | float, slopes: np.ndarray | float) -> tuple[np.ndarray, np.ndarray]:
+    """Return what slopes cost that the plots at hand have chosen: :func:`slope_loss`, and the price of the choice.
+
+    Parameters
+    ----------
+    free, slopes : array_like
+        As for :func:`slope_loss`.
+    """
+    factor, left = slope_loss(free, slopes)
+    return factor * (1.0 + assist_limits().price_of_choice / np.asarray(free, dtype=float)), left
+
+
 def fit_survey(
     table: pd.DataFrame, rows: pd.DataFrame, columns: list[str], auxiliary: Auxiliary, area: np.ndarray
 ) -> Lines:
@@ -303,12 +315,12 @@ def refit(lines: Lines, common: np.ndarray, own: np.ndarray) -> Lines:
             if free >= assist_limits().plots_per_slope * slopes:
                 turned = np.linalg.pinv(group.squares[lent].sum(axis=0), hermitian=True)
                 slope[part][lent] = group.back @ (turned @ group.crossed[lent, :, at].sum(axis=0))
-                loss[part][lent], share[part][lent] = slope_loss(free, slopes)
+                loss[part][lent], share[part][lent] = slope_price(free, slopes)
                 used[part] |= lent
             if each is not None:
                 mine = own[part] & room & serves
                 slope[part][mine] = each[mine, :, at]
-                loss[part][mine], share[part][mine] = slope_loss(group.plots[mine] - 1.0, slopes)
+                loss[part][mine], share[part][mine] = slope_price(group.plots[mine] - 1.0, slopes)
                 used[part] |= mine
                 apart[part] = mine
             if not used[part].any():
