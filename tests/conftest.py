@@ -6,6 +6,13 @@ import os
 from pathlib import Path
 
 import pytest
+from hypothesis import settings
+
+# The same examples on every run, so that a run says something about the code and not about luck. To look for new ones:
+# LANDCARBON_FUZZ=1 python -m pytest
+settings.register_profile("repeatable", derandomize=True)
+if not os.environ.get("LANDCARBON_FUZZ"):
+    settings.load_profile("repeatable")
 
 ROOT = Path(__file__).resolve().parent.parent
 
