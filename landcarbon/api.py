@@ -154,11 +154,17 @@ class Inventory:
         Raises
         ------
         UserError
-            If there are no parcels to take the land use from, or an area is missing.
+            If there are no parcels to take the land use from, an area is missing, or the boundaries change between
+            the surveys: the areas of the latest would then stand for all.
         """
         from landcarbon.statements import state_domains
 
         stage = self.stage
+        if stage.inputs.parcel_versions is not None:
+            raise UserError(
+                "domains are not stated where boundaries change between the surveys",
+                remedy="Leave only the outlines of one survey in the polygons and open the inventory with them.",
+            )
         parcels, table = stage.inputs.parcels, stage.plot_parts
         if isinstance(of, str):
             if of != "land_use" or parcels is None:

@@ -24,8 +24,7 @@ from landcarbon.pipeline import (
 from landcarbon.pools.parts import RowShares
 from landcarbon.publish.results import RasterRequest, Results
 from landcarbon.raster.coefficients import INTERCEPT
-from landcarbon.read.raster_files import RasterFile, find_raster
-from landcarbon.read.source import FileLog
+from landcarbon.read.raster_files import RasterFile
 from landcarbon.reckon import reckon
 from landcarbon.reckon_notes import reckoning_marks
 from landcarbon.reckon_plan import Plan
@@ -132,12 +131,8 @@ def _mapped(lines: pd.DataFrame, files: Sequence[RasterFile]) -> pd.DataFrame:
 
 def _files_read(stage: PlotStage, plan: Plan) -> list[dict[str, Any]]:
     """Tables and rasters with their checksums."""
-    log = FileLog()
-    if plan.auxiliary is not None:
-        place = plan.auxiliary.place
-        for file in plan.auxiliary.files:
-            log.add(find_raster(file, place.folder, allow_outside=place.allow_outside), 0, columns=file.name)
-    table = pd.concat([stage.inputs.files, log.frame()], ignore_index=True)
+    rasters = [] if plan.auxiliary is None else [plan.auxiliary.sources]
+    table = pd.concat([stage.inputs.files, *rasters], ignore_index=True)
     return [{str(name): value for name, value in row.items()} for row in table.to_dict(orient="records")]
 
 

@@ -19,7 +19,7 @@ from landcarbon.estimate.change_levels import (
     without_noise,
 )
 from landcarbon.estimate.change_notes import DIFFERENCE, change_methods, missing_dates, moved_plots, single_pairs
-from landcarbon.estimate.clusters import unit_counts
+from landcarbon.estimate.clusters import few_clusters, unit_counts
 from landcarbon.estimate.combine import Plan, SumEstimate, plan_sums
 from landcarbon.estimate.difference import Difference, difference_of_ratios
 from landcarbon.estimate.interval import check_confidence, t_half_width
@@ -147,6 +147,7 @@ def estimate_change(  # noqa: PLR0913  (the survey's tables, two surveys, and ho
         found = [*found, more]
     levels = designed([without_noise(level, samples) for level in levels], plots.units)
     found += [
+        few_clusters(plots.units, samples, surveys[1], "change"),
         *_findings(levels, plots.units, names, *surveys),
         moved_plots(samples, _plot_names(plots, surveys[1]), surveys),
     ]

@@ -5,7 +5,7 @@ This module only decides which estimator takes which table; the arithmetic lies 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any
@@ -18,10 +18,12 @@ from landcarbon.estimate.common_area import (
     CommonArea,
     change_on_common_area,
     common_area,
+    on_common_area,
     stocks_by_survey,
     tables_at,
 )
-from landcarbon.estimate.composite import REPLACED_RULES, Detail, composite_change, composite_parcels
+from landcarbon.estimate.composite import REPLACED_RULES, composite_change, composite_parcels
+from landcarbon.estimate.composite_detail import Detail, join_details
 from landcarbon.estimate.offsets import add_change_offsets, add_offsets, raise_trend
 from landcarbon.estimate.report import with_interval
 from landcarbon.estimate.trend import estimate_trend
@@ -141,7 +143,8 @@ def reckon_change(
         change = add_change_offsets(change, plan.assisted, plan.sums, confidence=plan.confidence, plain=plain)
     detail = None
     if plan.composite and parcels is not None and len(change):
-        at = table[table["survey"].isin([since, until])]
+        # Plots as change takes them: on the land both surveys have in common, in a parcel they stayed in.
+        at = table[table["survey"].isin([since, until])] if common is None else on_common_area(table, common)
         change, detail, told = composite_change(change, parcels, at, plan.sums, **_composing(plan))
         found = _with_replaced(found, told)
     simple = plan.settings.estimation.change == "difference"
@@ -185,7 +188,7 @@ def _direct_stocks(plan: Plan) -> tuple[pd.DataFrame, pd.DataFrame]:
     return stocks, found
 
 
-def _plain(plan: Plan, estimate: Any) -> pd.DataFrame | None:
+def _plain(plan: Plan, estimate: Callable[[], pd.DataFrame]) -> pd.DataFrame | None:
     """Estimates without rasters, where some parcel needs them."""
     if plan.assisted is None or not plan.assisted.findings["rule"].eq("parcel without raster mean").any():
         return None
@@ -224,12 +227,7 @@ def _compose_stocks(
         parts.append(made.set_axis(stocks.index[rows]))
         details.append(detail)
         notes.append(told)
-    detail = Detail(*(pd.concat(tables, ignore_index=True) for tables in zip(*map(_both, details), strict=True)))
-    return pd.concat(parts).sort_index(), detail, _with_replaced(found, join_findings(notes[1:]))
-
-
-def _both(detail: Detail) -> tuple[pd.DataFrame, pd.DataFrame]:
-    return detail.parcels, detail.models
+    return pd.concat(parts).sort_index(), join_details(details), _with_replaced(found, join_findings(notes[1:]))
 
 
 def _with_replaced(found: pd.DataFrame, told: pd.DataFrame) -> pd.DataFrame:

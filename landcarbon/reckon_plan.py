@@ -10,7 +10,6 @@ import pandas as pd
 
 from landcarbon.errors import LandcarbonError
 from landcarbon.estimate.assist import Assisted, assist
-from landcarbon.estimate.common_area import place_by_survey
 from landcarbon.estimate.visit_times import common_dates, to_common_date
 from landcarbon.findings import empty_findings, join_findings
 from landcarbon.read.rasters import RasterPlace
@@ -138,7 +137,7 @@ def make_plan(
     auxiliary: Auxiliary | None = None,
     classes: PostClasses | None = None,
 ) -> Plan:
-    """Prepare the plot values: places by survey, common dates, rasters and classes.
+    """Prepare the plot values: common dates, rasters and classes.
 
     Parameters
     ----------
@@ -151,8 +150,6 @@ def make_plan(
     """
     found = [] if auxiliary is None else [auxiliary.findings]
     surveys = [str(name) for name in inputs.surveys["survey"]]
-    if inputs.parcel_of is not None:
-        plot_parts = place_by_survey(plot_parts, inputs.parcel_of)
     dates: dict[str, pd.Timestamp] = {}
     if settings.estimation.dates == "common":
         dates = common_dates(plot_parts, surveys)

@@ -16,7 +16,7 @@ from landcarbon.inventory.models import SAMPLE_TABLES
 from landcarbon.inventory.nearest import suggestion
 from landcarbon.publish.results import Results, parts_of_plots, sums_of_plots
 
-__all__ = ["Trace", "match_name", "trace_unit", "tree_shares"]
+__all__ = ["Trace", "composition_of", "match_name", "trace_unit", "tree_shares"]
 
 _MOST_NAMES = 12
 #: Parts of pools that are worked out from trees.
@@ -121,7 +121,7 @@ def trace_unit(
     aside = findings[~findings["used"] & (findings["survey"] == when) & findings["plot"].isin(names)]
     aside = aside[~aside["table"].astype("str").isin(foreign)]
     table, columns = _with_figures(plots.reset_index(drop=True), here, pool, shares)
-    composition = _composition(results, row) if plot is None else pd.DataFrame()
+    composition = composition_of(results, row, "stocks") if plot is None else pd.DataFrame()
     return Trace(
         row,
         table,
@@ -135,13 +135,24 @@ def trace_unit(
     )
 
 
-def _composition(results: Results, row: pd.Series) -> pd.DataFrame:
-    """Find what a composite figure of a parcel is made of."""
+def composition_of(results: Results, row: pd.Series, of: str) -> pd.DataFrame:
+    """Find what a composite figure of a parcel is made of.
+
+    Parameters
+    ----------
+    results : Results
+        An opened results folder.
+    row : Series
+        A published row.
+    of : {"stocks", "change"}
+        The table it is from.
+    """
     detail = results.further.get("parcel_detail")
     if detail is None or row["by"] != "parcel" or not str(row["method"]).startswith(("composite", "synthetic")):
         return pd.DataFrame()
-    keys = detail[["of", "survey", "parcel"]].astype("str")
-    mine = (keys["of"] == "stocks") & (keys["survey"] == row["survey"]) & (keys["parcel"] == row["unit"])
+    dates = {"stocks": ["survey"], "change": ["since", "until"]}[of]
+    wanted_keys = {"of": of, "parcel": str(row["unit"]), **{name: str(row[name]) for name in dates}}
+    mine = (detail[list(wanted_keys)].astype("str") == pd.Series(wanted_keys)).all(axis=1)
     pools = detail["pool"].astype("str")
     wanted = pools != "all" if row["pool"] == "all" else pools == row["pool"]
     return detail[mine & wanted].reset_index(drop=True)

@@ -9,7 +9,7 @@ import pandas as pd
 from landcarbon.constants import DAYS_PER_YEAR
 from landcarbon.errors import UserError
 from landcarbon.publish.results import Results, sums_of_plots
-from landcarbon.trace import match_name
+from landcarbon.trace import composition_of, match_name
 
 __all__ = ["ChangeTrace", "trace_change"]
 
@@ -77,7 +77,9 @@ def trace_change(
         here = here[here[by].astype("str") == unit]
     adjusted = "adjusted_t_c_ha" in here
     value = "adjusted_t_c_ha" if adjusted else "density_t_c_ha"
-    return ChangeTrace(row, _pairs(here, row, value), adjusted and _differs(here), _composition(results, row))
+    return ChangeTrace(
+        row, _pairs(here, row, value), adjusted and _differs(here), composition_of(results, row, "change")
+    )
 
 
 def _published(
@@ -112,7 +114,7 @@ def _pairs(here: pd.DataFrame, row: pd.Series, value: str) -> pd.DataFrame:
     ]
     both = sides[0].merge(sides[1], on="plot", how="outer", suffixes=("_since", "_until"))
     dates = [pd.to_datetime(both[f"date_{name}"]) for name in ("since", "until")]
-    years = (dates[1] - dates[0]).dt.total_seconds() / 86_400.0 / DAYS_PER_YEAR
+    years = (dates[1] - dates[0]) / pd.Timedelta(days=1) / DAYS_PER_YEAR
     grown = both[f"{value}_until"] - both[f"{value}_since"]
     return pd.DataFrame(
         {
@@ -132,15 +134,3 @@ def _pairs(here: pd.DataFrame, row: pd.Series, value: str) -> pd.DataFrame:
 
 def _differs(here: pd.DataFrame) -> bool:
     return bool((here["adjusted_t_c_ha"] - here["density_t_c_ha"]).abs().gt(0).any())
-
-
-def _composition(results: Results, row: pd.Series) -> pd.DataFrame:
-    detail = results.further.get("parcel_detail")
-    if detail is None or row["by"] != "parcel" or not str(row["method"]).startswith(("composite", "synthetic")):
-        return pd.DataFrame()
-    keys = detail[["of", "since", "until", "parcel"]].astype("str")
-    mine = (keys["of"] == "change") & (keys["since"] == str(row["since"])) & (keys["until"] == str(row["until"]))
-    mine &= keys["parcel"] == str(row["unit"])
-    pools = detail["pool"].astype("str")
-    wanted = pools != "all" if row["pool"] == "all" else pools == str(row["pool"])
-    return detail[mine & wanted].reset_index(drop=True)

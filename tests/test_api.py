@@ -5,6 +5,7 @@ from __future__ import annotations
 import geopandas as gpd
 import pandas as pd
 import pytest
+from boundary_frames import PROJECT, cells, grid_plots, version, write_land
 
 import landcarbon
 from landcarbon.demo import copy_demo
@@ -92,3 +93,14 @@ def test_domains_by_land_use_and_by_owner(inventory):
     assert added["stock_t_c"].to_numpy() == pytest.approx(both["stock_t_c"].to_numpy(), rel=1e-9)
     with pytest.raises(UserError, match="'owner' is no column of the parcels"):
         inventory.domains("owner")
+
+
+def test_no_domains_where_boundaries_change(tmp_path):
+    versions = [
+        version("P", cells(0, 0, 2, 2), until="2019-12-31"),
+        version("P", cells(0, 0, 2, 1), since="2020-01-01"),
+    ]
+    write_land(tmp_path, versions, grid_plots(2, 2))
+    (tmp_path / "inventory.toml").write_text(PROJECT, encoding="utf-8")
+    with pytest.raises(UserError, match="boundaries change between the surveys"):
+        landcarbon.open_inventory(tmp_path).domains("land_use")

@@ -28,6 +28,25 @@ from landcarbon.estimate.stocks import estimate_stocks
 SOLD, BOUGHT = "2019-12-31", "2020-01-01"
 
 
+def common_of(inputs):
+    """The common area of the two surveys."""
+    return common_area(
+        inputs.parcel_versions,
+        inputs.parcels_in_force,
+        inputs.parcel_of,
+        inputs.strata,
+        since="2014",
+        until="2024",
+        inventory_name="Tarn Side",
+    )
+
+
+def recut(before, after, kinds):
+    """Parcels as strips two cells high; cut anew between the surveys, in strata taken in reverse order."""
+    rows = [version(f"P{k}", cells(a, 0, b, 2), None, SOLD, stratum=kinds[k]) for k, (a, b) in enumerate(before)]
+    return rows + [version(f"P{k}", cells(a, 0, b, 2), BOUGHT, stratum=kinds[-k]) for k, (a, b) in enumerate(after)]
+
+
 def run(inputs, density):
     """Stocks at both surveys, change on the common area, the common area and the area effect."""
     plots = measured(inputs, density)
@@ -37,15 +56,7 @@ def run(inputs, density):
         return estimate_stocks(table, strata, parcels, [survey], **options)
 
     stocks, _ = stocks_by_survey(estimate_one, plots, inputs.parcel_versions, inputs.parcels_in_force, inputs.strata)
-    common = common_area(
-        inputs.parcel_versions,
-        inputs.parcels_in_force,
-        inputs.parcel_of,
-        inputs.strata,
-        since="2014",
-        until="2024",
-        inventory_name="Tarn Side",
-    )
+    common = common_of(inputs)
 
     def estimate(table, strata, parcels):
         return estimate_change(table, strata, parcels, since="2014", until="2024", **options)
@@ -252,15 +263,7 @@ def test_overlapping_outlines_count_twice_as_in_the_stocks(tmp_path):
     ]
     text = PROJECT + '[columns.parcels]\narea = "area"\n'
     inputs = land(tmp_path, versions, grid_plots(4, 1), text)
-    common = common_area(
-        inputs.parcel_versions,
-        inputs.parcels_in_force,
-        inputs.parcel_of,
-        inputs.strata,
-        since="2014",
-        until="2024",
-        inventory_name="Tarn Side",
-    )
+    common = common_of(inputs)
     areas = common.areas.set_index("unit")
     assert areas.loc["A", ["area_since_ha", "area_until_ha", "area_common_ha"]].tolist() == [2.5, 2.5, 2.5]
     expected = 2.5 + hectares(cells(1, 0, 3, 1))
@@ -290,20 +293,10 @@ def test_common_area_of_any_outlines_is_that_of_their_pieces(tmp_path):
         before = [(a, b) for a, b in zip([0, *cuts], [*cuts, 6], strict=True)]
         after = [(a, b) for a, b in zip([0, *moved], [*moved, 7], strict=True)]
         kinds = ["oak", "birch", "oak", "pine", "birch"]
-        rows = [version(f"P{k}", cells(a, 0, b, 2), None, SOLD, stratum=kinds[k]) for k, (a, b) in enumerate(before)]
-        rows += [version(f"P{k}", cells(a, 0, b, 2), BOUGHT, stratum=kinds[-k]) for k, (a, b) in enumerate(after)]
         folder = tmp_path / str(case)
         folder.mkdir()
-        inputs = land(folder, rows, grid_plots(7, 2))
-        common = common_area(
-            inputs.parcel_versions,
-            inputs.parcels_in_force,
-            inputs.parcel_of,
-            inputs.strata,
-            since="2014",
-            until="2024",
-            inventory_name="Tarn Side",
-        )
+        inputs = land(folder, recut(before, after, kinds), grid_plots(7, 2))
+        common = common_of(inputs)
         areas = common.areas.set_index(["by", "unit"])["area_common_ha"]
         assert areas["inventory", "Tarn Side"] == pytest.approx(hectares(cells(0, 0, 6, 2)), rel=1e-6)
         for name in set(kinds):
@@ -328,11 +321,9 @@ def test_change_on_the_common_area_plot_by_plot(tmp_path):
     for case in range(3):
         before, after = random_cuts(rng, 8, 4), random_cuts(rng, 9, 5)
         kinds = ["oak", "birch", "oak", "pine", "birch"]
-        rows = [version(f"P{k}", cells(a, 0, b, 2), None, SOLD, stratum=kinds[k]) for k, (a, b) in enumerate(before)]
-        rows += [version(f"P{k}", cells(a, 0, b, 2), BOUGHT, stratum=kinds[-k]) for k, (a, b) in enumerate(after)]
         folder = tmp_path / str(case)
         folder.mkdir()
-        inputs = land(folder, rows, grid_plots(9, 2))
+        inputs = land(folder, recut(before, after, kinds), grid_plots(9, 2))
         table = {key: float(value) for key, value in zip(
             inputs.parcel_of[["survey", "plot"]].itertuples(index=False, name=None), rng.gamma(4, 20, 200), strict=False
         )}  # fmt: skip
@@ -376,15 +367,7 @@ def test_plots_on_the_common_area(tmp_path):
         version("C", cells(2, 0, 3, 1), BOUGHT),
     ]
     inputs = land(tmp_path, versions, grid_plots(4, 1, per_side=1))
-    common = common_area(
-        inputs.parcel_versions,
-        inputs.parcels_in_force,
-        inputs.parcel_of,
-        inputs.strata,
-        since="2014",
-        until="2024",
-        inventory_name="Tarn Side",
-    )
+    common = common_of(inputs)
     assert common.plots.to_dict("list") == {
         "plot": ["p000", "p001", "p002", "p003"],
         "stratum": ["oak", "oak", "", ""],

@@ -418,6 +418,21 @@ def test_partly_covered_parcel():
     assert offset == pytest.approx(0.5 * 3.0 * slope)
 
 
+def test_a_parcel_of_several_strata_without_areas_is_reported():
+    """How the parcel is made up of its strata is not known: no offset, which is said, instead of one of zero."""
+    plots, values, means, _, _ = simple(number=40)
+    plots = plots.assign(stratum=np.where(np.arange(40) % 8 < 4, "S", "T"))
+    strata = pd.DataFrame({"stratum": ["S", "T"], "area_ha": [50.0, 50.0]})
+    means = pd.concat([means[:1], means[:1].assign(unit="T"), means[1:], means[4:]], ignore_index=True)
+    means = means.assign(stratum=["", "", "S", "T", "S", "S", "T"])
+    for areas, lacking in (([25.0] * 7, []), ([*[25.0] * 6, np.nan], ["D"])):
+        found = assist(plots, ONE, values, means.assign(area_ha=areas), strata)
+        named = found.offsets[found.offsets["by"] == "parcel"]["unit"].tolist()
+        assert named == [unit for unit in "ABCD" if unit not in lacking]
+        told = found.findings[found.findings["rule"] == "parcel without raster mean"]["value"].tolist()
+        assert told == lacking
+
+
 def test_a_survey_without_raster_takes_that_of_the_other():
     plots = survey_plots()
     strata, parcels = units()

@@ -19,6 +19,7 @@ from landcarbon.demo import copy_demo
 from landcarbon.errors import UserError
 from landcarbon.estimate.composite import REPLACED_RULES, composite_change, composite_parcels
 from landcarbon.estimate.composite_core import sum_of_pools
+from landcarbon.estimate.composite_plots import Places, plot_evidence
 from landcarbon.estimate.small_area import fit_fay_herriot
 from landcarbon.findings import FINDING_COLUMNS
 from landcarbon.statements import state_change, state_stocks
@@ -692,6 +693,25 @@ def test_clusters_count_as_one_plot() -> None:
     one, _, _ = composite_parcels(direct, land["parcels"], plots, SUMS, confidence=0.95)
     two, _, _ = composite_parcels(direct, land["parcels"], twice, SUMS, confidence=0.95)
     np.testing.assert_allclose(two[FIGURES], one[FIGURES], rtol=1e-9)
+
+
+def test_a_cluster_over_several_parcels_repeats_in_each_of_them() -> None:
+    """Identity: with one plot of a cluster in each parcel, its plots are units of their own within parcels."""
+    land = woodland(7)
+    plots, parcels, strata = land["plots"], land["parcels"], land["strata"]
+    apart = plots.assign(cluster="c" + plots.groupby(["survey", "parcel"]).cumcount().astype("str"))
+    names = list(strata["stratum"])
+    places = Places(
+        parcels=list(parcels["parcel"]),
+        strata=names,
+        stratum=pd.Index(names).get_indexer(pd.Index(parcels["stratum"])),
+        area_ha=parcels["area_ha"].to_numpy(dtype=float),
+        stratum_area_ha=strata["area_ha"].to_numpy(dtype=float),
+    )
+    pools = ["above_ground", "soil"]
+    one, two = (plot_evidence(frame, SUMS, ["t1", "t2"], places, pools) for frame in (plots, apart))
+    for name in ("density", "plots", "variance", "between", "df", "correlation"):
+        np.testing.assert_allclose(getattr(two, name), getattr(one, name), rtol=1e-9, err_msg=name)
 
 
 def test_log_intervals_stay_above_zero() -> None:

@@ -10,7 +10,7 @@ import pandas as pd
 import polars
 import pytest
 import svy
-from estimate_frames import POOL, cases, parcel_table, pick, plot_table, stocks, strata_table, survey_a, whole
+from estimate_frames import POOL, cases, change, parcel_table, pick, plot_table, stocks, strata_table, survey_a, whole
 
 from landcarbon.errors import UserError
 from landcarbon.estimate.difference import difference_of_ratios
@@ -274,6 +274,28 @@ def test_one_cluster_is_not_enough() -> None:
         assert pick(frame, "parcel").loc["r", "method"] == "not estimable: one cluster"
         loud = findings[findings["rule"] == "stratum not estimable"].iloc[0]
         assert (loud["severity"], loud["value"]) == ("error", "a")
+
+
+def test_change_of_one_cluster_says_so() -> None:
+    """The area of the stratum is known: the reason is that its plots are one sampling unit."""
+    one = plot_table(
+        [1.0, 2.0, 3.0, 5.0, 6.0, 8.0],
+        survey="t1",
+        stratum=list("aaabbb"),
+        cluster=["k", "k", "k", "", "m", "m"],
+        parcel=list("pppqrr"),
+    )
+    later = one[[POOL, "all"]] + np.array([[1.0], [2.0], [1.0], [3.0], [1.0], [2.0]])
+    both = pd.concat([one, one.assign(survey="t2", **later)])
+    strata = strata_table({"a": 10.0, "b": 20.0})
+    for sums in (None, {POOL: [POOL]}):
+        frame, findings = change(both, strata, parcel_table({"q": 1.0, "r": 2.0}), sums=sums)
+        loud = findings[(findings["rule"] == "stratum not estimable") & (findings["table"] == "change")]
+        assert loud[["column", "value"]].to_numpy().tolist() == [["cluster", "a"]]
+        rows = pick(frame, "stratum")
+        assert rows.loc["a", "method"] == "not estimable: one cluster"
+        assert rows.loc["b", "method"].endswith("paired")
+        assert pick(frame, "parcel").loc["r", "method"] == "not estimable: one cluster"
 
 
 def test_weights_are_checked() -> None:

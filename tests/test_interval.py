@@ -90,9 +90,11 @@ def test_what_is_refused(options: dict, message: str) -> None:
         limits([1.0], [0.1], [5.0], **options)
 
 
-def test_known_kinds_pass() -> None:
-    check_kind("t")
-    check_kind("log")
+def test_known_kinds_pass_and_no_other() -> None:
+    for kind in ("t", "log"):
+        check_kind(kind)
+    with pytest.raises(UserError, match="interval 'T' is not known"):
+        check_kind("T")
 
 
 def test_coverage_on_skewed_samples() -> None:

@@ -8,7 +8,7 @@ import pytest
 from estimate_frames import cases
 
 from landcarbon.errors import UserError
-from landcarbon.estimate.post_strata import FORMS, class_rasters, collapse_classes, post_stratified_mean, stated_classes
+from landcarbon.estimate.post_strata import FORMS, class_rasters, collapse_classes, post_stratified_mean
 
 
 def test_three_variances_of_computed_case():
@@ -72,24 +72,19 @@ def test_nothing_is_collapsed_without_need():
     assert findings.empty
 
 
-def plots_of(classes, stratum="S"):
-    return pd.DataFrame(
-        {
-            "survey": "1",
-            "plot": [f"p{at}" for at in range(len(classes))],
-            "stratum": stratum,
-            "inside": True,
-            "post_stratum": classes,
-        }
-    )
+def plots_of(classes):
+    plots = [f"p{at}" for at in range(len(classes))]
+    return pd.DataFrame({"survey": "1", "plot": plots, "class": classes})
+
+
+def areas_of(areas, strata):
+    rows = {"survey": "1", "by": "stratum", "unit": strata, "class": list(areas), "area_ha": list(areas.values())}
+    return pd.DataFrame(rows)
 
 
 def test_classes_become_columns_of_zero_and_one():
     plots = plots_of(["open", "wet", "closed", "open", "wet", "closed", ""])
-    strata = pd.DataFrame({"stratum": ["S"], "area_ha": [100.0]})
-    classes, areas, findings = stated_classes(plots, {"open": 20.0, "closed": 70.0, "wet": 10.0}, strata)
-    assert findings.empty
-    values, means, findings = class_rasters(classes, areas)
+    values, means, findings = class_rasters(plots, areas_of({"open": 20.0, "closed": 70.0, "wet": 10.0}, "S"))
     assert findings.empty
     assert sorted(values["raster"].unique()) == ["class=open", "class=wet"]  # "closed" is what they are compared with
     assert means.set_index("raster")["mean"].to_dict() == {"class=open": 0.2, "class=wet": 0.1}
@@ -97,24 +92,7 @@ def test_classes_become_columns_of_zero_and_one():
 
 
 def test_classes_within_strata_have_one_reference_each():
-    plots = plots_of(["a", "a", "b", "b", "c", "c", "d", "d"], ["S"] * 4 + ["T"] * 4)
-    strata = pd.DataFrame({"stratum": ["S", "T"], "area_ha": [30.0, 70.0]})
-    classes, areas, _ = stated_classes(plots, {"a": 10.0, "b": 20.0, "c": 50.0, "d": 20.0}, strata)
-    _, means, _ = class_rasters(classes, areas)
+    areas = areas_of({"a": 10.0, "b": 20.0, "c": 50.0, "d": 20.0}, ["S", "S", "T", "T"])
+    _, means, _ = class_rasters(plots_of(["a", "a", "b", "b", "c", "c", "d", "d"]), areas)
     assert sorted(means["raster"].unique()) == ["class=b", "class=d"]
     assert means[(means["raster"] == "class=b") & (means["unit"] == "S")]["mean"].item() == pytest.approx(2 / 3)
-
-
-def test_classes_across_strata_need_areas_by_stratum():
-    plots = plots_of(["a", "a", "b", "b"], ["S", "T", "S", "T"])
-    strata = pd.DataFrame({"stratum": ["S", "T"], "area_ha": [30.0, 70.0]})
-    classes, areas, findings = stated_classes(plots, {"a": 50.0, "b": 50.0}, strata)
-    assert classes.empty
-    assert areas.empty
-    assert findings["rule"].tolist() == ["class areas by stratum unknown"]
-
-
-def test_a_class_without_area_is_refused():
-    strata = pd.DataFrame({"stratum": ["S"], "area_ha": [30.0]})
-    with pytest.raises(UserError, match="no area is stated"):
-        stated_classes(plots_of(["a", "b"]), {"a": 30.0}, strata)

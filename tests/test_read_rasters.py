@@ -12,6 +12,7 @@ import shapely
 from rasterio import Affine
 
 from landcarbon.errors import InputFileError, SettingsError
+from landcarbon.raster.grid import Window
 from landcarbon.read.footprints import Footprint, footprint_polygons
 from landcarbon.read.raster_files import open_raster
 from landcarbon.read.rasters import RasterFile, RasterPlace, plot_values, serving_files, unit_means
@@ -307,7 +308,8 @@ def test_warped_windows_agree_with_the_whole(place):
     write(place.folder / "a.tif", noise, crs="EPSG:4326", transform=transform, nodata=-1)
     file, bounds = RasterFile("n", "", "a.tif"), (LEFT, TOP - 900, LEFT + 900, TOP)
     with open_raster(file, place.folder, CRS, bounds=bounds) as raster:
-        whole, joined = raster.read(raster.grid_window), np.full((raster.grid.rows, raster.grid.columns), np.nan)
+        shape = raster.grid.rows, raster.grid.columns
+        whole, joined = raster.read(Window(0, 0, *shape)), np.full(shape, np.nan)
         for window in raster.grid.windows(64, 50):
             rows, columns = (
                 slice(window.row, window.row + window.rows),

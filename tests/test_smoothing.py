@@ -15,7 +15,6 @@ from scipy.optimize import minimize
 import landcarbon.estimate.smoothing as smoothing
 from landcarbon.estimate.smoothing import (
     Layer,
-    correlations,
     parcel_variance,
     power_of_mean,
     rule,
@@ -203,7 +202,7 @@ def test_parts_on_the_same_plots_add_up_with_their_correlation(seed: int) -> Non
 
 def test_correlations_are_those_within_parcels() -> None:
     layer = plots(8, count=400)
-    matrix = correlations(layer)
+    matrix = unit_variance(layer).correlation
     assert matrix[0, 1] == pytest.approx(0.64, abs=0.08)  # 0.8^2, by construction of the invented plots
     raw = np.corrcoef(layer.value.T)[0, 1]
     assert raw > matrix[0, 1]  # strata of different level would raise it
@@ -213,7 +212,7 @@ def test_pools_rarely_measured_together_count_as_fully_correlated() -> None:
     rng = np.random.default_rng(9)
     value = rng.normal(50, 10, (20, 2))
     value[:16, 1] = np.nan
-    assert correlations(layer_of(value, np.arange(20) % 4, np.zeros(20, dtype=int)))[0, 1] == 1.0
+    assert unit_variance(layer_of(value, np.arange(20) % 4, np.zeros(20, dtype=int))).correlation[0, 1] == 1.0
 
 
 @QUICK
@@ -222,7 +221,7 @@ def test_correlations_make_no_negative_variance(seed: int, missing: float) -> No
     rng = np.random.default_rng(seed)
     value = rng.normal(size=(25, 5))
     value[rng.random(value.shape) < missing] = np.nan
-    matrix = correlations(layer_of(value, np.arange(25) % 3, np.zeros(25, dtype=int)))
+    matrix = unit_variance(layer_of(value, np.arange(25) % 3, np.zeros(25, dtype=int))).correlation
     np.testing.assert_allclose(np.diag(matrix), 1.0, atol=1e-9)
     assert np.linalg.eigvalsh(matrix)[0] > -1e-9
     assert np.abs(matrix).max() <= 1

@@ -12,26 +12,10 @@ import pandas as pd
 from landcarbon.estimate.common_area import (
     ROUNDING,
     CommonArea,
-    change_on_common_area,
-    common_area,
     equal_areas,
-    on_common_area,
-    place_by_survey,
-    stocks_by_survey,
-    tables_at,
 )
 
-__all__ = [
-    "AREA_EFFECT_COLUMNS",
-    "CommonArea",
-    "area_effect",
-    "change_on_common_area",
-    "common_area",
-    "on_common_area",
-    "place_by_survey",
-    "stocks_by_survey",
-    "tables_at",
-]
+__all__ = ["AREA_EFFECT_COLUMNS", "area_effect"]
 
 AREA_EFFECT_COLUMNS = [
     "by",
@@ -56,8 +40,8 @@ def area_effect(stocks: pd.DataFrame, change: pd.DataFrame, common: CommonArea) 
     Parameters
     ----------
     stocks : DataFrame
-        Stocks of both surveys, each on the area of its day (:func:`tables_at`): by, unit, survey, pool, area_ha,
-        stock_t_c.
+        Stocks of both surveys, each on the area of its day (``common_area.tables_at``): by, unit, survey, pool,
+        area_ha, stock_t_c.
     change : DataFrame
         Change on the common area: by, unit, since, until, pool, change_t_c, method.
     common : CommonArea

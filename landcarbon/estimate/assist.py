@@ -25,6 +25,7 @@ from landcarbon.estimate.assist_report import REPORT_COLUMNS, not_used, worth
 from landcarbon.estimate.assist_rows import model_rows, offset_rows
 from landcarbon.estimate.auxiliary import auxiliaries
 from landcarbon.estimate.auxiliary_tables import Given, long_means, long_values, read_given
+from landcarbon.estimate.clusters import unit_codes
 from landcarbon.estimate.groups import label_codes
 from landcarbon.estimate.notes import name_list
 from landcarbon.estimate.post_strata import class_rasters
@@ -163,7 +164,7 @@ def _fit(
     found: list[pd.DataFrame],
 ) -> dict[str, Lines]:
     """Fit the lines of every survey; what is to be said goes to ``found``."""
-    units = _unit_keys(table)
+    units = _unit_keys(table, given.strata)
     rows = {survey: _rows(table, survey, given.strata, units) for survey in _in_time(table)}
     variables, findings = auxiliaries(given, rows, assist_limits())
     found.append(findings)
@@ -192,14 +193,11 @@ def _stratum_labels(plot_parts: pd.DataFrame, strata: pd.DataFrame) -> list[str]
     return listed + sorted({str(name) for name in named} - set(listed) - {""})
 
 
-def _unit_keys(table: pd.DataFrame) -> np.ndarray:
-    """Return the number of the sampling unit of each row: of its cluster, else of its plot."""
-    plot, names = pd.factorize(table["plot"])
-    if "cluster" not in table:
-        return np.asarray(plot, dtype=np.int64)
-    cluster = pd.factorize(table["cluster"].astype("str").where(table["cluster"].notna(), ""))
-    blank = np.append(np.asarray(cluster[1], dtype=object) == "", True)[cluster[0]]
-    return np.where(blank, plot, len(names) + cluster[0]).astype(np.int64)
+def _unit_keys(table: pd.DataFrame, labels: list[str]) -> np.ndarray:
+    """Return the number of the sampling unit of each row: of its cluster within the stratum, else of its plot."""
+    plot = np.asarray(pd.factorize(table["plot"])[0], dtype=np.int64)
+    clusters = unit_codes(table["cluster"], label_codes(table["stratum"], labels), plot) if "cluster" in table else None
+    return plot if clusters is None else clusters
 
 
 def _rows(table: pd.DataFrame, survey: str, labels: list[str], units: np.ndarray) -> pd.DataFrame:

@@ -41,8 +41,8 @@ class Auxiliary:
     centre : ndarray
         Mean of each stratum, NaN where the raster does not serve; shape (H, p).
     parcels : DataFrame
-        unit, stratum (code), share (of the parcel in the stratum; NaN unknown), and a column ``shift.<raster>``: mean
-        of the parcel less that of the stratum.
+        unit, stratum (code), share of the parcel in the stratum, and a column ``shift.<raster>``: mean of the parcel
+        less that of the stratum. Parcels in several strata whose areas there are unknown are left out.
     """
 
     strata: list[str]
@@ -261,7 +261,8 @@ def _parcel_shifts(given: Given, variables: list[Variable], centre: np.ndarray) 
     total = joined.groupby("unit")["area_ha"].transform("sum")
     alone = ~joined["unit"].duplicated(keep=False)
     share = np.where(alone, 1.0, joined["area_ha"] / total.where(total > 0))
-    return joined.drop(columns="area_ha").assign(share=share)
+    unknown = joined["unit"].isin(joined["unit"][np.isnan(share)])
+    return joined.drop(columns="area_ha").assign(share=share)[~unknown]
 
 
 def _usable(auxiliary: Auxiliary, plots: pd.DataFrame) -> tuple[np.ndarray, list[tuple[str, str]]]:

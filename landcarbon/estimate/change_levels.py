@@ -128,8 +128,7 @@ def with_best(
 ) -> tuple[list[ChangeLevel], pd.DataFrame]:
     """Put best combinations in place of differences where there are plots enough for them."""
     made, whole = [], None
-    moved = any(level.moved is not None for level in levels if level.by == "inventory")
-    moved |= any(level.moved is not None for level in levels if level.by == "stratum")
+    moved = any(level.moved is not None for level in levels if level.by != "parcel")
     for level in levels:
         if not level.labels or (moved and level.by != "parcel"):
             made.append(level)

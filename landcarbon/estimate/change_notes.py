@@ -42,6 +42,9 @@ def change_methods(change: Difference, surveys: tuple[str, str]) -> np.ndarray:
         f"not estimable: {first} plot(s) in {surveys[0]}, {second} in {surveys[1]}"
         for first, second in zip(since[few], until[few], strict=True)
     ]
+    if change.units_since is not None and change.units_until is not None:
+        lumped = np.minimum(change.units_since, change.units_until) < MIN_PLOTS
+        method[none & ~few & lumped] = "not estimable: one cluster"
     return method
 
 

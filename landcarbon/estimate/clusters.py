@@ -117,6 +117,8 @@ def few_clusters(units: Units, samples: Sequence[Sample], survey: str, table: st
         plots = group_sum(sample.used, sample.stratum, strata)
         few |= ((plots >= FEWEST) & (unit_counts(sample, strata) < FEWEST)).any(axis=1)
     for unit in np.flatnonzero(few):
+        area = units.stratum_area_ha[unit]
+        lost = f"{area:,.2f} ha are missing" if np.isfinite(area) else "It is missing"
         found.append(
             make_findings(
                 "stratum not estimable",
@@ -127,8 +129,8 @@ def few_clusters(units: Units, samples: Sequence[Sample], survey: str, table: st
                 survey=survey,
                 message=(
                     f"All plots of stratum {units.strata[unit]!r} with a value of some pool lie in one cluster: not "
-                    f"estimable, as a standard error needs two sampling units. {units.stratum_area_ha[unit]:,.2f} ha "
-                    "are missing from the figures of the inventory for that pool."
+                    f"estimable, as a standard error needs two sampling units. {lost} "
+                    "from the figures of the inventory for that pool."
                 ),
                 remedy="Measure another cluster there, or fold the stratum into a like one with [strata] merge.",
             )

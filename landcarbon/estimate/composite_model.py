@@ -329,7 +329,7 @@ def _discrepancy(
 ) -> np.ndarray:
     """Variance of the total of each group, taken as the mean of its plots, less the sum of its predictions."""
     groups = len(given.level)
-    area = np.where(has | np.isfinite(given.area_ha), np.nan_to_num(given.area_ha), 0.0)
+    area = np.nan_to_num(given.area_ha)
     plots = np.where(has & (by_model >= 0), given.plots, 0).astype(float)
     by_group = np.bincount(given.group, weights=plots, minlength=groups)
     whole = np.bincount(given.group, weights=area, minlength=groups)

@@ -240,9 +240,11 @@ def _layers(tables: list[_Table], strata: int) -> list[Layer]:
     if len(tables) == 1:
         return [layer(tables[0], tables[0].share)]
     one, two = tables
-    _, first, second = np.intersect1d(one.unit, two.unit, assume_unique=False, return_indices=True)
-    same = (one.parcel[first] == two.parcel[second]) & (one.stratum[first] == two.stratum[second])
-    first, second = first[same], second[same]
+    # a cluster may lie in several parcels, and is a unit in each
+    keys = [pd.MultiIndex.from_arrays([table.unit, table.parcel, table.stratum]) for table in tables]
+    at = keys[1].get_indexer(keys[0])
+    first = np.flatnonzero(at >= 0)
+    second = at[first]
     both = one.used[first] & two.used[second]
     change = np.where(both, two.value[second] - one.value[first], 0.0)
     repeated = Layer(

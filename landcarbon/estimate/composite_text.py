@@ -102,7 +102,7 @@ def composite_findings(
     told = [_summary(composed, places, survey, table)]
     told += [_model_finding(composed, pools, survey, table)]
     told += [_not_benchmarked(composed, places, group, survey, table)]
-    told += [_scaled(composed, places, pools, survey, table)]
+    told += [_scaled(composed, pools, survey, table)]
     told += [_dropped(composed, survey, table)]
     return join_findings(told)
 
@@ -287,40 +287,38 @@ def _model_finding(composed: Composed, pools: list[str], survey: str, table: str
         for name, pool in zip(pools, composed.pools, strict=True)
         if any(m.fit.method == "adjusted REML" for m in pool.models)
     ]
-    found = []
-    if bound:
-        found.append(
+    cases = (
+        (
+            bound,
+            "too few parcels for a model",
+            f"Too few parcels have plots to tell how much parcels of a stratum differ in {name_list(bound)}: it is "
+            "taken that they differ as much as single plots do, which overstates.",
+            "Measure plots in more parcels, or join strata.",
+        ),
+        (
+            zero,
+            "parcels do not differ",
+            f"Parcels of a stratum differ no more in {name_list(zero)} than the error of their plots explains. The "
+            "variance between them is taken from the adjusted likelihood, which is never zero.",
+            "Nothing; the figures lean on the strata.",
+        ),
+    )
+    return join_findings(
+        [
             make_findings(
-                "too few parcels for a model",
+                rule,
                 severity="note",
                 table=table,
                 column="parcel",
-                value=name_list(bound),
+                value=name_list(names),
                 survey=survey,
-                message=(
-                    f"Too few parcels have plots to tell how much parcels of a stratum differ in {name_list(bound)}: "
-                    "it is taken that they differ as much as single plots do, which overstates."
-                ),
-                remedy="Measure plots in more parcels, or join strata.",
+                message=message,
+                remedy=remedy,
             )
-        )
-    if zero:
-        found.append(
-            make_findings(
-                "parcels do not differ",
-                severity="note",
-                table=table,
-                column="parcel",
-                value=name_list(zero),
-                survey=survey,
-                message=(
-                    f"Parcels of a stratum differ no more in {name_list(zero)} than the error of their plots explains. "
-                    "The variance between them is taken from the adjusted likelihood, which is never zero."
-                ),
-                remedy="Nothing; the figures lean on the strata.",
-            )
-        )
-    return join_findings(found)
+            for names, rule, message, remedy in cases
+            if names
+        ]
+    )
 
 
 def _not_benchmarked(composed: Composed, places: Places, group: np.ndarray, survey: str, table: str) -> pd.DataFrame:
@@ -341,7 +339,7 @@ def _not_benchmarked(composed: Composed, places: Places, group: np.ndarray, surv
     )
 
 
-def _scaled(composed: Composed, places: Places, pools: list[str], survey: str, table: str) -> pd.DataFrame:
+def _scaled(composed: Composed, pools: list[str], survey: str, table: str) -> pd.DataFrame:
     ratio, raised = composed.made.how == SCALED, composed.raised
     if not ratio.any() and not raised.any():
         return empty_findings()

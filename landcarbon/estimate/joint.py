@@ -25,7 +25,7 @@ MOST_SETS = 128  # sets of columns told apart; plots with rarer ones are bounded
 
 @dataclass(frozen=True)
 class SumVariance:
-    """Variance of sums by domain; every array has shape (domains,).
+    """Variance of sums by domain; every array has shape (domains,), or (domains, parts) of several sums at once.
 
     Attributes
     ----------

@@ -11,12 +11,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike
 
+from landcarbon.constants import M2_PER_HECTARE
 from landcarbon.errors import UserError
 
 __all__ = ["MapAreas", "adjusted_areas", "area_by_grid", "area_by_proportion"]
 
 MIN_POINTS = 2  # a variance needs two observations
-M2_PER_HA = 1e4
 
 
 @dataclass(frozen=True)
@@ -109,7 +109,7 @@ def adjusted_areas(matrix: ArrayLike, mapped_area: ArrayLike) -> MapAreas:
 
 def _matrix(matrix: ArrayLike, mapped_area: ArrayLike) -> tuple[np.ndarray, np.ndarray]:
     counts, mapped = np.asarray(matrix, dtype=float), np.asarray(mapped_area, dtype=float)
-    if counts.ndim != MIN_POINTS or counts.shape[0] != counts.shape[1] or mapped.shape != counts.shape[:1]:
+    if counts.ndim != 2 or counts.shape[0] != counts.shape[1] or mapped.shape != counts.shape[:1]:
         raise UserError(
             f"an error matrix of shape {counts.shape} with {mapped.size} mapped areas",
             remedy="Give as many rows as columns, in the same order, and one mapped area per row.",
@@ -175,4 +175,4 @@ def area_by_grid(points: ArrayLike, spacing_m: float) -> np.ndarray:
     .. [1] IPCC (2006). 2006 IPCC Guidelines for National Greenhouse Gas Inventories, volume 4, chapter 3, annex 3A.3
        (direct estimation of area).
     """
-    return np.asarray(points, dtype=float) * spacing_m**2 / M2_PER_HA
+    return np.asarray(points, dtype=float) * spacing_m**2 / M2_PER_HECTARE

@@ -25,7 +25,6 @@ class Moved:
 
     first: np.ndarray
     second: np.ndarray
-    strata: np.ndarray
 
     def domains(
         self, samples: tuple[Sample, Sample], domains: tuple[np.ndarray, np.ndarray], number: int
@@ -39,12 +38,11 @@ class Moved:
 
 
 def find_moved(samples: tuple[Sample, Sample], domains: tuple[np.ndarray, np.ndarray]) -> Moved:
-    """Find the plots that changed their stratum or domain; ``strata`` says which changed their stratum."""
+    """Find the plots that changed their stratum or domain."""
     one, two = samples
     _, first, second = np.intersect1d(one.plot, two.plot, assume_unique=True, return_indices=True)
-    strata = one.stratum[first] != two.stratum[second]
-    changed = strata | (domains[0][first] != domains[1][second])
-    return Moved(first[changed], second[changed], strata[changed])
+    changed = (one.stratum[first] != two.stratum[second]) | (domains[0][first] != domains[1][second])
+    return Moved(first[changed], second[changed])
 
 
 def moved_variance(

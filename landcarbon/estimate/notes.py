@@ -166,7 +166,8 @@ def few_plots_in_parcels(
     if not bad.any():
         return empty_findings()
     names = [units.parcels[unit] for unit in np.flatnonzero(bad)]
-    area = float(np.nansum(units.parcel_area_ha[bad]))
+    area = float(units.parcel_area_ha[bad].sum())
+    size = f" ({area:,.2f} ha)" if np.isfinite(area) else ""
     why = "fewer than two plots" + (" at one of the dates" if table == "change" else "")
     if not np.isfinite(units.stratum_area_ha).all():
         why += ", or several strata of unknown area"
@@ -178,7 +179,7 @@ def few_plots_in_parcels(
         value=str(len(names)),
         survey=survey,
         message=(
-            f"{len(names)} of {len(units.parcels)} parcels ({area:,.2f} ha) get no figure of their own ({why}): "
+            f"{len(names)} of {len(units.parcels)} parcels{size} get no figure of their own ({why}): "
             f"{name_list(names)}. Their plots still count in their stratum and in the inventory."
         ),
         remedy="Read these parcels from their stratum, or measure more plots in them.",

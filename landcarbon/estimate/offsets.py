@@ -9,7 +9,7 @@ import pandas as pd
 
 from landcarbon.constants import CARBON_TO_CO2
 from landcarbon.estimate.assist import Assisted
-from landcarbon.estimate.interval import limits
+from landcarbon.estimate.interval import df_of_interval, limits, t_quantile
 
 __all__ = ["add_change_offsets", "add_offsets", "raise_trend"]
 
@@ -232,7 +232,7 @@ def _groups(table: pd.DataFrame, dates: list[str]) -> list[pd.Series]:
 
 def _shift_of_all(table: pd.DataFrame, shift: pd.Series, dates: list[str]) -> pd.Series:
     """Density to add to each row: that of ``all`` is the sum over the pools that have a figure in the unit."""
-    counts = (table["pool"] != "all") & table.iloc[:, _figure(table)].notna()
+    counts = (table["pool"] != "all") & _figure(table).notna()
     area = table["area_ha"].where(table["area_ha"].notna(), 1.0)
     weighed = (shift.fillna(0.0) * area).where(counts, 0.0)
     added = weighed.groupby(_groups(table, dates), sort=False).transform("sum")
@@ -241,26 +241,23 @@ def _shift_of_all(table: pd.DataFrame, shift: pd.Series, dates: list[str]) -> pd
 
 def _worst_of_all(table: pd.DataFrame, values: pd.Series, dates: list[str], how: str) -> pd.Series:
     """Give ``all`` the largest (or smallest) value of the pools of the unit; NaN where none is assisted."""
-    counted = values.where(table.iloc[:, _figure(table)].notna())
+    counted = values.where(_figure(table).notna())
     grouped = counted.groupby(_groups(table, dates), sort=False)
     of_all = grouped.transform("max") if how == "max" else grouped.transform("min")
     return values.where(table["pool"] != "all", of_all)
 
 
-def _figure(table: pd.DataFrame) -> int:
-    name = "density_t_c_ha" if "density_t_c_ha" in table else "change_t_c"
-    return list(table.columns).index(name)
+def _figure(table: pd.DataFrame) -> pd.Series:
+    return table["density_t_c_ha"] if "density_t_c_ha" in table else table["change_t_c"]
 
 
 def _wider_t(change: pd.DataFrame, share: pd.Series, confidence: float) -> np.ndarray:
     """Ratio of the quantiles of Student's t with fewer and with all degrees of freedom, told from the interval."""
-    from scipy.special import stdtridf, stdtrit  # heavy; the package must import without it
-
-    probability = 0.5 + 0.5 * confidence
+    half = ((change["change_high"] - change["change_low"]) / 2.0).to_numpy(dtype=float)
+    se = change["change_se"].to_numpy(dtype=float)
+    free = df_of_interval(half, se, confidence) * share.to_numpy(dtype=float)
     with np.errstate(divide="ignore", invalid="ignore"):
-        quantile = ((change["change_high"] - change["change_low"]) / 2.0 / change["change_se"]).to_numpy(dtype=float)
-        free = stdtridf(probability, quantile)
-        ratio = stdtrit(np.maximum(free * share.to_numpy(dtype=float), 1.0), probability) / quantile
+        ratio = t_quantile(np.maximum(free, 1.0), 0.5 + 0.5 * confidence) / (half / se)
     return np.where(np.isfinite(ratio) & (ratio > 1.0), ratio, 1.0)
 
 

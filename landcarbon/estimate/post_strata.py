@@ -9,7 +9,6 @@ have been, and speaks of a design still to be drawn. Over all samples the three 
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -22,7 +21,7 @@ from landcarbon.estimate.notes import name_list
 from landcarbon.estimate.ratio import MIN_PLOTS
 from landcarbon.findings import empty_findings, join_findings, make_findings
 
-__all__ = ["FORMS", "PostStratified", "class_rasters", "collapse_classes", "post_stratified_mean", "stated_classes"]
+__all__ = ["FORMS", "PostStratified", "class_rasters", "collapse_classes", "post_stratified_mean"]
 
 FORMS = ("conditional", "linearised", "unconditional")
 
@@ -234,79 +233,6 @@ def class_rasters(
         pd.concat(values, ignore_index=True) if values else empty_values,
         pd.concat(means, ignore_index=True) if means else empty_means,
         join_findings(found),
-    )
-
-
-def stated_classes(
-    plot_parts: pd.DataFrame, areas: Mapping[str, float], strata: pd.DataFrame, *, column: str = "post_stratum"
-) -> tuple[pd.DataFrame, pd.DataFrame, pd.DataFrame]:
-    """Prepare classes that a column of the plots names, with areas stated for the whole inventory.
-
-    Parameters
-    ----------
-    plot_parts : DataFrame
-        survey, plot, stratum, inside and the column of classes.
-    areas : mapping
-        Area of each class [ha].
-    strata : DataFrame
-        stratum.
-    column : str
-        Column of ``plot_parts``.
-
-    Returns
-    -------
-    plot_classes, class_areas : DataFrame
-        As ``class_rasters`` takes them; empty where the classes cannot serve.
-    findings : DataFrame
-        Classes that lie in several strata have no known area in any one of them: post-stratification is not made.
-
-    Raises
-    ------
-    UserError
-        If plots name a class without area.
-    """
-    given = plot_parts[plot_parts["inside"].to_numpy(dtype=bool) & plot_parts[column].notna()]
-    given = given[given[column].astype("str") != ""]
-    plots = pd.DataFrame({key: given[key].astype("str") for key in ("survey", "plot", "stratum")})
-    plots = plots.assign(**{"class": given[column].astype("str")})
-    unknown = sorted(set(plots["class"]) - {str(name) for name in areas})
-    if unknown:
-        raise UserError(
-            f"plots name the classes {name_list(unknown)}, of which no area is stated",
-            where="[post_strata] areas",
-            remedy="State the area of every class.",
-        )
-    homes = plots.drop_duplicates(["class", "stratum"])
-    labels = [str(name) for name in strata["stratum"]]
-    known = dict.fromkeys(areas, labels[0]) if len(labels) == 1 else {}
-    split = sorted(set(homes["class"][homes["class"].duplicated()])) if len(labels) > 1 else []
-    lost = sorted(set(map(str, areas)) - set(homes["class"])) if len(labels) > 1 else []
-    if split or lost:
-        return plots[:0], pd.DataFrame(columns=["survey", "by", "unit", "class", "area_ha"]), _split(split, lost)
-    known |= dict(zip(homes["class"], homes["stratum"], strict=True))
-    table = pd.DataFrame(
-        {
-            "by": "stratum",
-            "unit": [known[name] for name in areas],
-            "class": list(areas),
-            "area_ha": list(areas.values()),
-        }
-    )
-    surveys = pd.DataFrame({"survey": plots["survey"].unique()})
-    return plots.drop(columns="stratum"), surveys.merge(table, how="cross"), empty_findings()
-
-
-def _split(split: list[str], lost: list[str]) -> pd.DataFrame:
-    told = [f"classes {name_list(split)} lie in several strata"] if split else []
-    told += [f"no plot tells the stratum of classes {name_list(lost)}"] if lost else []
-    return make_findings(
-        "class areas by stratum unknown",
-        severity="warning",
-        table="estimate",
-        column="post_strata",
-        value=name_list([*split, *lost]),
-        message=f"Post-stratification is not made: {'; '.join(told)}, and areas are stated for the whole only.",
-        remedy="Use classes that lie in one stratum each, or give the map of the classes as a raster.",
     )
 
 

@@ -14,6 +14,7 @@ import numpy as np
 
 from landcarbon.errors import UserError
 from landcarbon.estimate.groups import group_sum
+from landcarbon.estimate.ratio import MIN_PLOTS
 
 __all__ = [
     "Regression",
@@ -280,7 +281,7 @@ def stratified_variance(parts: np.ndarray, stratum: np.ndarray, sampled: np.ndar
     """
     strata = int(stratum.max()) + 1
     plots = np.bincount(stratum, minlength=strata).astype(float)
-    if (plots[np.unique(stratum)] < 2).any():
+    if (plots[np.unique(stratum)] < MIN_PLOTS).any():
         raise UserError(
             "a stratum has fewer than two plots", where="regression estimator", remedy="Merge it with another."
         )

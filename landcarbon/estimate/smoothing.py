@@ -18,7 +18,6 @@ from landcarbon.estimate.groups import group_sum
 __all__ = [
     "Layer",
     "UnitVariance",
-    "correlations",
     "parcel_variance",
     "power_of_mean",
     "rule",
@@ -107,7 +106,8 @@ class UnitVariance:
     df : ndarray
         Degrees of freedom ``variance`` rests on; the last row the smallest; shape (H + 1, K).
     correlation : ndarray
-        Between columns, within strata; shape (K, K).
+        Between columns, within strata; shape (K, K); positive semi-definite. Pairs with too few plots in common are
+        taken as fully correlated.
     within : ndarray of bool
         Whether plots were compared within parcels; else about the mean of their stratum; shape (K,).
     power : ndarray
@@ -162,14 +162,6 @@ def unit_variance(layer: Layer) -> UnitVariance:
         power=power,
         function=_with_largest(function),
     )
-
-
-def correlations(layer: Layer) -> np.ndarray:
-    """Correlations of columns between plots of a stratum (within parcels, where enough plots share one).
-
-    Pairs with too few plots in common are taken as fully correlated. The matrix is positive semi-definite.
-    """
-    return unit_variance(layer).correlation
 
 
 def power_of_mean(squares: np.ndarray, df: np.ndarray, level: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -340,7 +332,7 @@ def _correlation(layer: Layer, deviation: np.ndarray, variance: np.ndarray, df: 
     with np.errstate(divide="ignore", invalid="ignore"):
         matrix = cross / np.sqrt(squares * squares.T)
         free = number * np.sqrt(np.outer(df / counts, df / counts))  # plots less means, as far as they share plots
-    told = np.isfinite(matrix) & (free >= rule("pair_df") - _SMALL)
+    told = np.isfinite(matrix) & (free >= rule("pair_df"))
     matrix = np.where(told, np.clip(matrix, -1.0, 1.0), 1.0)
     np.fill_diagonal(matrix, 1.0)
     return _semi_definite(0.5 * (matrix + matrix.T))

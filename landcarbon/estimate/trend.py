@@ -261,7 +261,8 @@ def _not_estimable(level: _Level, names: list[str]) -> pd.DataFrame:
     if not lacking.any():
         return empty_findings()
     units = [level.labels[unit] for unit in np.flatnonzero(lacking)]
-    area = float(np.nansum(np.where(lacking, level.area_ha[:, -1], 0.0)))
+    area = float(level.area_ha[lacking, -1].sum())
+    size = f" ({area:,.2f} ha)" if np.isfinite(area) else ""
     return make_findings(
         "unit without a trend",
         severity="note" if level.by == "parcel" else "warning",
@@ -270,7 +271,7 @@ def _not_estimable(level: _Level, names: list[str]) -> pd.DataFrame:
         value=name_list(units),
         survey=names[-1],
         message=(
-            f"{len(units)} of {len(level.labels)} {level.by} row(s) ({area:,.2f} ha) have no trend, for want of "
+            f"{len(units)} of {len(level.labels)} {level.by} row(s){size} have no trend, for want of "
             f"{FEWEST} surveys with two dated plots each: {name_list(units)}."
             + (" They are missing from the trend of the inventory." if level.by == "stratum" else "")
         ),

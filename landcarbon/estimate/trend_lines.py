@@ -22,6 +22,7 @@ __all__ = ["FEWEST", "Line", "TrendPlan", "line_weights", "misfit", "plan_trend"
 
 FEWEST = 3  # surveys that a trend needs
 _ROUNDING = 1e-9
+_RANK = 1e-10  # eigenvalues below this share of the largest are taken as zero
 _ROOM = 6.0  # degrees of freedom for each estimated weight below which ordinary least squares serves
 
 
@@ -164,10 +165,11 @@ def misfit(
     root, vectors = np.linalg.eigh(free @ np.nan_to_num(covariance) @ free)
     largest = root.max(axis=1, initial=0.0)
     estimated = there.sum(axis=1) - 2
-    regular = (root > 1e-10 * largest[:, None]).sum(axis=1) == estimated
+    told = root > _RANK * largest[:, None]
+    regular = told.sum(axis=1) == estimated
     along = np.einsum("dts,dt->ds", vectors, np.einsum("dst,dt->ds", free, np.where(there, mean, 0.0)))
     with np.errstate(divide="ignore", invalid="ignore"):
-        quadratic = np.where(root > 1e-10 * largest[:, None], along**2 / root, 0.0).sum(axis=1)
+        quadratic = np.where(told, along**2 / root, 0.0).sum(axis=1)
         rest = df - estimated + 1.0
         share = fdtrc(estimated, rest, quadratic * rest / (df * estimated))
     return np.where((estimated > 0) & regular & (df >= _ROOM * estimated) & (largest > 0), share, np.nan)

@@ -385,7 +385,7 @@ def _told(
             hit = np.flatnonzero(mine & rows)
             if not len(hit):
                 continue
-            days = np.nan_to_num(shift[hit])
+            days = shift[hit]
             words = {
                 "count": len(hit),
                 "total": int(mine.sum()),

@@ -9,13 +9,12 @@ from pathlib import Path
 
 import numpy as np
 import rasterio
-from rasterio import Affine
 from rasterio.errors import RasterioError
 from rasterio.windows import Window as Block
 
 from landcarbon.errors import ResultsError
 from landcarbon.raster.grid import Grid, Window
-from landcarbon.read.raster_files import CACHE_BYTES
+from landcarbon.read.raster_files import CACHE_BYTES, grid_transform
 
 __all__ = ["TiffLabel", "read_grid", "read_tiff", "write_tiff"]
 
@@ -77,7 +76,7 @@ def write_tiff(
         "width": grid.columns,
         "height": grid.rows,
         "crs": crs,
-        "transform": Affine(grid.cell_x, 0.0, grid.left, 0.0, -grid.cell_y, grid.top),
+        "transform": grid_transform(grid),
         "nodata": np.nan,
         "tiled": True,
         "blockxsize": _TILE,

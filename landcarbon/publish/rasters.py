@@ -73,19 +73,24 @@ def write_rasters(
     found = []
     own = stocks[(stocks["by"] == "parcel") & (stocks["pool"] == pool)]
     for survey, rows in own.groupby("survey", sort=False, observed=True):
-        figure = names.map(rows.set_index(rows["unit"].astype("str"))["stock_t_c"]).to_numpy(dtype="float64")
+        figure = _figures(names, rows, "stock_t_c")
         if np.isfinite(figure).any():
             paths[str(survey)] = _path(folder, "density", [str(survey)], paths.values())
             found.append(write_density(paths[str(survey)], request, grid, str(survey), figure))
     written = list(paths.values())
     pairs = change[(change["by"] == "parcel") & (change["pool"] == pool)]
     for (since, until), rows in pairs.groupby(["since", "until"], sort=False, observed=True):
-        figure = names.map(rows.set_index(rows["unit"].astype("str"))["change_t_c"]).to_numpy(dtype="float64")
+        figure = _figures(names, rows, "change_t_c")
         if np.isfinite(figure).any() and str(since) in paths and str(until) in paths:
             written.append(_path(folder, "change", [str(since), str(until)], written))
             dates, maps = (str(since), str(until)), (paths[str(since)], paths[str(until)])
             found.append(write_change(written[-1], request, grid, dates, figure, maps))
     return written, join_findings(found)
+
+
+def _figures(names: pd.Series, rows: pd.DataFrame, column: str) -> np.ndarray:
+    """Return the figure of each parcel named; NaN without one."""
+    return names.map(rows.set_index(rows["unit"].astype("str"))[column]).to_numpy(dtype="float64")
 
 
 def _path(folder: Path, what: str, labels: Iterable[str], taken: Iterable[Path]) -> Path:

@@ -12,7 +12,9 @@ from landcarbon.inputs import Inputs
 from landcarbon.inventory import Settings
 from landcarbon.inventory.units import convert
 from landcarbon.read.footprints import Footprint
-from landcarbon.read.rasters import RasterFile, RasterPlace, plot_values, unit_means
+from landcarbon.read.raster_files import find_raster
+from landcarbon.read.rasters import RasterFile, RasterPlace, plot_values, raster_names, unit_means
+from landcarbon.read.source import FileLog
 
 __all__ = ["Auxiliary", "PostClasses", "read_auxiliary", "read_post_strata"]
 
@@ -33,6 +35,8 @@ class Auxiliary:
         survey, by, unit, a column per raster, valid_ha, share_covered.
     findings : DataFrame
         What was noted.
+    sources : DataFrame
+        The files with their checksums, as ``Inputs.files``.
     """
 
     files: tuple[RasterFile, ...]
@@ -40,11 +44,12 @@ class Auxiliary:
     plot_values: pd.DataFrame
     unit_means: pd.DataFrame
     findings: pd.DataFrame
+    sources: pd.DataFrame
 
     def covariates(self) -> pd.DataFrame:
         """Means of the rasters by survey and parcel."""
         rows = self.unit_means[self.unit_means["by"] == "parcel"]
-        names = list(dict.fromkeys(file.name for file in self.files))
+        names = raster_names(self.files)
         return rows.rename(columns={"unit": "parcel"})[["survey", "parcel", *names]].reset_index(drop=True)
 
 
@@ -98,7 +103,7 @@ def read_auxiliary(settings: Settings, inputs: Inputs) -> Auxiliary | None:
     means, told = unit_means(
         files, surveys, inputs.parcels, place, inventory=settings.inventory.name, strata=inputs.strata
     )
-    return Auxiliary(files, place, values, means, join_findings([found, told]))
+    return Auxiliary(files, place, values, means, join_findings([found, told]), _sources(files, place))
 
 
 def read_post_strata(settings: Settings, inputs: Inputs) -> PostClasses | None:
@@ -166,6 +171,13 @@ def _files(name: str, settings: Settings, surveys: list[str]) -> list[RasterFile
             remedy=f"Surveys are: {', '.join(surveys)}.",
         )
     return [RasterFile(name, survey, path, raster.band, raster.crs or "") for survey, path in raster.files.items()]
+
+
+def _sources(files: tuple[RasterFile, ...], place: RasterPlace) -> pd.DataFrame:
+    log = FileLog()
+    for file in files:
+        log.add(find_raster(file, place.folder, allow_outside=place.allow_outside), 0, columns=file.name)
+    return log.frame()
 
 
 def _footprint(settings: Settings) -> Footprint:

@@ -11,6 +11,7 @@ import pyarrow as pa
 import shapely
 from pyproj import CRS
 
+from landcarbon.constants import M2_PER_HECTARE
 from landcarbon.errors import InputFileError
 from landcarbon.findings import join_findings
 from landcarbon.inventory.models import Settings
@@ -25,7 +26,6 @@ from landcarbon.read.vectors import geodesic_area_m2, mend_polygons, read_vector
 
 __all__ = ["Boundaries", "ParcelTable", "locate", "read_parcels", "settle_boundaries"]
 
-_M2_PER_HA = 10_000.0
 _ALL = "all"
 _UNASSIGNED = "unassigned"
 _PERIOD = ["valid_from", "valid_to"]
@@ -134,7 +134,7 @@ def read_parcels(settings: Settings, log: FileLog) -> ParcelTable | None:
     if table.empty:
         raise InputFileError("no parcel has an area", where=source.name)
     findings += _planar(planar, area, source.name)
-    table["measured_ha"] = area / _M2_PER_HA
+    table["measured_ha"] = area / M2_PER_HECTARE
     stated = table["area_ha"].notna() & (table["area_ha"] > 0)
     findings += _stated(table, stated)
     table["area_ha"] = table["area_ha"].where(stated, table["measured_ha"])
@@ -245,8 +245,8 @@ def _mended(table: pd.DataFrame, mended: np.ndarray, given: gpd.GeoSeries, area:
     words = pd.DataFrame(
         {
             "reason": shapely.is_valid_reason(shapes),
-            "before": [f"{value / _M2_PER_HA:.4f}" for value in geodesic_area_m2(given[mended])],
-            "after": [f"{value / _M2_PER_HA:.4f}" for value in area[mended]],
+            "before": [f"{value / M2_PER_HECTARE:.4f}" for value in geodesic_area_m2(given[mended])],
+            "after": [f"{value / M2_PER_HECTARE:.4f}" for value in area[mended]],
         }
     )
     return [
@@ -300,7 +300,7 @@ def _overlaps(table: pd.DataFrame, planar: gpd.GeoSeries) -> list[pd.DataFrame]:
     large = large[np.lexsort((second[large], first[large]))]
     names = table["parcel"].to_numpy(dtype=object)
     value = [f"{names[first[k]]} / {names[second[k]]}" for k in large]
-    words = pd.DataFrame({"area": [f"{area[k] / _M2_PER_HA:.4f}" for k in large]})
+    words = pd.DataFrame({"area": [f"{area[k] / M2_PER_HECTARE:.4f}" for k in large]})
     return [note("overlapping parcels", table.iloc[first[large]], value=value, fill=words)]
 
 
@@ -322,10 +322,10 @@ def _gaps(planar: gpd.GeoSeries, file: str) -> list[pd.DataFrame]:
     parts = []
     for k in kept[:listed]:
         x, y = shapely.get_coordinates(shapely.point_on_surface(holes[k]))[0]
-        words = {"area": f"{area[k] / _M2_PER_HA:.4f}", "place": f"{x:.0f}, {y:.0f}"}
+        words = {"area": f"{area[k] / M2_PER_HECTARE:.4f}", "place": f"{x:.0f}, {y:.0f}"}
         parts.append(note("gap between parcels", file=file, value=words["place"], fill=words))
     if len(kept) > listed:
-        rest = {"count": len(kept) - listed, "area": f"{area[kept[listed:]].sum() / _M2_PER_HA:.4f}"}
+        rest = {"count": len(kept) - listed, "area": f"{area[kept[listed:]].sum() / M2_PER_HECTARE:.4f}"}
         parts.append(note("further gaps between parcels", file=file, fill=rest))
     return parts
 

@@ -30,7 +30,16 @@ from landcarbon.raster.limits import raster_limit
 from landcarbon.read.crs import parse_crs
 from landcarbon.read.source import Source, find_source
 
-__all__ = ["CACHE_BYTES", "WINDOW_COLUMNS", "WINDOW_ROWS", "OpenRaster", "RasterFile", "find_raster", "open_raster"]
+__all__ = [
+    "CACHE_BYTES",
+    "WINDOW_COLUMNS",
+    "WINDOW_ROWS",
+    "OpenRaster",
+    "RasterFile",
+    "find_raster",
+    "grid_transform",
+    "open_raster",
+]
 
 # Windows are wide and low, so that files stored in rows are unpacked once; a multiple of the tiles written.
 WINDOW_ROWS = 256
@@ -103,11 +112,6 @@ class OpenRaster:
     _crs: tuple[CRS, CRS]
     _method: Resampling
 
-    @property
-    def grid_window(self) -> Window:
-        """The whole grid as one window, for small ones."""
-        return Window(0, 0, self.grid.rows, self.grid.columns)
-
     def read(self, window: Window) -> np.ndarray:
         """Return the values of a window as float64, shape (rows, columns); NaN where there is none.
 
@@ -160,7 +164,7 @@ class OpenRaster:
             src_transform=transform,
             src_crs=own.to_wkt(),
             src_nodata=np.nan,
-            dst_transform=_transform(target),
+            dst_transform=grid_transform(target),
             dst_crs=wanted.to_wkt(),
             dst_nodata=np.nan,
             resampling=self._method,
@@ -398,7 +402,8 @@ def _halves(target: Grid) -> tuple[Grid, Grid]:
     return target.part(Window(0, 0, half, columns)), target.part(Window(half, 0, rows - half, columns))
 
 
-def _transform(grid: Grid) -> Affine:
+def grid_transform(grid: Grid) -> Affine:
+    """Return what takes columns and rows of a grid to coordinates."""
     return Affine(grid.cell_x, 0.0, grid.left, 0.0, -grid.cell_y, grid.top)
 
 

@@ -15,14 +15,14 @@ from landcarbon.inventory.models import Settings
 
 Moment = pd.Timestamp | NaTType
 
-MIDDLE_OF_YEAR = (7, 1)  # month and day that stand for a year
+_MIDDLE_OF_YEAR = (7, 1)  # month and day that stand for a year
 
 __all__ = [
-    "MIDDLE_OF_YEAR",
     "Assigned",
     "assign_surveys",
     "day_text",
     "files_of",
+    "label_day",
     "label_year",
     "order_surveys",
     "survey_by_date",
@@ -190,6 +190,12 @@ def label_year(name: str) -> int | None:
     return int(years[0]) if len(set(years)) == 1 else None
 
 
+def label_day(name: str) -> Moment:
+    """Return the middle of the year named in a survey label; NaT without one."""
+    year = label_year(name)
+    return pd.Timestamp(year, *_MIDDLE_OF_YEAR) if year else pd.NaT
+
+
 def order_surveys(settings: Settings, medians: dict[str, pd.Timestamp]) -> pd.DataFrame:
     """Return the surveys in the order of time.
 
@@ -225,5 +231,4 @@ def _moment(name: str, since: Moment, until: Moment, median: Moment | None) -> M
         return until
     if median is not None and not pd.isna(median):
         return median
-    year = label_year(name)
-    return pd.Timestamp(year, *MIDDLE_OF_YEAR) if year else pd.NaT
+    return label_day(name)

@@ -12,7 +12,7 @@ import pandas as pd
 
 from landcarbon.errors import InputFileError
 from landcarbon.read.notes import note
-from landcarbon.read.surveys import MIDDLE_OF_YEAR, label_year
+from landcarbon.read.surveys import Moment, label_day
 
 __all__ = ["at_date", "by_survey", "check_periods", "gaps_in_time", "has_periods", "survey_days"]
 
@@ -105,20 +105,15 @@ def survey_days(surveys: pd.DataFrame, visits: pd.DataFrame) -> pd.DataFrame:
     dated = visits[visits["visited"].to_numpy(dtype=bool) & visits["date"].notna().to_numpy()]
     median = dated["date"].groupby(dated["survey"].astype("str")).median()
     days = [
-        _first_known(median.get(name), since + (until - since) / 2, since, until, _of_label(name))
+        _first_known(median.get(name), since + (until - since) / 2, since, until, label_day(name))
         for name, since, until in zip(surveys["survey"], surveys["since"], surveys["until"], strict=True)
     ]
     column = pd.Series(days, index=surveys.index, dtype="datetime64[s]").dt.floor("D")
     return pd.DataFrame({"survey": surveys["survey"].astype("str"), "date": column})
 
 
-def _first_known(*moments: pd.Timestamp | None) -> pd.Timestamp | None:
-    return next((moment for moment in moments if moment is not None and not pd.isna(moment)), None)
-
-
-def _of_label(name: str) -> pd.Timestamp | None:
-    year = label_year(name)
-    return pd.Timestamp(year, *MIDDLE_OF_YEAR) if year else None
+def _first_known(*moments: Moment | None) -> pd.Timestamp | None:
+    return next((moment for moment in moments if isinstance(moment, pd.Timestamp)), None)
 
 
 def check_periods(parcels: pd.DataFrame) -> None:

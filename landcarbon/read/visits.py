@@ -15,7 +15,7 @@ from landcarbon.inventory.nearest import suggestion
 from landcarbon.read.mapping import Mapped, left_blank, not_readable, read_mapped
 from landcarbon.read.notes import note
 from landcarbon.read.source import FileLog, find_source
-from landcarbon.read.surveys import MIDDLE_OF_YEAR, files_of, label_year, survey_by_date, survey_by_label
+from landcarbon.read.surveys import files_of, label_day, survey_by_date, survey_by_label
 
 __all__ = ["VisitRows", "field_rows", "make_visits", "read_visits"]
 
@@ -263,8 +263,7 @@ def _dates(frame: pd.DataFrame, surveys: pd.DataFrame) -> list[pd.DataFrame]:
     """Fill in dates: the visit's own, the median of its trees, the middle of the window, the year of the label."""
     windows = surveys.set_index("survey")
     middle = windows["since"] + (windows["until"] - windows["since"]) / 2
-    years = {name: label_year(name) for name in surveys["survey"]}
-    labels = {n: pd.Timestamp(y, *MIDDLE_OF_YEAR) if y else pd.NaT for n, y in years.items()}
+    labels = {name: label_day(name) for name in surveys["survey"]}
     frame["date"] = pd.to_datetime(frame["date"]).astype("datetime64[s]")
     frame["date_source"] = np.where(frame["date"].notna(), "visit", "")
     for source, values in (
